@@ -1,0 +1,6 @@
+//! evensky
+pub mod beam;
+pub mod fits;
+pub mod observation;
+pub mod response;
+pub mod sky;

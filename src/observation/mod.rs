@@ -1,0 +1,21 @@
+//! Calibrated visibilities of one pointing: stations, channels, hands, and rows handed out in blocks.
+//!
+//! Everything here is already in the project's convention: for the pair (p, q) the baseline is r_q − r_p, u, v, w
+//! are metres in the tangent frame of the phase centre, and a weight of 0 means "not used".
+
+mod block;
+mod hand;
+mod memory;
+mod meta;
+mod station;
+mod time;
+
+pub use block::Block;
+pub use hand::Hand;
+pub use memory::MemorySource;
+pub use meta::{BlockSource, Observation, ObservationError};
+pub use station::{Mount, Station};
+pub use time::{ParallacticAngles, baseline_uvw, hour_angle_declination, parallactic_angle};
+
+/// Speed of light in vacuum, m/s (exact, SI).
+pub const SPEED_OF_LIGHT: f64 = 299_792_458.0;

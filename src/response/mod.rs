@@ -1,0 +1,72 @@
+//! The measurement equation and its adjoint, behind one trait.
+//!
+//! For the visibility k of stations p, q, with beam product A_k = g_p g_q*, weight ω_k and Stokes I sky:
+//!
+//! - predict: V_k = Σ_s S_s(ν) A_k(s) exp(−2πi (u l + v m + w (n − 1)))
+//! - adjoint: N(l,m) = Σ_k ω_k Re[A_k* V_k exp(+2πi (u l + v m + w (n − 1)))], W(l,m) = Σ_k ω_k |A_k|²
+//!
+//! Sums run over all parallel hands (or the Stokes I product). Two implementations: [`Exact`], the direct sums in
+//! double precision, and [`Gridded`], fast to a promised relative error. Nothing above this folder knows which it
+//! holds.
+
+use crate::beam::StationBeams;
+use crate::observation::{Block, BlockSource, ObservationError};
+use crate::sky::{Component, ImageGeometry};
+use ndarray::Array2;
+use thiserror::Error;
+
+/// The two sums of the adjoint over the common pixel grid, `[y][x]`.
+#[derive(Debug, Clone)]
+pub struct Sums {
+    /// Numerator N, Jy · Jy⁻².
+    pub numerator: Array2<f64>,
+    /// Normaliser W, Jy⁻².
+    pub normaliser: Array2<f64>,
+}
+
+impl Sums {
+    /// Zero sums over a geometry.
+    pub fn zero(geometry: &ImageGeometry) -> Self {
+        let shape = (geometry.height, geometry.width);
+        Sums { numerator: Array2::zeros(shape), normaliser: Array2::zeros(shape) }
+    }
+}
+
+/// Predicts visibilities of one pointing and sums them back onto the sky. See the module text for the formulas.
+pub trait Response: Send + Sync {
+    /// The common pixel grid.
+    fn geometry(&self) -> &ImageGeometry;
+
+    /// Overwrites the data of `block` (parallel hands and Stokes I) with the model of `sky`; weights stay.
+    ///
+    /// # Errors
+    /// When the sky cannot be predicted from to the promised tolerance.
+    fn predict(&self, sky: &[Component], block: &mut Block) -> Result<(), ResponseError>;
+
+    /// Adds N and W of all blocks of `source` to `sums`.
+    ///
+    /// # Errors
+    /// When the source cannot be read.
+    fn adjoint(&self, source: &mut dyn BlockSource, sums: &mut Sums) -> Result<(), ResponseError>;
+}
+
+/// Why a response could not be made or applied.
+#[derive(Debug, Error)]
+pub enum ResponseError {
+    /// The visibilities could not be read.
+    #[error(transparent)]
+    Observation(#[from] ObservationError),
+    /// The tolerance is beyond reach.
+    #[error("tolerance {asked:e} cannot be kept: the smallest that can is {reachable:e} ({reason})")]
+    Tolerance {
+        /// What was asked for.
+        asked: f64,
+        /// The smallest that works.
+        reachable: f64,
+        /// Why.
+        reason: &'static str,
+    },
+}
+
+#[allow(dead_code)]
+fn _types(_: &StationBeams) {}
