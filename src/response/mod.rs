@@ -9,6 +9,8 @@
 //! double precision, and [`Gridded`], fast to a promised relative error. Nothing above this folder knows which it
 //! holds.
 
+pub mod window;
+
 use crate::beam::StationBeams;
 use crate::observation::{Block, BlockSource, ObservationError};
 use crate::sky::{Component, ImageGeometry};
