@@ -12,6 +12,7 @@
 mod exact;
 pub mod gridded;
 mod rows;
+pub mod window;
 
 pub use exact::Exact;
 pub use gridded::Gridded;

@@ -6,7 +6,7 @@ use super::plan::{Partition, Plan};
 use super::smooth::interpolation;
 use super::terms::Terms;
 use super::transform::Transform;
-use super::vector::{Cell, GridReal, Instructions, LANES, Lane, Sample, Share, accumulate, gather, spread};
+use super::vector::{Cell, GridReal, Instructions, LANES, Lane, Sample, Share, accumulate, double, gather, real, spread};
 use super::{Options, Sums};
 use crate::beam::StationBeams;
 use crate::observation::{Block, BlockSource, Observation};
@@ -273,8 +273,8 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
         let feeds = self.feeds.clone();
         let write = |slot: usize, voltages: &[Vec<Complex64>; 2], count: usize, cells: &mut [Cell<T>]| {
             for (j, value) in voltages[feeds[slot]][..count].iter().enumerate() {
-                cells[j / LANES][j % LANES] = T::from_f64(value.re);
-                cells[j / LANES][j % LANES + LANES] = T::from_f64(value.im);
+                cells[j / LANES][j % LANES] = real(value.re);
+                cells[j / LANES][j % LANES + LANES] = real(value.im);
             }
         };
         self.table(prepared, partition, &partition.kernel, LANES, self.feeds.len(), write, &self.feeds)
@@ -289,7 +289,7 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
                     Power::CrossRe => (voltages[0][j] * voltages[1][j].conj()).re,
                     Power::CrossIm => (voltages[0][j] * voltages[1][j].conj()).im,
                 };
-                cells[j / POWER_LANES][j % POWER_LANES] = T::from_f64(value);
+                cells[j / POWER_LANES][j % POWER_LANES] = real(value);
             }
         };
         self.table(prepared, partition, &partition.power, POWER_LANES, self.powers.len(), write, &self.feeds)
@@ -352,18 +352,18 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
                     let column = first_x + shape.origin.0 as i64;
                     let line = first_y + shape.origin.1 as i64;
                     let cell = line as usize * shape.width + column as usize;
-                    let dw = if plan.layers.bends { T::from_f64(w - layer_w) } else { T::zero() };
+                    let dw = if plan.layers.bends { real(w - layer_w) } else { T::zero() };
                     let mut emit = |feed: usize, value: Complex64| {
                         let slot = self.feeds.iter().position(|&f| f == feed).unwrap_or(0);
                         let sample = Sample {
                             cell: cell as u32,
                             p: table.at(time, local, slot, self.stations, p),
                             q: table.at(time, local, slot, self.stations, q),
-                            fx: T::from_f64(fx),
-                            fy: T::from_f64(fy),
+                            fx: real(fx),
+                            fy: real(fy),
                             dw,
-                            re: T::from_f64(value.re),
-                            im: T::from_f64(value.im),
+                            re: real(value.re),
+                            im: real(value.im),
                         };
                         each(sample, (row, channel, group), turns);
                     };
@@ -401,7 +401,7 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
             .map(|chunk| {
                 let mut bend = [T::zero(); LANES];
                 for (b, point) in bend.iter_mut().zip(chunk) {
-                    *b = T::from_f64(point.bend);
+                    *b = real(point.bend);
                 }
                 bend
             })
@@ -474,7 +474,7 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
                         batch.push(Share {
                             p: table.at(time, local, slot, self.stations, p),
                             q: table.at(time, local, slot, self.stations, q),
-                            weight: T::from_f64(weight),
+                            weight: real(weight),
                         });
                     };
                     match seen {
@@ -498,7 +498,7 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
     /// θ of one term on the patch's pixels, real and imaginary parts (the latter only where it is not 0).
     fn screen(terms: &Terms, index: usize, (px, py): &(Array2<T>, Array2<T>)) -> (Array2<T>, Option<Array2<T>>) {
         let part = |pick: fn(&Complex64) -> f64| -> Option<Array2<T>> {
-            let values = terms.screens[index].mapv(|z| T::from_f64(pick(&z)));
+            let values = terms.screens[index].mapv(|z| real(pick(&z)));
             if terms.screens[index].iter().all(|z| pick(z) == 0.0) {
                 return None;
             }
@@ -513,8 +513,8 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
         let offsets = |n: usize| -> Vec<f64> { (0..n).map(|i| i as f64 + Patch::span(n).0).collect() };
         let (nx, ny) = self.plan.patch.size;
         (
-            interpolation(&terms.nodes_x, &offsets(nx)).mapv(T::from_f64),
-            interpolation(&terms.nodes_y, &offsets(ny)).mapv(T::from_f64),
+            interpolation(&terms.nodes_x, &offsets(nx)).mapv(real),
+            interpolation(&terms.nodes_y, &offsets(ny)).mapv(real),
         )
     }
 
@@ -553,7 +553,7 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
                 if !self.mask[at] {
                     continue;
                 }
-                let z = Complex64::new(sum[at].re.to_f64(), sum[at].im.to_f64());
+                let z = Complex64::new(double(sum[at].re), double(sum[at].im));
                 let value = if self.plan.layers.bends { (z * cis_turns(w * self.bend[at])).re } else { z.re };
                 numerator[[y0 + y, x0 + x]] += value * self.taper.0[x] * self.taper.1[y];
             }
@@ -737,7 +737,7 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
                 let value = flux * self.taper.0[at % nx] * self.taper.1[at / nx];
                 let phase =
                     if self.plan.layers.bends { cis_turns(-w * self.bend[at]) } else { Complex64::ONE };
-                Complex::new(T::from_f64(value * phase.re), T::from_f64(value * phase.im))
+                Complex::new(real(value * phase.re), real(value * phase.im))
             })
             .collect();
         let count = terms.points.len();

@@ -24,6 +24,18 @@ pub(crate) trait GridReal: Real + rustfft::FftNum {
     const SIN: &'static [f64];
 }
 
+/// A number in the grid's precision.
+#[inline(always)]
+pub(crate) fn real<T: GridReal>(value: f64) -> T {
+    <T as Real>::from_f64(value)
+}
+
+/// A grid number in double precision.
+#[inline(always)]
+pub(crate) fn double<T: Real>(value: T) -> f64 {
+    Real::to_f64(value)
+}
+
 // Taylor coefficients (−1)^k (2π)^{2k}/(2k)! and (−1)^k (2π)^{2k+1}/(2k+1)!; the first term left out is at most
 // (π/2)^16/16! = 7e-11 in single, (π/2)^24/24! = 8e-20 in double precision.
 const fn taylor<const N: usize>(odd: bool) -> [f64; N] {
@@ -100,7 +112,7 @@ fn fma<T: Real, const FUSED: bool>(a: T, b: T, c: T) -> T {
 fn polynomial<T: Real, const FUSED: bool>(coefficients: &[f64], x: &[T; LANES]) -> [T; LANES] {
     let mut sum = [T::default(); LANES];
     for &c in coefficients.iter().rev() {
-        let c = T::from_f64(c);
+        let c = <T as Real>::from_f64(c);
         for lane in 0..LANES {
             sum[lane] = fma::<T, FUSED>(sum[lane], x[lane], c);
         }
@@ -209,7 +221,7 @@ fn gather_body<T: GridReal, const W: usize, const FUSED: bool>(
         let (mut re, mut im) = (0.0, 0.0);
         for j in 0..LANES {
             let (mr, mi, vr, vi) =
-                (m[j].to_f64(), m[j + LANES].to_f64(), value[j].to_f64(), value[j + LANES].to_f64());
+                (double(m[j]), double(m[j + LANES]), double(value[j]), double(value[j + LANES]));
             re += mr * vr + mi * vi;
             im += mr * vi - mi * vr;
         }
@@ -246,7 +258,7 @@ fn accumulate_body<T: Real, const FUSED: bool>(
             }
         }
         for (out, sum) in out.iter_mut().zip(&sum) {
-            *out += sum.to_f64();
+            *out += double(*sum);
         }
     }
 }
