@@ -7,6 +7,7 @@ mod block;
 mod hand;
 mod memory;
 mod meta;
+mod schedule;
 mod station;
 mod time;
 
@@ -14,6 +15,7 @@ pub use block::Block;
 pub use hand::Hand;
 pub use memory::MemorySource;
 pub use meta::{BlockSource, Observation, ObservationError};
+pub use schedule::Schedule;
 pub use station::{Mount, Station};
 pub use time::{ParallacticAngles, baseline_uvw, hour_angle_declination, parallactic_angle};
 

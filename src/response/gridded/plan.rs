@@ -22,9 +22,9 @@ use std::time::Instant;
 /// Shares of the tolerance. Errors of different origin add, so the shares sum to at most 1.
 mod share {
     /// Aliasing of the window (largest over the field, both axes).
-    pub const WINDOW: f64 = 0.3;
+    pub const WINDOW: f64 = 0.25;
     /// Difference between any kernel and its terms, w included, relative to the products' root mean square.
-    pub const TERMS: f64 = 0.4;
+    pub const TERMS: f64 = 0.5;
     /// Beam products beyond a patch's edge.
     pub const EDGE: f64 = 0.1;
     /// Curvature left out where w is ignored.
