@@ -28,7 +28,7 @@ const TRAINING_MEMBERS: usize = 1200;
 const CHECK_MEMBERS: usize = 400;
 const CHECK_POINTS: usize = 160;
 /// Rounds of train-and-check at most.
-const ROUNDS: usize = 5;
+const ROUNDS: usize = 7;
 /// More terms than this never pay.
 pub(crate) const MOST_TERMS: usize = 320;
 
@@ -58,18 +58,23 @@ pub(crate) struct TooManyTerms {
 
 impl Terms {
     /// Terms whose largest difference from any member stays below `bound`.
-    pub(crate) fn build(family: &Family, nodes: (usize, usize), bound: f64) -> Result<Terms, TooManyTerms> {
+    pub(crate) fn build(family: &Family, mut nodes: (usize, usize), bound: f64) -> Result<Terms, TooManyTerms> {
         let mut rng = ChaCha8Rng::seed_from_u64(0x7e12);
-        let (nodes_x, nodes_y) = node_positions(family, nodes);
-        let points: Vec<PatchPoint> =
-            nodes_y.iter().flat_map(|&y| nodes_x.iter().map(move |&x| (x, y))).map(|(x, y)| family.point(x, y)).collect();
+        let (mut nodes_x, mut nodes_y) = node_positions(family, nodes);
+        let mut points = node_points(family, &nodes_x, &nodes_y);
         let most = (TRAINING_ENTRIES / points.len()).clamp(24, TRAINING_MEMBERS);
         let mut members = family.training(most, &mut rng);
         // a little below the bound, so that members in between stay below it
         let mut goal = 0.8 * bound;
         let mut reached = f64::INFINITY;
         let mut measured = members.len();
-        for _ in 0..ROUNDS {
+        for round in 0..ROUNDS {
+            if round > 0 && round % 2 == 0 {
+                // what more members did not mend, more nodes may
+                nodes = (nodes.0 + nodes.0.div_ceil(4), nodes.1 + nodes.1.div_ceil(4));
+                (nodes_x, nodes_y) = node_positions(family, nodes);
+                points = node_points(family, &nodes_x, &nodes_y);
+            }
             let mut matrix = family.screens(&members, &points);
             let cross = eliminate(&mut matrix, points.len(), goal, MOST_TERMS);
             if cross.remainder > bound {
@@ -80,9 +85,6 @@ impl Terms {
             measured += fresh.len();
             let (worst, offenders) = terms.check(family, &fresh, bound, &mut rng);
             reached = cross.remainder.max(worst);
-            if std::env::var_os("EVENSKY_TRACE").is_some() {
-                eprintln!("terms {} nodes {nodes:?} goal {goal:e} remainder {:e} worst {worst:e} bound {bound:e} offenders {} half_w {}", cross.rows.len(), cross.remainder, offenders.len(), family.half_w);
-            }
             if worst <= bound {
                 return Ok(Terms { largest: reached, measured_members: measured, ..terms });
             }
@@ -108,7 +110,8 @@ impl Terms {
         let right = DMatrix::from_row_slice(count, n, &rows);
         let solved = square.full_piv_lu().solve(&right).unwrap_or_else(|| DMatrix::zeros(count, n));
         let shape = (nodes_y.len(), nodes_x.len());
-        let screens = (0..count).map(|j| Array2::from_shape_fn(shape, |(y, x)| solved[(j, y * shape.1 + x)])).collect();
+        let screens =
+            (0..count).map(|j| Array2::from_shape_fn(shape, |(y, x)| solved[(j, y * shape.1 + x)])).collect();
         let picked = cross.columns.iter().map(|&column| points[column]).collect();
         Terms { points: picked, screens, nodes_x, nodes_y, largest: cross.remainder, measured_members: 0 }
     }
@@ -134,7 +137,8 @@ impl Terms {
         let targets = family.random_points(CHECK_POINTS, rng);
         let differences = self.differences(family, members, &targets);
         let worst = differences.iter().copied().fold(0.0, f64::max);
-        let offenders = members.iter().zip(&differences).filter(|(_, d)| **d > bound).map(|(m, _)| m.clone()).collect();
+        let offenders =
+            members.iter().zip(&differences).filter(|(_, d)| **d > bound).map(|(m, _)| m.clone()).collect();
         (worst, offenders)
     }
 
@@ -159,8 +163,7 @@ impl Terms {
     pub(crate) fn estimate(family: &Family, nodes: (usize, usize), bound: f64) -> usize {
         let mut rng = ChaCha8Rng::seed_from_u64(0x0e57);
         let (nodes_x, nodes_y) = node_positions(family, (nodes.0.min(18), nodes.1.min(18)));
-        let points: Vec<PatchPoint> =
-            nodes_y.iter().flat_map(|&y| nodes_x.iter().map(move |&x| (x, y))).map(|(x, y)| family.point(x, y)).collect();
+        let points = node_points(family, &nodes_x, &nodes_y);
         let members = family.training(160, &mut rng);
         let mut matrix = family.screens(&members, &points);
         eliminate(&mut matrix, points.len(), 0.8 * bound, 120).rows.len()
@@ -172,17 +175,22 @@ fn node_positions(family: &Family, (x, y): (usize, usize)) -> (Vec<f64>, Vec<f64
     (chebyshev_points(left, right, x), chebyshev_points(low, high, y))
 }
 
+fn node_points(family: &Family, xs: &[f64], ys: &[f64]) -> Vec<PatchPoint> {
+    ys.iter().flat_map(|&y| xs.iter().map(move |&x| family.point(x, y))).collect()
+}
+
 /// How many Chebyshev nodes each axis needs, so that interpolation of any member errs by less than `bound`.
 pub(crate) fn node_counts(family: &Family, bound: f64) -> (usize, usize) {
     const MOST: usize = 200;
-    let mut rng = ChaCha8Rng::seed_from_u64(0xc4eb);
-    let members = family.training(24, &mut rng);
+    const LINES: usize = 9;
+    let members = family.training(16, &mut ChaCha8Rng::seed_from_u64(0xc4eb));
     let ((left, right), (low, high)) = family.span();
     let needed = |from: f64, to: f64, along_x: bool| -> usize {
         if from == to {
             return 1;
         }
-        let lines: Vec<f64> = family.random_points(3, &mut rng.clone()).iter().map(|p| if along_x { p.dy } else { p.dx }).collect();
+        let (first, last) = if along_x { (low, high) } else { (left, right) };
+        let lines: Vec<f64> = (0..LINES).map(|i| first + (last - first) * i as f64 / (LINES - 1) as f64).collect();
         let place = |t: f64, line: f64| if along_x { family.point(t, line) } else { family.point(line, t) };
         let probes: Vec<f64> = (0..37).map(|i| from + (to - from) * (i as f64 + 0.37) / 37.6).collect();
         let mut count = 8;
@@ -199,8 +207,7 @@ pub(crate) fn node_counts(family: &Family, bound: f64) -> (usize, usize) {
                     let mut worst: f64 = 0.0;
                     for m in 0..members.len() {
                         for p in 0..probes.len() {
-                            let sum: Complex64 =
-                                (0..count).map(|j| known[m * count + j] * matrix[[p, j]]).sum();
+                            let sum: Complex64 = (0..count).map(|j| known[m * count + j] * matrix[[p, j]]).sum();
                             worst = worst.max((sum - truth[m * probes.len() + p]).norm());
                         }
                     }
