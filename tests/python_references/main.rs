@@ -8,13 +8,16 @@
 
 mod environment;
 
-use evensky::beam::{Airy, Extent, Gaussian, Pattern, StationBeam, StationBeams};
+use evensky::beam::{Airy, Extent, Gaussian, Pattern, StationBeam, StationBeams, Unity};
 use evensky::observation::{
-    Hand, Mount, Observation, Station, baseline_uvw, hour_angle_declination, parallactic_angle,
+    Block, Hand, MemorySource, Mount, Observation, SPEED_OF_LIGHT, Station, baseline_uvw, hour_angle_declination,
+    parallactic_angle,
 };
+use evensky::response::gridded::Options;
 use evensky::response::window::{KaiserBessel, Spheroidal, Window};
+use evensky::response::{Exact, Gridded, Response, Sums};
 use evensky::sky::{Direction, ImageGeometry};
-use num_complex::Complex64;
+use num_complex::{Complex32, Complex64};
 use rand::{Rng, SeedableRng};
 use rand_chacha::ChaCha8Rng;
 use serde_json::{Value, json};
@@ -291,4 +294,86 @@ fn windows_agree_with_scipy() {
         }
     }
     compare("windows.py", &json!({ "kaiser_bessel": kaiser_bessel, "spheroidal": spheroidal }));
+}
+
+/// A pointing of `stations` unity stations with visibilities scattered over a disc of the (u, v) plane, w = 0.
+fn scattered(random: &mut ChaCha8Rng, rows: usize, longest_wavelengths: f64) -> MemorySource {
+    let mut observation = observation(Mount::Equatorial);
+    let station = observation.stations[0].clone();
+    observation.stations.push(Station { name: "A2".to_owned(), ..station });
+    observation.frequencies_hz = vec![1.30e9, 1.34e9, 1.40e9];
+    observation.widths_hz = vec![1e6; 3];
+    let longest_m = longest_wavelengths * SPEED_OF_LIGHT / 1.40e9;
+    let values = rows * observation.frequencies_hz.len();
+    let block = Block {
+        mjd_utc: vec![58_849.25; rows],
+        uvw_m: (0..rows)
+            .map(|_| {
+                let (r, turn) =
+                    (longest_m * random.random_range(0.0_f64..1.0).sqrt(), random.random_range(0.0..TAU));
+                [r * turn.cos(), r * turn.sin(), 0.0]
+            })
+            .collect(),
+        first: vec![0; rows],
+        second: vec![1; rows],
+        channels: observation.frequencies_hz.len(),
+        hands: 1,
+        data: (0..values)
+            .map(|_| Complex32::new(random.random_range(-1.0..1.0), random.random_range(-1.0..1.0)))
+            .collect(),
+        weight: (0..values).map(|_| random.random_range(0.1..3.0)).collect(),
+    };
+    MemorySource::new(observation, vec![block])
+}
+
+fn unity(observation: &Observation) -> StationBeams {
+    let pattern: Arc<dyn Pattern> = Arc::new(Unity);
+    let beam = StationBeam { pattern, offset: [0.0, 0.0], beam_name: "unity".to_owned() };
+    StationBeams::new(observation, vec![beam; observation.stations.len()], None)
+}
+
+/// Without beams and w the adjoint is a type-1 non-uniform Fourier transform: the exact sums to rounding, the gridded
+/// ones to their promise.
+#[test]
+fn adjoint_with_unity_beams_agrees_with_finufft() {
+    let mut random = ChaCha8Rng::seed_from_u64(15);
+    let mut cases = Vec::new();
+    for (width, height) in [(48, 40), (33, 57)] {
+        let pixel = 2e-4;
+        let mut source = scattered(&mut random, 700, 0.4 / pixel);
+        let observation = evensky::observation::BlockSource::observation(&source).clone();
+        let beams = unity(&observation);
+        let geometry = ImageGeometry::new(observation.phase_centre, width, height, pixel).unwrap();
+        let block = source.blocks()[0].clone();
+        let mut uv = [Vec::new(), Vec::new()];
+        for [u, v, _] in &block.uvw_m {
+            for hz in &observation.frequencies_hz {
+                uv[0].push(u * hz / SPEED_OF_LIGHT);
+                uv[1].push(v * hz / SPEED_OF_LIGHT);
+            }
+        }
+        let mut add = |name: String, response: &dyn Response, bound: f64| {
+            let mut sums = Sums::zero(&geometry);
+            response.adjoint(&mut source, &mut sums).unwrap();
+            cases.push(json!({
+                "name": format!("{name}, {width} × {height}"), "width": width, "height": height, "pixel": pixel,
+                "u": uv[0], "v": uv[1],
+                "re": block.data.iter().map(|v| v.re).collect::<Vec<_>>(),
+                "im": block.data.iter().map(|v| v.im).collect::<Vec<_>>(),
+                "weight": block.weight,
+                "numerator": sums.numerator.iter().collect::<Vec<_>>(),
+                "normaliser": sums.normaliser.iter().collect::<Vec<_>>(),
+                "bound": bound,
+            }));
+        };
+        // finufft is asked for 1e-13 and keeps about 1e-12 of the norm
+        add("exact".to_owned(), &Exact::new(&observation, beams.clone(), geometry), 1e-11);
+        for tolerance in [1e-2, 1e-4, 1e-6] {
+            let blocks = std::slice::from_ref(&block);
+            let gridded =
+                Gridded::for_blocks(&observation, &beams, geometry, tolerance, blocks, Options::default()).unwrap();
+            add(format!("gridded to {tolerance:e}"), &gridded, tolerance);
+        }
+    }
+    compare("nufft.py", &json!({ "cases": cases }));
 }
