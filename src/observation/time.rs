@@ -55,7 +55,8 @@ pub fn hour_angle_declination(
     let greenwich = -seen.y.atan2(seen.x);
     let local = (greenwich + longitude).rem_euclid(std::f64::consts::TAU);
     let hour_angle = if local > std::f64::consts::PI { local - std::f64::consts::TAU } else { local };
-    (hour_angle, seen.z.asin())
+    // not asin: rounding may carry z past 1, and asin has no digits near a pole
+    (hour_angle, seen.z.atan2(seen.x.hypot(seen.y)))
 }
 
 /// (u, v, w) in metres of an Earth-fixed baseline, in the tangent frame of an ICRS direction.
@@ -86,5 +87,32 @@ impl ParallacticAngles {
     pub fn at(&self, mjd_utc: f64) -> Vec<f64> {
         let to_icrs = icrs_to_earth(mjd_utc, self.ut1_utc_s).transpose();
         self.verticals.iter().map(|up| position_angle(&self.frame, &(to_icrs * up))).collect()
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    /// Close to the pole of date declination keeps its digits and never becomes NaN. Bound: rounding of three rotations.
+    #[test]
+    fn declination_holds_at_the_pole_of_date() {
+        let mjd = 58_849.0;
+        let rows = eraPnm06a(MJD_ZERO, mjd + TT_MINUS_UTC_S / SECONDS_PER_DAY);
+        let to_date = Matrix3::from_fn(|i, j| rows[i][j]);
+        for (step, from_pole) in [0.0, 1e-12, 1e-9, 1e-7, 1e-4].into_iter().enumerate() {
+            for hemisphere in [1.0, -1.0] {
+                let (sin, cos) = (step as f64).sin_cos();
+                let of_date = Vector3::new(
+                    f64::sin(from_pole) * cos,
+                    f64::sin(from_pole) * sin,
+                    hemisphere * f64::cos(from_pole),
+                );
+                let direction = Direction::from_vector(&(to_date.transpose() * of_date));
+                let (_, declination) = hour_angle_declination([6.4e6, 0.0, 0.0], direction, mjd, 0.0);
+                let want = hemisphere * (std::f64::consts::FRAC_PI_2 - from_pole);
+                assert!((declination - want).abs() <= 1e-15, "{from_pole:e} from the pole: {declination}");
+            }
+        }
     }
 }

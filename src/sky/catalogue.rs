@@ -32,7 +32,9 @@ pub enum CatalogueError {
     },
 }
 
+// A misspelt optional column must not silently flatten every spectrum.
 #[derive(Deserialize)]
+#[serde(deny_unknown_fields)]
 struct Row {
     name: String,
     ra_deg: f64,
@@ -45,7 +47,7 @@ struct Row {
 /// Reads a component list. Without `reference_hz` a spectrum must be flat.
 ///
 /// # Errors
-/// When the file cannot be read, a column is missing, or a number is outside its range; the row is named.
+/// When the file cannot be read, a column is missing or unknown, or a number is outside its range; the row is named.
 pub fn read_components(path: &Path) -> Result<Vec<Component>, CatalogueError> {
     let csv_error = |source| CatalogueError::Csv { path: path.to_owned(), source };
     let mut reader =
@@ -83,4 +85,50 @@ pub fn read_components(path: &Path) -> Result<Vec<Component>, CatalogueError> {
         });
     }
     Ok(components)
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use std::io::Write;
+
+    fn read(text: &str) -> Result<Vec<Component>, CatalogueError> {
+        let mut file = tempfile::NamedTempFile::new().unwrap();
+        file.write_all(text.as_bytes()).unwrap();
+        read_components(file.path())
+    }
+
+    #[test]
+    fn reads_spectra_comments_and_absent_columns() {
+        let sky = read(
+            "name, ra_deg, dec_deg, flux_jy, reference_hz, spectral_index\n# a remark\nA, 10.5, -20, 1.5, 1e9, -1\nB, 0, 90, -2, ,\n",
+        )
+        .unwrap();
+        assert_eq!((sky[0].name.as_str(), sky[0].flux_at(2e9)), ("A", 0.75));
+        assert_eq!(sky[1].flux_at(5e9), -2.0);
+        assert_eq!(read("name,ra_deg,dec_deg,flux_jy\nA,1,2,3\n").unwrap()[0].flux_at(1e9), 3.0);
+    }
+
+    /// What is wrong must be named, with its row.
+    #[test]
+    fn names_what_is_wrong() {
+        let heading = "name,ra_deg,dec_deg,flux_jy,reference_hz,spectral_index\n";
+        for (text, said) in [
+            ("name,ra_deg,dec_deg\nA,1,2\n".to_owned(), "flux_jy"),
+            ("name,ra_deg,dec_deg,flux_jy,spectral_idx\nA,1,2,3,-1\n".to_owned(), "spectral_idx"),
+            (format!("{heading}A,1,2,3,1e9,0\nB,1,91,3,1e9,0\n"), "row 2, column dec_deg: 91"),
+            (format!("{heading}A,1,NaN,3,1e9,0\n"), "dec_deg"),
+            (format!("{heading}A,inf,2,3,1e9,0\n"), "ra_deg"),
+            (format!("{heading}A,1,2,NaN,1e9,0\n"), "flux_jy"),
+            (format!("{heading}A,1,2,3,0,-0.7\n"), "reference_hz"),
+            (format!("{heading}A,1,2,3,,-0.7\n"), "reference_hz"),
+            (format!("{heading}A,1,2,three,1e9,0\n"), "line: 2"),
+            (format!("{heading}A,1,2\n"), "line: 2"),
+        ] {
+            let error = read(&text).unwrap_err().to_string();
+            assert!(error.contains(said), "{text:?} gave {error:?}");
+        }
+        let missing = read_components(Path::new("no such sky.csv")).unwrap_err().to_string();
+        assert!(missing.starts_with("no such sky.csv:"), "{missing}");
+    }
 }

@@ -195,7 +195,7 @@ mod tests {
     /// Schwab 1984: with c = πW/2 the transform over the padded field is the function itself.
     #[test]
     fn transform_over_the_field_is_psi_again() {
-        for (support, alpha) in [(4, 0), (6, 0), (6, 1), (7, 1), (12, 1)] {
+        for (support, alpha) in (2..=16).flat_map(|support| [(support, 0), (support, 1)]) {
             let window = Spheroidal::new(support, alpha).unwrap();
             let peak = window.transform(0.0);
             for step in 0..=20 {
