@@ -12,10 +12,8 @@ enum Entry {
 
 /// Keywords that the writer derives from the data; a caller's own are left out on writing.
 fn is_structural(name: &str) -> bool {
-    const FIXED: [&str; 11] = [
-        "SIMPLE", "XTENSION", "BITPIX", "NAXIS", "EXTEND", "PCOUNT", "GCOUNT", "TFIELDS", "THEAP", "END",
-        "CONTINUE",
-    ];
+    const FIXED: [&str; 9] =
+        ["SIMPLE", "XTENSION", "BITPIX", "NAXIS", "EXTEND", "TFIELDS", "THEAP", "END", "CONTINUE"];
     let numbered = |stem: &str| {
         name.strip_prefix(stem).is_some_and(|n| !n.is_empty() && n.bytes().all(|b| b.is_ascii_digit()))
     };
