@@ -11,7 +11,7 @@ pub struct FitsError {
     pub path: PathBuf,
     /// What is wrong.
     #[source]
-    pub problem: FitsProblem,
+    pub problem: Box<FitsProblem>,
 }
 
 /// What is wrong, apart from where. `hdu` names the header and data unit as a person would count it.
@@ -150,6 +150,6 @@ pub enum FitsProblem {
 impl FitsProblem {
     /// This problem, in that file.
     pub fn at(self, path: &Path) -> FitsError {
-        FitsError { path: path.to_path_buf(), problem: self }
+        FitsError { path: path.to_path_buf(), problem: Box::new(self) }
     }
 }
