@@ -64,7 +64,7 @@ impl Groups {
             }
             parameters.push(GroupParameter { name, scale, zero });
         }
-        let group_bytes = if hdu.gcount == 0 { 0 } else { hdu.data_bytes / hdu.gcount };
+        let group_bytes = hdu.data_bytes.checked_div(hdu.gcount).unwrap_or(0);
         let too_large = || header.complain("NAXIS", "a group that fits in memory");
         let axes =
             hdu.axes[1..].iter().map(|n| usize::try_from(*n).map_err(|_| too_large())).collect::<Result<_, _>>()?;

@@ -132,7 +132,8 @@ impl Raster {
                 per_band == 1 || (alike && (step.abs() - w[0]).abs() <= 1e-12 * w[0] && (0..per_band).all(close))
             })
         };
-        let bands = (1..=total).find(|bands| total % bands == 0 && regular(total / bands)).unwrap_or(total);
+        let bands =
+            (1..=total).find(|bands| total.is_multiple_of(*bands) && regular(total / bands)).unwrap_or(total);
         Raster { bands, per_band: total / bands }
     }
 }

@@ -327,8 +327,8 @@ fn hands(axis: &Axis) -> Result<Vec<Hand>, Complaint> {
 /// What of a stated value and weight may be used.
 #[inline(always)]
 fn checked(value: Complex32, weight: f32) -> (Complex32, f32) {
-    // x − x is 0 for a finite x and NaN for any other: one comparison for both parts.
-    let finite = (value.re - value.re) + (value.im - value.im) == 0.0;
+    // 0 · x is 0 for a finite x and NaN for any other: one comparison for both parts.
+    let finite = value.re * 0.0 + value.im * 0.0 == 0.0;
     let usable = finite && weight > 0.0 && weight < f32::INFINITY;
     (if finite { value } else { Complex32::new(0.0, 0.0) }, if usable { weight } else { 0.0 })
 }

@@ -50,7 +50,7 @@ impl StationTables {
             self.ut1_utc_s = get("UT1UTC")?.unwrap_or(0.0);
             self.left_handed = text("XYZHAND")?.eq_ignore_ascii_case("LEFT");
             self.time_system(&table.label, &text("TIMSYS")?, &text("TIMESYS")?, get("IATUTC")?, get("DATUTC")?);
-            if !(self.ut1_utc_s.abs() <= 1.0) {
+            if self.ut1_utc_s.abs() > 1.0 {
                 self.notes
                     .push(format!("{}: UT1UTC = {} s is not believed; 0 is used", table.label, self.ut1_utc_s));
                 self.ut1_utc_s = 0.0;
@@ -159,7 +159,7 @@ impl StationTables {
 
     /// Index of a station by array and station number. Where there is only one table, every array uses it.
     pub fn index(&self, array: i64, number: f64) -> Option<u32> {
-        if !(number >= 0.0 && number <= LARGEST_NUMBER && number.fract() == 0.0) {
+        if !((0.0..=LARGEST_NUMBER).contains(&number) && number.fract() == 0.0) {
             return None;
         }
         let table = match &self.arrays[..] {
