@@ -4,17 +4,30 @@
 //! are metres in the tangent frame of the phase centre, and a weight of 0 means "not used".
 
 mod block;
+mod fields;
+mod file_source;
+mod frequencies;
 mod hand;
+mod idi_reader;
+mod idi_writer;
+mod matrix;
 mod memory;
 mod meta;
+mod open;
+mod pointings;
+mod random_groups;
 mod schedule;
 mod station;
+mod station_axes;
+mod station_table;
 mod time;
 
 pub use block::Block;
 pub use hand::Hand;
+pub use idi_writer::{write_idi, write_idi_through};
 pub use memory::MemorySource;
 pub use meta::{BlockSource, Observation, ObservationError};
+pub use open::{ReadOptions, Selection, open, open_with};
 pub use schedule::Schedule;
 pub use station::{Mount, Station};
 pub use time::{ParallacticAngles, baseline_uvw, hour_angle_declination, parallactic_angle};
