@@ -3,4 +3,5 @@ pub mod beam;
 pub mod fits;
 pub mod observation;
 pub mod response;
+pub mod run;
 pub mod sky;
