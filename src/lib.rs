@@ -1,5 +1,6 @@
 //! evensky
 pub mod beam;
+pub mod cli;
 pub mod fits;
 pub mod observation;
 pub mod response;
