@@ -1,7 +1,7 @@
 //! `evensky image RUN.toml`.
 
+use super::inputs::open_pointings;
 use super::{CliError, Common};
-use crate::beam;
 use crate::run::RunFile;
 use clap::Args;
 use std::path::PathBuf;
@@ -18,10 +18,10 @@ pub struct Arguments {
 ///
 /// # Errors
 /// When it cannot be made.
-pub fn run(arguments: &Arguments, _common: &Common) -> Result<String, CliError> {
+pub fn run(arguments: &Arguments, common: &Common) -> Result<String, CliError> {
     let run = RunFile::read(&arguments.run)?;
     run.image()?;
-    run.pointings()?;
-    beam::patterns(&run)?;
-    Err(CliError::Command("imaging is written on another branch".into()))
+    let inputs = open_pointings(&run, &common.progress())?;
+    common.out_folder(&arguments.run)?;
+    Err(CliError::Command(format!("{} pointings: imaging is written on another branch", inputs.len()).into()))
 }

@@ -11,6 +11,7 @@
 
 pub mod describe;
 pub mod image;
+pub mod inputs;
 pub mod progress;
 pub mod simulate;
 

@@ -215,7 +215,8 @@ mod tests {
 
     #[test]
     fn the_bar_templates_are_good() {
-        for template in ["{msg:<24} {bar:30} {percent:>3} %  {rate}  {eta} left", "{msg:<24} {spinner} {human_pos}"] {
+        for template in ["{msg:<24} {bar:30} {percent:>3} %  {rate}  {eta} left", "{msg:<24} {spinner} {human_pos}"]
+        {
             assert!(ProgressStyle::with_template(template).is_ok());
         }
     }

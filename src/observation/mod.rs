@@ -7,14 +7,18 @@ mod block;
 mod hand;
 mod memory;
 mod meta;
+mod site;
 mod station;
+mod summary;
 mod time;
 
 pub use block::Block;
 pub use hand::Hand;
 pub use memory::MemorySource;
 pub use meta::{BlockSource, Observation, ObservationError};
+pub use site::Site;
 pub use station::{Mount, Station};
+pub use summary::{StationSummary, SuggestedImage, Summary, suggest_image};
 pub use time::{ParallacticAngles, baseline_uvw, hour_angle_declination, parallactic_angle};
 
 /// Speed of light in vacuum, m/s (exact, SI).

@@ -37,8 +37,11 @@ impl<'a> Document<'a> {
             return Ok(root.into_inner());
         }
         for error in errors {
-            let line = error.span().map_or(1, |span| self.line_at(span.start));
-            self.complain(line, "", Problem::Syntax(error.message().to_owned()));
+            let span = error.span().unwrap_or(0..0);
+            // what the parser stumbled over, when it is a word and not a gap
+            let word = self.text.get(span.clone()).and_then(|text| text.lines().next()).map_or("", str::trim);
+            let at = if word.is_empty() { String::new() } else { format!(" at `{word:.60}`") };
+            self.complain(self.line_at(span.start), "", Problem::Syntax(format!("{}{at}", error.message())));
         }
         Err(self.failure().unwrap_or(RunError::Complaints(Vec::new())))
     }
@@ -61,7 +64,7 @@ impl<'a> Document<'a> {
         if complaints.is_empty() {
             return None;
         }
-        complaints.sort_by(|a, b| (&a.path != self.path, a.line).cmp(&(&b.path != self.path, b.line)));
+        complaints.sort_by_key(|complaint| (complaint.path != self.path, complaint.line));
         Some(RunError::Complaints(std::mem::take(&mut *complaints)))
     }
 

@@ -76,11 +76,9 @@ impl<'p> Csv<'p> {
         let failed = |line: usize, error: &dyn std::fmt::Display| {
             vec![Complaint::new(path, line, "", Problem::value(error.to_string(), expected.clone()))]
         };
-        let mut reader = csv::ReaderBuilder::new()
-            .trim(csv::Trim::All)
-            .comment(Some(b'#'))
-            .from_path(path)
-            .map_err(|error| failed(1, &error))?;
+        let content = std::fs::read(path).map_err(|error| failed(1, &error))?;
+        let mut reader =
+            csv::ReaderBuilder::new().trim(csv::Trim::All).comment(Some(b'#')).from_reader(content.as_slice());
         let headings: Vec<String> = reader
             .headers()
             .map_err(|error| failed(1, &error))?
@@ -105,11 +103,11 @@ impl<'p> Csv<'p> {
         for record in reader.records() {
             match record {
                 Ok(record) => {
-                    let line = record.position().map_or(0, |position| position.line() as usize);
+                    let line = record.position().map_or(1, |position| line_from(&content, position.byte()));
                     rows.extend(each(&mut table, line, &record));
                 }
                 Err(error) => {
-                    let line = error.position().map_or(0, |position| position.line() as usize);
+                    let line = error.position().map_or(1, |position| line_from(&content, position.byte()));
                     let found = match error.kind() {
                         csv::ErrorKind::UnequalLengths { expected_len, len, .. } => {
                             format!("{len} cells under {expected_len} headings")
@@ -117,9 +115,6 @@ impl<'p> Csv<'p> {
                         _ => error.to_string(),
                     };
                     table.complain(line, "", Problem::value(found, "one cell for every heading, in UTF-8"));
-                    if error.is_io_error() {
-                        break;
-                    }
                 }
             }
         }
@@ -179,6 +174,17 @@ impl<'p> Csv<'p> {
             })
             .collect()
     }
+}
+
+/// The line of the first row at or after a byte: the reader counts from the end of the row before, so blank lines and
+/// comments lie between.
+fn line_from(content: &[u8], byte: u64) -> usize {
+    let start = usize::try_from(byte).map_or(content.len(), |byte| byte.min(content.len()));
+    let before = content[..start].iter().filter(|&&b| b == b'\n').count();
+    let skipped = content[start..]
+        .split(|&b| b == b'\n')
+        .take_while(|line| line.is_empty() || line == b"\r" || line.starts_with(b"#"));
+    1 + before + skipped.count()
 }
 
 /// Reads a station table: columns `name` and any of `beam`, `pointing_x_arcmin`, `pointing_y_arcmin`; others are left
