@@ -1,15 +1,22 @@
 //! The measurement equation and its adjoint, behind one trait.
 //!
-//! For the visibility k of stations p, q, with beam product A_k = g_p g_q*, weight ω_k and Stokes I sky:
+//! For the visibility k of stations p, q, with beam product A_k = g_p g_q*, weight ω_k and a Stokes I sky:
 //!
 //! - predict: V_k = Σ_s S_s(ν) A_k(s) exp(−2πi (u l + v m + w (n − 1)))
 //! - adjoint: N(l,m) = Σ_k ω_k Re[A_k* V_k exp(+2πi (u l + v m + w (n − 1)))], W(l,m) = Σ_k ω_k |A_k|²
 //!
-//! Sums run over all parallel hands (or the Stokes I product). Two implementations: [`Exact`], the direct sums in
-//! double precision, and [`Gridded`], fast to a promised relative error. Nothing above this folder knows which it
-//! holds.
+//! Sums run over all parallel hands and Stokes I products; a Stokes I product sees the mean of the two feeds' products.
+//! Two implementations: [`Exact`], the direct sums in double precision, and [`Gridded`], fast to a promised relative
+//! error. Nothing above this folder knows which it holds.
 
-use crate::beam::StationBeams;
+mod exact;
+pub mod gridded;
+mod rows;
+pub mod window;
+
+pub use exact::Exact;
+pub use gridded::Gridded;
+
 use crate::observation::{Block, BlockSource, ObservationError};
 use crate::sky::{Component, ImageGeometry};
 use ndarray::Array2;
@@ -37,11 +44,12 @@ pub trait Response: Send + Sync {
     /// The common pixel grid.
     fn geometry(&self) -> &ImageGeometry;
 
-    /// Overwrites the data of `block` (parallel hands and Stokes I) with the model of `sky`; weights stay.
+    /// Overwrites the data of `blocks` (parallel hands and Stokes I; other hands become 0) with the model of `sky`.
+    /// Weights stay as they are.
     ///
     /// # Errors
-    /// When the sky cannot be predicted from to the promised tolerance.
-    fn predict(&self, sky: &[Component], block: &mut Block) -> Result<(), ResponseError>;
+    /// When the sky cannot be predicted to the promised tolerance.
+    fn predict(&self, sky: &[Component], blocks: &mut [Block]) -> Result<(), ResponseError>;
 
     /// Adds N and W of all blocks of `source` to `sums`.
     ///
@@ -57,16 +65,23 @@ pub enum ResponseError {
     #[error(transparent)]
     Observation(#[from] ObservationError),
     /// The tolerance is beyond reach.
-    #[error("tolerance {asked:e} cannot be kept: the smallest that can is {reachable:e} ({reason})")]
+    #[error("tolerance {asked:e} cannot be kept: {reason}; the smallest that can is about {reachable:e}")]
     Tolerance {
         /// What was asked for.
         asked: f64,
         /// The smallest that works.
         reachable: f64,
         /// Why.
-        reason: &'static str,
+        reason: String,
+    },
+    /// A component lies where the gridded prediction cannot reach.
+    #[error(
+        "component {name:?} cannot be predicted by gridding: {reason}; use a wider image, finer pixels, or the exact method"
+    )]
+    Component {
+        /// The component.
+        name: String,
+        /// Why.
+        reason: String,
     },
 }
-
-#[allow(dead_code)]
-fn _types(_: &StationBeams) {}

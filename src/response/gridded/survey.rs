@@ -1,0 +1,109 @@
+//! One pass over the visibilities before gridding: how far u, v, w reach, when, and which pairs.
+
+use super::patch::Patch;
+use crate::observation::{Block, BlockSource, Observation, ObservationError};
+use crate::response::rows::{Intensity, Recentre};
+use std::collections::BTreeSet;
+
+/// Distinct times kept at most; more are thinned evenly (they only choose where kernels are trained).
+const TIMES_KEPT: usize = 512;
+
+/// What one pass over a pointing's visibilities found, about a patch's centre.
+#[derive(Debug, Clone, Default)]
+pub(crate) struct Survey {
+    /// Largest |u′| and |v′|, metres.
+    pub u_m: f64,
+    /// See `u_m`.
+    pub v_m: f64,
+    /// Smallest and largest w, metres.
+    pub w_m: (f64, f64),
+    /// Distinct times, MJD, ascending (thinned).
+    pub times: Vec<f64>,
+    /// Station pairs with usable data, first and second as in the rows.
+    pub pairs: Vec<(u32, u32)>,
+    /// Usable visibilities of hands that carry total intensity.
+    pub used: u64,
+    /// (row, channel) samples with at least one usable hand: what is gridded.
+    pub samples: u64,
+}
+
+impl Survey {
+    pub(crate) fn new(
+        observation: &Observation,
+        intensity: &Intensity,
+        patch: &Patch,
+        source: &mut dyn BlockSource,
+    ) -> Result<Survey, ObservationError> {
+        source.rewind()?;
+        let mut builder = Builder::new(observation, patch);
+        while let Some(block) = source.next_block()? {
+            builder.add(&block, intensity, patch);
+        }
+        Ok(builder.finish())
+    }
+
+    pub(crate) fn of_blocks(
+        observation: &Observation,
+        intensity: &Intensity,
+        patch: &Patch,
+        blocks: &[Block],
+    ) -> Survey {
+        let mut builder = Builder::new(observation, patch);
+        for block in blocks {
+            builder.add(block, intensity, patch);
+        }
+        builder.finish()
+    }
+}
+
+struct Builder {
+    survey: Survey,
+    recentre: Recentre,
+    times: BTreeSet<u64>,
+    pairs: BTreeSet<(u32, u32)>,
+}
+
+impl Builder {
+    fn new(observation: &Observation, patch: &Patch) -> Self {
+        let survey = Survey { w_m: (f64::INFINITY, f64::NEG_INFINITY), ..Survey::default() };
+        let recentre = Recentre::new(&observation.phase_centre.frame(), patch.image_frame());
+        Builder { survey, recentre, times: BTreeSet::new(), pairs: BTreeSet::new() }
+    }
+
+    fn add(&mut self, block: &Block, intensity: &Intensity, patch: &Patch) {
+        let hands: Vec<usize> = intensity.groups().iter().flat_map(|(_, hands)| hands.iter().copied()).collect();
+        for row in 0..block.rows() {
+            let before = self.survey.used;
+            for channel in 0..block.channels {
+                let at = block.index(row, channel);
+                let used = hands.iter().filter(|&&hand| block.weight[at + hand] > 0.0).count() as u64;
+                self.survey.used += used;
+                self.survey.samples += u64::from(used > 0);
+            }
+            if self.survey.used == before {
+                continue;
+            }
+            let turned = self.recentre.turn(block.uvw_m[row]);
+            let (u, v, _) = patch.effective(turned.uvw_m);
+            let w = turned.uvw_m[2];
+            let s = &mut self.survey;
+            s.u_m = s.u_m.max(u.abs());
+            s.v_m = s.v_m.max(v.abs());
+            s.w_m = (s.w_m.0.min(w), s.w_m.1.max(w));
+            self.times.insert(block.mjd_utc[row].to_bits());
+            self.pairs.insert((block.first[row], block.second[row]));
+        }
+    }
+
+    fn finish(mut self) -> Survey {
+        let all: Vec<f64> = self.times.iter().map(|&bits| f64::from_bits(bits)).collect();
+        let step = all.len().div_ceil(TIMES_KEPT).max(1);
+        self.survey.times = all.iter().copied().step_by(step).chain(all.last().copied()).collect();
+        self.survey.times.dedup();
+        self.survey.pairs = self.pairs.into_iter().collect();
+        if self.survey.used == 0 {
+            self.survey.w_m = (0.0, 0.0);
+        }
+        self.survey
+    }
+}

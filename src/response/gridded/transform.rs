@@ -1,0 +1,205 @@
+//! Between interleaved term grids and the pixels of a patch: pruned two-dimensional transforms.
+//!
+//! Only cells that visibilities reach are stored, and only pixels of the patch are kept, so both passes skip what is
+//! known to be zero or unwanted. Cells beyond half the transform's size fold back, as pixels at whole numbers demand.
+
+use super::patch::Patch;
+use super::vector::{Cell, GridReal, LANES};
+use num_complex::Complex;
+use rayon::prelude::*;
+use rustfft::{Fft, FftPlanner};
+use std::sync::Arc;
+
+/// Columns transformed together, for the sake of cache lines.
+const STRIP: usize = 16;
+
+/// Sizes of a pointing's grids.
+#[derive(Debug, Clone, Copy, PartialEq, serde::Serialize)]
+pub struct GridShape {
+    /// Length of the transforms, x and y.
+    pub fft: (usize, usize),
+    /// Cell 0 stands at this stored column and row.
+    pub origin: (usize, usize),
+    /// Stored columns.
+    pub width: usize,
+    /// Stored rows.
+    pub height: usize,
+}
+
+impl GridShape {
+    /// Grids for a patch of `size` pixels padded by `oversampling`, whose visibilities reach `reach` cells per unit
+    /// of transform length (|u| times pixel), with a window of `support` cells.
+    pub(crate) fn new(size: (usize, usize), oversampling: f64, reach: (f64, f64), support: usize) -> GridShape {
+        let length = |n: usize| good_length(((n as f64 * oversampling).ceil() as usize).max(2 * support).max(16));
+        let fft = (length(size.0), length(size.1));
+        let half = |reach: f64, n: usize| ((reach * n as f64).ceil() as usize).min(n / 2) + support / 2 + 2;
+        let origin = (half(reach.0, fft.0), half(reach.1, fft.1));
+        GridShape { fft, origin, width: 2 * origin.0 + 1, height: 2 * origin.1 + 1 }
+    }
+
+    /// Stored cells.
+    pub fn cells(&self) -> usize {
+        self.width * self.height
+    }
+}
+
+/// The smallest even 5-smooth number at least `n`.
+fn good_length(n: usize) -> usize {
+    let smooth = |mut m: usize| {
+        for p in [2, 3, 5] {
+            while m % p == 0 {
+                m /= p;
+            }
+        }
+        m == 1
+    };
+    (n..).find(|&m| m % 2 == 0 && smooth(m)).unwrap_or(n)
+}
+
+/// Transforms for one grid shape and patch size.
+pub(crate) struct Transform<T: GridReal> {
+    shape: GridShape,
+    size: (usize, usize),
+    to_sky: (Arc<dyn Fft<T>>, Arc<dyn Fft<T>>),
+    to_grid: (Arc<dyn Fft<T>>, Arc<dyn Fft<T>>),
+}
+
+/// Index in a transform of length `n` of a signed position.
+fn wrap(position: i64, n: usize) -> usize {
+    position.rem_euclid(n as i64) as usize
+}
+
+impl<T: GridReal> Transform<T> {
+    pub(crate) fn new(shape: GridShape, size: (usize, usize)) -> Self {
+        let mut planner = FftPlanner::new();
+        Transform {
+            shape,
+            size,
+            to_sky: (planner.plan_fft_inverse(shape.fft.0), planner.plan_fft_inverse(shape.fft.1)),
+            to_grid: (planner.plan_fft_forward(shape.fft.0), planner.plan_fft_forward(shape.fft.1)),
+        }
+    }
+
+    fn column_index(&self, column: usize) -> usize {
+        wrap(column as i64 - self.shape.origin.0 as i64, self.shape.fft.0)
+    }
+
+    fn row_index(&self, row: usize) -> usize {
+        wrap(row as i64 - self.shape.origin.1 as i64, self.shape.fft.1)
+    }
+
+    /// Index in the transform of a pixel of the patch.
+    fn pixel_index(pixel: usize, size: usize, n: usize) -> usize {
+        wrap(pixel as i64 + Patch::span(size).0 as i64, n)
+    }
+
+    /// The patch images of the first `terms` terms of a grid, `[term][y][x]`; not yet divided by the window's transform.
+    pub(crate) fn to_patch(&self, grid: &[Cell<T>], terms: usize) -> Vec<Vec<Complex<T>>> {
+        let (nx, ny) = self.size;
+        let (gx, gy) = self.shape.fft;
+        let zero = Complex::new(T::zero(), T::zero());
+        let mut rows = vec![zero; self.shape.height * terms * nx];
+        rows.par_chunks_mut(terms * nx).zip(grid.par_chunks(self.shape.width)).for_each_init(
+            || (vec![zero; gx * terms], vec![zero; self.to_sky.0.get_inplace_scratch_len()]),
+            |(buffer, scratch), (out, cells)| {
+                buffer.fill(zero);
+                for (column, cell) in cells.iter().enumerate() {
+                    let at = self.column_index(column);
+                    for term in 0..terms {
+                        let entry = &mut buffer[term * gx + at];
+                        *entry = *entry + Complex::new(cell[term], cell[term + LANES]);
+                    }
+                }
+                self.to_sky.0.process_with_scratch(buffer, scratch);
+                for term in 0..terms {
+                    for x in 0..nx {
+                        out[term * nx + x] = buffer[term * gx + Self::pixel_index(x, nx, gx)];
+                    }
+                }
+            },
+        );
+        (0..terms)
+            .into_par_iter()
+            .map(|term| {
+                let mut image = vec![zero; nx * ny];
+                let mut buffer = vec![zero; gy * STRIP];
+                let mut scratch = vec![zero; self.to_sky.1.get_inplace_scratch_len()];
+                for start in (0..nx).step_by(STRIP) {
+                    let count = STRIP.min(nx - start);
+                    buffer.fill(zero);
+                    for row in 0..self.shape.height {
+                        let at = self.row_index(row);
+                        let line = &rows[(row * terms + term) * nx + start..][..count];
+                        for (c, &value) in line.iter().enumerate() {
+                            let entry = &mut buffer[c * gy + at];
+                            *entry = *entry + value;
+                        }
+                    }
+                    self.to_sky.1.process_with_scratch(&mut buffer[..count * gy], &mut scratch);
+                    for y in 0..ny {
+                        let at = Self::pixel_index(y, ny, gy);
+                        for c in 0..count {
+                            image[y * nx + start + c] = buffer[c * gy + at];
+                        }
+                    }
+                }
+                image
+            })
+            .collect()
+    }
+
+    /// The exact transpose of [`Transform::to_patch`] with conjugate phases: patch images into a grid.
+    pub(crate) fn to_grid(&self, images: &[Vec<Complex<T>>], grid: &mut [Cell<T>]) {
+        let (nx, ny) = self.size;
+        let (gx, gy) = self.shape.fft;
+        let terms = images.len();
+        let zero = Complex::new(T::zero(), T::zero());
+        let columns: Vec<Vec<Complex<T>>> = images
+            .par_iter()
+            .map(|image| {
+                let mut out = vec![zero; self.shape.height * nx];
+                let mut buffer = vec![zero; gy * STRIP];
+                let mut scratch = vec![zero; self.to_grid.1.get_inplace_scratch_len()];
+                for start in (0..nx).step_by(STRIP) {
+                    let count = STRIP.min(nx - start);
+                    buffer.fill(zero);
+                    for y in 0..ny {
+                        let at = Self::pixel_index(y, ny, gy);
+                        for c in 0..count {
+                            buffer[c * gy + at] = image[y * nx + start + c];
+                        }
+                    }
+                    self.to_grid.1.process_with_scratch(&mut buffer[..count * gy], &mut scratch);
+                    for row in 0..self.shape.height {
+                        let at = self.row_index(row);
+                        for c in 0..count {
+                            out[row * nx + start + c] = buffer[c * gy + at];
+                        }
+                    }
+                }
+                out
+            })
+            .collect();
+        grid.par_chunks_mut(self.shape.width).enumerate().for_each_init(
+            || (vec![zero; gx * terms], vec![zero; self.to_grid.0.get_inplace_scratch_len()]),
+            |(buffer, scratch), (row, cells)| {
+                buffer.fill(zero);
+                for (term, columns) in columns.iter().enumerate() {
+                    for x in 0..nx {
+                        buffer[term * gx + Self::pixel_index(x, nx, gx)] = columns[row * nx + x];
+                    }
+                }
+                self.to_grid.0.process_with_scratch(buffer, scratch);
+                for (column, cell) in cells.iter_mut().enumerate() {
+                    let at = self.column_index(column);
+                    *cell = [T::zero(); 2 * LANES];
+                    for term in 0..terms {
+                        let value = buffer[term * gx + at];
+                        cell[term] = value.re;
+                        cell[term + LANES] = value.im;
+                    }
+                }
+            },
+        );
+    }
+}
