@@ -54,14 +54,9 @@ pub trait BlockSource: Send {
 /// Why visibilities could not be had.
 #[derive(Debug, Error)]
 pub enum ObservationError {
-    /// A FITS-level failure.
-    #[error("{}: {source}", path.display())]
-    Fits {
-        /// The file.
-        path: PathBuf,
-        /// What is wrong with it.
-        source: crate::fits::FitsError,
-    },
+    /// A FITS-level failure; it names the file.
+    #[error(transparent)]
+    Fits(#[from] crate::fits::FitsError),
     /// The file is good FITS but not visibilities we understand.
     #[error("{}: {problem}; expected {expected}", path.display())]
     Content {

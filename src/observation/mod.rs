@@ -4,21 +4,34 @@
 //! are metres in the tangent frame of the phase centre, and a weight of 0 means "not used".
 
 mod block;
+mod fields;
+mod file_source;
+mod frequencies;
 mod hand;
+mod idi_reader;
+mod idi_writer;
+mod matrix;
 mod memory;
 mod meta;
-mod site;
+mod open;
+mod pointings;
+mod random_groups;
 mod schedule;
+mod site;
 mod station;
+mod station_axes;
+mod station_table;
 mod summary;
 mod time;
 
 pub use block::Block;
 pub use hand::Hand;
+pub use idi_writer::{write_idi, write_idi_through};
 pub use memory::MemorySource;
 pub use meta::{BlockSource, Observation, ObservationError};
-pub use site::Site;
+pub use open::{ReadOptions, Selection, open, open_with};
 pub use schedule::Schedule;
+pub use site::Site;
 pub use station::{Mount, Station};
 pub use summary::{StationSummary, SuggestedImage, Summary, suggest_image};
 pub use time::{ParallacticAngles, baseline_uvw, hour_angle_declination, parallactic_angle};

@@ -40,8 +40,7 @@ impl Schedule {
             notes: Vec::new(),
         };
         let frame = aim.frame();
-        let mut block =
-            Block { channels: self.frequencies_hz.len(), hands: self.hands.len(), ..Block::default() };
+        let mut block = Block { channels: self.frequencies_hz.len(), hands: self.hands.len(), ..Block::default() };
         for &mjd in &self.mjd_utc {
             let uvw: Vec<[f64; 3]> =
                 self.stations.iter().map(|s| baseline_uvw(s.position_m, &frame, mjd, 0.0)).collect();

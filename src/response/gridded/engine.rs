@@ -6,7 +6,9 @@ use super::plan::{Partition, Plan};
 use super::smooth::interpolation;
 use super::terms::Terms;
 use super::transform::Transform;
-use super::vector::{Cell, GridReal, Instructions, LANES, Lane, Sample, Share, accumulate, double, gather, real, spread};
+use super::vector::{
+    Cell, GridReal, Instructions, LANES, Lane, Sample, Share, accumulate, double, gather, real, spread,
+};
 use super::{Options, Sums};
 use crate::beam::StationBeams;
 use crate::observation::{Block, BlockSource, Observation};
@@ -109,9 +111,7 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
             (0..size).map(|i| 1.0 / window.transform((i as f64 + first) / n as f64)).collect()
         };
         let (nx, ny) = plan.patch.size;
-        let offsets = |i: usize| {
-            ((i % nx) as f64 + Patch::span(nx).0, (i / nx) as f64 + Patch::span(ny).0)
-        };
+        let offsets = |i: usize| ((i % nx) as f64 + Patch::span(nx).0, (i / nx) as f64 + Patch::span(ny).0);
         let mask = (0..nx * ny)
             .into_par_iter()
             .map(|i| {
@@ -337,11 +337,8 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
                 }
                 let at = block.index(row, channel);
                 for (group, (seen, hands)) in self.intensity.groups().iter().enumerate() {
-                    let (value, weight) = if spreading {
-                        Intensity::weighted(block, at, hands)
-                    } else {
-                        (Complex64::ONE, 1.0)
-                    };
+                    let (value, weight) =
+                        if spreading { Intensity::weighted(block, at, hands) } else { (Complex64::ONE, 1.0) };
                     if weight == 0.0 {
                         continue;
                     }
@@ -735,8 +732,7 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
             .enumerate()
             .map(|(at, &flux)| {
                 let value = flux * self.taper.0[at % nx] * self.taper.1[at / nx];
-                let phase =
-                    if self.plan.layers.bends { cis_turns(-w * self.bend[at]) } else { Complex64::ONE };
+                let phase = if self.plan.layers.bends { cis_turns(-w * self.bend[at]) } else { Complex64::ONE };
                 Complex::new(real(value * phase.re), real(value * phase.im))
             })
             .collect();
@@ -801,7 +797,8 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
             let spread = Spread::new(x, y, half).map_err(&refuse)?;
             let mut outside = 0.0f64;
             for (px, py, weight) in spread.pixels() {
-                let in_image = (0..geometry.width as i64).contains(&px) && (0..geometry.height as i64).contains(&py);
+                let in_image =
+                    (0..geometry.width as i64).contains(&px) && (0..geometry.height as i64).contains(&py);
                 if !in_image {
                     outside = outside.max(weight.abs());
                     continue;

@@ -159,19 +159,25 @@ impl Family<'_> {
             })
             .collect();
         let mut out = vec![Complex64::ZERO; members.len() * points.len()];
-        out.par_chunks_mut(points.len().max(1)).zip(members.par_iter().zip(&ends)).for_each(|(out, (member, ends))| {
-            for (at, (out, point)) in out.iter_mut().zip(points).enumerate() {
-                let product = |(p, q): (usize, usize)| voltages[p][at].conj() * voltages[q][at];
-                let mean = if member.feed == MEAN { 0.5 * (product(ends[0]) + product(ends[1])) } else { product(ends[0]) };
-                *out = if self.power {
-                    Complex64::new(mean.norm_sqr(), 0.0)
-                } else if member.dw == 0.0 {
-                    mean
-                } else {
-                    mean * Complex64::cis(TAU * member.dw * point.bend)
-                };
-            }
-        });
+        out.par_chunks_mut(points.len().max(1)).zip(members.par_iter().zip(&ends)).for_each(
+            |(out, (member, ends))| {
+                for (at, (out, point)) in out.iter_mut().zip(points).enumerate() {
+                    let product = |(p, q): (usize, usize)| voltages[p][at].conj() * voltages[q][at];
+                    let mean = if member.feed == MEAN {
+                        0.5 * (product(ends[0]) + product(ends[1]))
+                    } else {
+                        product(ends[0])
+                    };
+                    *out = if self.power {
+                        Complex64::new(mean.norm_sqr(), 0.0)
+                    } else if member.dw == 0.0 {
+                        mean
+                    } else {
+                        mean * Complex64::cis(TAU * member.dw * point.bend)
+                    };
+                }
+            },
+        );
         out
     }
 }

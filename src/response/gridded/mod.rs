@@ -15,10 +15,10 @@
 
 mod engine;
 mod family;
+mod offgrid;
 mod patch;
 mod plan;
 mod smooth;
-mod offgrid;
 mod survey;
 mod terms;
 mod transform;

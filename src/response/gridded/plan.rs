@@ -170,14 +170,11 @@ impl Plan {
         let Inputs { beams, intensity, frequencies_hz, survey, patch, tolerance } = inputs;
         let angles: Vec<Vec<f64>> = survey.times.iter().map(|&t| beams.angles_at(t)).collect();
         let (middle_bend, half_bend) = bend_range(&patch);
-        let (lowest, highest) = frequencies_hz
-            .iter()
-            .fold((f64::INFINITY, 0.0f64), |(low, high), &hz| (low.min(hz), high.max(hz)));
+        let (lowest, highest) =
+            frequencies_hz.iter().fold((f64::INFINITY, 0.0f64), |(low, high), &hz| (low.min(hz), high.max(hz)));
         let (k_low, k_high) = (wavelengths_per_metre(lowest), wavelengths_per_metre(highest));
-        let w_range = (
-            (survey.w_m.0 * k_low).min(survey.w_m.0 * k_high),
-            (survey.w_m.1 * k_low).max(survey.w_m.1 * k_high),
-        );
+        let w_range =
+            ((survey.w_m.0 * k_low).min(survey.w_m.0 * k_high), (survey.w_m.1 * k_low).max(survey.w_m.1 * k_high));
         let furthest_w = w_range.0.abs().max(w_range.1.abs());
         let bends = TAU * furthest_w * half_bend > share::FLAT * tolerance;
         let turns_total = if bends { 0.5 * (w_range.1 - w_range.0) * half_bend } else { 0.0 };
@@ -230,7 +227,8 @@ impl Plan {
                         break;
                     }
                     // the widest group is the first: its channels span the largest ratio
-                    family.frequencies_hz = frequencies_hz[channel_groups(frequencies_hz.len(), groups)[0].clone()].to_vec();
+                    family.frequencies_hz =
+                        frequencies_hz[channel_groups(frequencies_hz.len(), groups)[0].clone()].to_vec();
                     let mut per_sample = 0.0;
                     let mut terms = 0.0;
                     let lists: Vec<&Vec<(u32, u32)>> = classes.iter().collect();
@@ -262,7 +260,8 @@ impl Plan {
                 }
             }
         }
-        let refuse = |reason: String, reachable: f64| ResponseError::Tolerance { asked: tolerance, reachable, reason };
+        let refuse =
+            |reason: String, reachable: f64| ResponseError::Tolerance { asked: tolerance, reachable, reason };
         let (_, chosen) = best.ok_or_else(|| {
             refuse("no anti-alias window of 16 cells or fewer is good enough".to_owned(), SMALLEST_TOLERANCE)
         })?;
@@ -308,7 +307,8 @@ impl Plan {
                 family.power = true;
                 let half_w = std::mem::replace(&mut family.half_w, 0.0);
                 family.feeds = power_feeds(intensity);
-                let power = Terms::build(&family, power_nodes, power_bound).map_err(|e| too_many(e.reached, power_rms))?;
+                let power =
+                    Terms::build(&family, power_nodes, power_bound).map_err(|e| too_many(e.reached, power_rms))?;
                 family.feeds = kernel_feeds(intensity);
                 family.half_w = half_w;
                 family.power = false;

@@ -61,8 +61,11 @@ impl Terms {
     pub(crate) fn build(family: &Family, nodes: (usize, usize), bound: f64) -> Result<Terms, TooManyTerms> {
         let mut rng = ChaCha8Rng::seed_from_u64(0x7e12);
         let (nodes_x, nodes_y) = node_positions(family, nodes);
-        let points: Vec<PatchPoint> =
-            nodes_y.iter().flat_map(|&y| nodes_x.iter().map(move |&x| (x, y))).map(|(x, y)| family.point(x, y)).collect();
+        let points: Vec<PatchPoint> = nodes_y
+            .iter()
+            .flat_map(|&y| nodes_x.iter().map(move |&x| (x, y)))
+            .map(|(x, y)| family.point(x, y))
+            .collect();
         let most = (TRAINING_ENTRIES / points.len()).clamp(24, TRAINING_MEMBERS);
         let mut members = family.training(most, &mut rng);
         // a little below the bound, so that members in between stay below it
@@ -81,7 +84,13 @@ impl Terms {
             let (worst, offenders) = terms.check(family, &fresh, bound, &mut rng);
             reached = cross.remainder.max(worst);
             if std::env::var_os("EVENSKY_TRACE").is_some() {
-                eprintln!("terms {} nodes {nodes:?} goal {goal:e} remainder {:e} worst {worst:e} bound {bound:e} offenders {} half_w {}", cross.rows.len(), cross.remainder, offenders.len(), family.half_w);
+                eprintln!(
+                    "terms {} nodes {nodes:?} goal {goal:e} remainder {:e} worst {worst:e} bound {bound:e} offenders {} half_w {}",
+                    cross.rows.len(),
+                    cross.remainder,
+                    offenders.len(),
+                    family.half_w
+                );
             }
             if worst <= bound {
                 return Ok(Terms { largest: reached, measured_members: measured, ..terms });
@@ -108,7 +117,8 @@ impl Terms {
         let right = DMatrix::from_row_slice(count, n, &rows);
         let solved = square.full_piv_lu().solve(&right).unwrap_or_else(|| DMatrix::zeros(count, n));
         let shape = (nodes_y.len(), nodes_x.len());
-        let screens = (0..count).map(|j| Array2::from_shape_fn(shape, |(y, x)| solved[(j, y * shape.1 + x)])).collect();
+        let screens =
+            (0..count).map(|j| Array2::from_shape_fn(shape, |(y, x)| solved[(j, y * shape.1 + x)])).collect();
         let picked = cross.columns.iter().map(|&column| points[column]).collect();
         Terms { points: picked, screens, nodes_x, nodes_y, largest: cross.remainder, measured_members: 0 }
     }
@@ -134,7 +144,8 @@ impl Terms {
         let targets = family.random_points(CHECK_POINTS, rng);
         let differences = self.differences(family, members, &targets);
         let worst = differences.iter().copied().fold(0.0, f64::max);
-        let offenders = members.iter().zip(&differences).filter(|(_, d)| **d > bound).map(|(m, _)| m.clone()).collect();
+        let offenders =
+            members.iter().zip(&differences).filter(|(_, d)| **d > bound).map(|(m, _)| m.clone()).collect();
         (worst, offenders)
     }
 
@@ -159,8 +170,11 @@ impl Terms {
     pub(crate) fn estimate(family: &Family, nodes: (usize, usize), bound: f64) -> usize {
         let mut rng = ChaCha8Rng::seed_from_u64(0x0e57);
         let (nodes_x, nodes_y) = node_positions(family, (nodes.0.min(18), nodes.1.min(18)));
-        let points: Vec<PatchPoint> =
-            nodes_y.iter().flat_map(|&y| nodes_x.iter().map(move |&x| (x, y))).map(|(x, y)| family.point(x, y)).collect();
+        let points: Vec<PatchPoint> = nodes_y
+            .iter()
+            .flat_map(|&y| nodes_x.iter().map(move |&x| (x, y)))
+            .map(|(x, y)| family.point(x, y))
+            .collect();
         let members = family.training(160, &mut rng);
         let mut matrix = family.screens(&members, &points);
         eliminate(&mut matrix, points.len(), 0.8 * bound, 120).rows.len()
@@ -182,7 +196,8 @@ pub(crate) fn node_counts(family: &Family, bound: f64) -> (usize, usize) {
         if from == to {
             return 1;
         }
-        let lines: Vec<f64> = family.random_points(3, &mut rng.clone()).iter().map(|p| if along_x { p.dy } else { p.dx }).collect();
+        let lines: Vec<f64> =
+            family.random_points(3, &mut rng.clone()).iter().map(|p| if along_x { p.dy } else { p.dx }).collect();
         let place = |t: f64, line: f64| if along_x { family.point(t, line) } else { family.point(line, t) };
         let probes: Vec<f64> = (0..37).map(|i| from + (to - from) * (i as f64 + 0.37) / 37.6).collect();
         let mut count = 8;
@@ -199,8 +214,7 @@ pub(crate) fn node_counts(family: &Family, bound: f64) -> (usize, usize) {
                     let mut worst: f64 = 0.0;
                     for m in 0..members.len() {
                         for p in 0..probes.len() {
-                            let sum: Complex64 =
-                                (0..count).map(|j| known[m * count + j] * matrix[[p, j]]).sum();
+                            let sum: Complex64 = (0..count).map(|j| known[m * count + j] * matrix[[p, j]]).sum();
                             worst = worst.max((sum - truth[m * probes.len() + p]).norm());
                         }
                     }

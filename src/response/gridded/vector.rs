@@ -220,8 +220,7 @@ fn gather_body<T: GridReal, const W: usize, const FUSED: bool>(
         // Σ conj(m) · value
         let (mut re, mut im) = (0.0, 0.0);
         for j in 0..LANES {
-            let (mr, mi, vr, vi) =
-                (double(m[j]), double(m[j + LANES]), double(value[j]), double(value[j + LANES]));
+            let (mr, mi, vr, vi) = (double(m[j]), double(m[j + LANES]), double(value[j]), double(value[j + LANES]));
             re += mr * vr + mi * vi;
             im += mr * vi - mi * vr;
         }
@@ -349,12 +348,22 @@ mod compiled {
     }
 
     #[target_feature(enable = "avx2,fma")]
-    pub(super) fn accumulate_avx2<T: Real>(shares: &[Share<T>], table: &[Cell<T>], offset: u32, out: &mut [f64; 16]) {
+    pub(super) fn accumulate_avx2<T: Real>(
+        shares: &[Share<T>],
+        table: &[Cell<T>],
+        offset: u32,
+        out: &mut [f64; 16],
+    ) {
         accumulate_body::<T, true>(shares, table, offset, out);
     }
 
     #[target_feature(enable = "avx512f,avx512vl,avx512dq,avx2,fma")]
-    pub(super) fn accumulate_avx512<T: Real>(shares: &[Share<T>], table: &[Cell<T>], offset: u32, out: &mut [f64; 16]) {
+    pub(super) fn accumulate_avx512<T: Real>(
+        shares: &[Share<T>],
+        table: &[Cell<T>],
+        offset: u32,
+        out: &mut [f64; 16],
+    ) {
         accumulate_body::<T, true>(shares, table, offset, out);
     }
 

@@ -1,0 +1,310 @@
+//! Rows of a visibility file, handed out block by block, for random groups and FITS-IDI alike.
+
+use super::fields::Quantity;
+use super::matrix::Matrix;
+use super::open::content;
+use super::station_table::StationTables;
+use super::{Block, BlockSource, Observation, ObservationError, SPEED_OF_LIGHT};
+use crate::fits::FitsFile;
+use std::sync::Arc;
+
+/// Bytes of the file read at a time: small enough to stay in the processor's cache until they are converted.
+const CHUNK: usize = 256 << 10;
+/// Dates outside (1941 to 2132) are taken for damage or for another kind of date.
+const PLAUSIBLE_MJD: std::ops::RangeInclusive<f64> = 30_000.0..=100_000.0;
+
+/// How a row names its stations.
+#[derive(Debug, Clone)]
+pub(super) enum Pair {
+    /// BASELINE, both in one number.
+    Baseline(Quantity),
+    /// A number for each.
+    Two(Quantity, Quantity),
+}
+
+/// A run of rows of equal length and layout: all the random groups, or one UV_DATA table.
+#[derive(Debug, Clone)]
+pub(super) struct Segment {
+    pub start: u64,
+    pub row_bytes: usize,
+    pub rows: u64,
+    /// "group" or "UV_DATA (extension 5) row".
+    pub row_name: String,
+    pub uvw: [Quantity; 3],
+    pub pair: Pair,
+    pub subarray: Option<Quantity>,
+    /// Modified Julian Date, UTC.
+    pub mjd: Quantity,
+    pub source: Option<Quantity>,
+    pub set_up: Option<Quantity>,
+    pub matrix: Matrix,
+}
+
+impl Segment {
+    /// "group 17".
+    pub fn row_label(&self, row: u64) -> String {
+        format!("{} {}", self.row_name, row + 1)
+    }
+}
+
+/// What all pointings of a file share.
+#[derive(Debug)]
+pub(super) struct Shared {
+    pub file: FitsFile,
+    pub segments: Vec<Segment>,
+    pub stations: StationTables,
+}
+
+/// Rows `first..end` of a segment.
+#[derive(Debug, Clone, PartialEq)]
+pub(super) struct Range {
+    pub segment: usize,
+    pub first: u64,
+    pub end: u64,
+}
+
+/// Which rows belong to a pointing; `None` means that all do.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Hash)]
+pub(super) struct Key {
+    pub source: Option<i64>,
+    pub set_up: Option<i64>,
+}
+
+impl Key {
+    /// The key of a row, of the parts that matter.
+    pub fn of(segment: &Segment, row: &[u8], by_source: bool, by_set_up: bool) -> Key {
+        let number = |used: bool, quantity: &Option<Quantity>| {
+            if used { quantity.as_ref().map(|q| q.value(row).round() as i64) } else { None }
+        };
+        Key { source: number(by_source, &segment.source), set_up: number(by_set_up, &segment.set_up) }
+    }
+}
+
+/// One pointing of a file.
+#[derive(Debug)]
+pub(super) struct FileSource {
+    pub shared: Arc<Shared>,
+    pub observation: Observation,
+    pub key: Key,
+    pub ranges: Vec<Range>,
+    pub uvw_scale: f64,
+    pub block_rows: usize,
+    /// Position: range, row.
+    next: (usize, u64),
+    raw: Vec<u8>,
+    /// Source number of the first row, where the file has no source table to tell several apart.
+    lone_source: Option<i64>,
+    skipped: Skipped,
+    counted: bool,
+}
+
+/// Rows that are not handed out.
+#[derive(Debug, Clone, Copy, Default)]
+struct Skipped {
+    autocorrelations: u64,
+    without_coordinates: u64,
+    reversed: u64,
+}
+
+impl FileSource {
+    pub fn new(
+        shared: Arc<Shared>,
+        observation: Observation,
+        key: Key,
+        ranges: Vec<Range>,
+        block_bytes: usize,
+    ) -> FileSource {
+        let cells = shared.segments.first().map_or(1, |s| s.matrix.cells());
+        let row_bytes = cells.saturating_mul(12).saturating_add(40);
+        let block_rows = (block_bytes.saturating_sub(CHUNK) / row_bytes).max(1);
+        let next = (0, ranges.first().map_or(0, |r| r.first));
+        FileSource {
+            shared,
+            observation,
+            key,
+            ranges,
+            uvw_scale: 1.0,
+            block_rows,
+            next,
+            raw: Vec::new(),
+            lone_source: None,
+            skipped: Skipped::default(),
+            counted: false,
+        }
+    }
+
+    fn rows_left(&self) -> u64 {
+        let (at, row) = self.next;
+        self.ranges.iter().skip(at).map(|r| r.end - r.first).sum::<u64>()
+            - self.ranges.get(at).map_or(0, |r| row - r.first)
+    }
+
+    fn empty_block(&self) -> Block {
+        let rows = self.rows_left().min(self.block_rows as u64) as usize;
+        let (channels, hands) = (self.observation.frequencies_hz.len(), self.observation.hands.len());
+        let cells = rows * channels * hands;
+        Block {
+            mjd_utc: Vec::with_capacity(rows),
+            uvw_m: Vec::with_capacity(rows),
+            first: Vec::with_capacity(rows),
+            second: Vec::with_capacity(rows),
+            channels,
+            hands,
+            data: Vec::with_capacity(cells),
+            weight: Vec::with_capacity(cells),
+        }
+    }
+
+    /// Appends rows of the file to `block` until it is full or the rows have ended.
+    fn fill(&mut self, block: &mut Block, raw: &mut Vec<u8>) -> Result<(), ObservationError> {
+        let shared = Arc::clone(&self.shared);
+        while block.rows() < self.block_rows {
+            let Some(range) = self.ranges.get(self.next.0) else { return Ok(()) };
+            if self.next.1 >= range.end {
+                self.next.0 += 1;
+                self.next.1 = self.ranges.get(self.next.0).map_or(0, |r| r.first);
+                continue;
+            }
+            let segment = &shared.segments[range.segment];
+            let per_chunk = (CHUNK / segment.row_bytes).max(1) as u64;
+            let rows = per_chunk.min(range.end - self.next.1).min((self.block_rows - block.rows()) as u64);
+            raw.resize(rows as usize * segment.row_bytes, 0);
+            shared.file.read_at(segment.start + self.next.1 * segment.row_bytes as u64, raw)?;
+            for (n, bytes) in raw.chunks_exact(segment.row_bytes).enumerate() {
+                self.take_row(&shared, segment, self.next.1 + n as u64, bytes, block)?;
+            }
+            self.next.1 += rows;
+        }
+        Ok(())
+    }
+
+    fn take_row(
+        &mut self,
+        shared: &Shared,
+        segment: &Segment,
+        row: u64,
+        bytes: &[u8],
+        block: &mut Block,
+    ) -> Result<(), ObservationError> {
+        let complain = |problem: String, expected: &str| {
+            content(shared.file.path(), format!("{}: {problem}", segment.row_label(row)), expected)
+        };
+        let (by_source, by_set_up) = (self.key.source.is_some(), self.key.set_up.is_some());
+        if (by_source || by_set_up) && Key::of(segment, bytes, by_source, by_set_up) != self.key {
+            return Ok(());
+        }
+        if !by_source && let Some(source) = &segment.source {
+            let source = source.value(bytes).round() as i64;
+            let first = *self.lone_source.get_or_insert(source);
+            if source != first {
+                let problem = format!("SOURCE is {source}, in the rows before it was {first}");
+                return Err(complain(problem, "a source table (SU or SOURCE) when there are several sources"));
+            }
+        }
+        let (array, numbers) = station_numbers(segment, bytes, shared.stations.array_count() > 1);
+        let [first, second] = numbers.map(|number| shared.stations.index(array, number));
+        let (Some(mut first), Some(mut second)) = (first, second) else {
+            let missing = if first.is_none() { numbers[0] } else { numbers[1] };
+            let problem = format!("station number {missing} (array {array}) is not in the station table");
+            return Err(complain(problem, "stations of the station table only"));
+        };
+        if first == second {
+            self.skipped.autocorrelations += 1;
+            return Ok(());
+        }
+        let start = block.weight.len();
+        segment.matrix.append(bytes, &mut block.data, &mut block.weight);
+        // Stored for first minus second station, in light travel time: ours is r_second − r_first, in metres.
+        let mut uvw = [0, 1, 2].map(|i| -SPEED_OF_LIGHT * self.uvw_scale * segment.uvw[i].value(bytes));
+        let mjd = segment.mjd.value(bytes);
+        let located = uvw.iter().all(|x| x.is_finite());
+        if !located || !PLAUSIBLE_MJD.contains(&mjd) {
+            if block.weight[start..].iter().all(|w| *w == 0.0) {
+                block.weight.truncate(start);
+                block.data.truncate(start);
+                self.skipped.without_coordinates += 1;
+                return Ok(());
+            }
+            return Err(if located {
+                complain(format!("its date is MJD {mjd}"), "a Julian Date between 1941 and 2132")
+            } else {
+                complain(format!("u, v, w are {uvw:?} m"), "finite numbers in a row with usable data")
+            });
+        }
+        if first > second {
+            self.skipped.reversed += 1;
+            if segment.matrix.can_swap() {
+                std::mem::swap(&mut first, &mut second);
+                uvw = uvw.map(|x| -x);
+                segment.matrix.swap(&mut block.data[start..], &mut block.weight[start..]);
+            }
+        }
+        block.mjd_utc.push(mjd);
+        block.uvw_m.push(uvw);
+        block.first.push(first);
+        block.second.push(second);
+        Ok(())
+    }
+
+    /// Adds what a whole pass has counted to the notes, once.
+    fn note_skipped(&mut self) {
+        if std::mem::replace(&mut self.counted, true) {
+            return;
+        }
+        let Skipped { autocorrelations, without_coordinates, reversed } = self.skipped;
+        let notes = &mut self.observation.notes;
+        if autocorrelations > 0 {
+            notes.push(format!("{autocorrelations} rows are autocorrelations: skipped"));
+        }
+        if without_coordinates > 0 {
+            notes.push(format!("{without_coordinates} rows have neither usable data nor coordinates: skipped"));
+        }
+        if reversed > 0 {
+            let can = self.shared.segments.iter().all(|s| s.matrix.can_swap());
+            let what = if can { "turned" } else { "left, since a crossed hand is missing" };
+            notes.push(format!("{reversed} rows name the later station of the table first: {what}"));
+        }
+    }
+}
+
+/// Array number and the two station numbers of a row.
+fn station_numbers(segment: &Segment, row: &[u8], several_arrays: bool) -> (i64, [f64; 2]) {
+    let stated = segment.subarray.as_ref().map(|q| q.value(row).round() as i64);
+    match &segment.pair {
+        Pair::Two(first, second) => (stated.unwrap_or(1), [first.value(row), second.value(row)]),
+        Pair::Baseline(baseline) => {
+            let baseline = baseline.value(row);
+            let whole = (baseline + 1e-4).floor();
+            // The fraction is (array − 1)/100; a large f32 has no room for it, so it is looked at only when needed.
+            let array = if several_arrays { 1 + ((baseline - whole) * 100.0).round() as i64 } else { 1 };
+            let (base, step) = if whole >= 65_536.0 { (65_536.0, 2048.0) } else { (0.0, 256.0) };
+            let first = ((whole - base) / step).floor();
+            (stated.unwrap_or(array), [first, whole - base - first * step])
+        }
+    }
+}
+
+impl BlockSource for FileSource {
+    fn observation(&self) -> &Observation {
+        &self.observation
+    }
+
+    fn rewind(&mut self) -> Result<(), ObservationError> {
+        self.next = (0, self.ranges.first().map_or(0, |r| r.first));
+        self.skipped = Skipped::default();
+        Ok(())
+    }
+
+    fn next_block(&mut self) -> Result<Option<Block>, ObservationError> {
+        let mut block = self.empty_block();
+        let mut raw = std::mem::take(&mut self.raw);
+        let filled = self.fill(&mut block, &mut raw);
+        self.raw = raw;
+        filled?;
+        if block.rows() == 0 {
+            self.note_skipped();
+            return Ok(None);
+        }
+        Ok(Some(block))
+    }
+}
