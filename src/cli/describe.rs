@@ -25,18 +25,21 @@ struct Description {
 /// Describes the files.
 ///
 /// # Errors
-/// When one of them cannot be read, or the output folder refuses `describe.json`.
+/// When one of them cannot be read.
 pub fn run(arguments: &Arguments, common: &Common) -> Result<String, CliError> {
+    if common.out.is_some() {
+        return Err(CliError::Usage("describe writes no files: leave out --out, or redirect its output"));
+    }
     let progress = common.progress();
+    let stage = progress.stage("reading", "files", Some(arguments.files.len() as u64));
     let mut pointings = Vec::new();
     for file in &arguments.files {
-        let stage = progress.stage("reading", "pointings", None);
         for mut source in observation::open(file, &observation::Selection::All)? {
             pointings.push(Summary::gather(source.as_mut())?);
-            stage.add(1);
         }
-        stage.finish();
+        stage.add(1);
     }
+    stage.finish();
     let suggested_image = suggest_image(&pointings);
     let description = Description { pointings, suggested_image };
     common.conclusion(&description, || prose(&description))

@@ -104,6 +104,9 @@ pub enum CliError {
     /// The run file is wrong.
     #[error(transparent)]
     Run(#[from] RunError),
+    /// Flags that do not go together, beyond what the parser knows.
+    #[error("{0}")]
+    Usage(&'static str),
     /// Visibilities cannot be had.
     #[error(transparent)]
     Observation(#[from] ObservationError),
@@ -141,7 +144,7 @@ impl CliError {
     /// The exit status.
     fn status(&self) -> u8 {
         match self {
-            CliError::Run(_) => 2,
+            CliError::Run(_) | CliError::Usage(_) => 2,
             _ => 1,
         }
     }

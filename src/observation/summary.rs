@@ -257,8 +257,8 @@ impl Summary {
         }
         let mut steps: Vec<f64> = times.windows(2).map(|pair| (pair[1] - pair[0]) * 86_400.0).collect();
         steps.sort_by(f64::total_cmp);
-        // a time written with rounding errors differs from itself by less than a millisecond
-        self.interval_s = steps.get(steps.len() / 2).copied().map(|step| (step * 1e3).round() / 1e3);
+        // dates in single precision, as many files have them, are good to some milliseconds
+        self.interval_s = steps.get(steps.len() / 2).copied().map(|step| (step * 1e2).round() / 1e2);
         if tally.longest_m > 0.0 {
             self.baseline_m = Some([tally.shortest_m, tally.longest_m]);
         }
