@@ -4,12 +4,14 @@
 //! pointing: parallactic rotation, pointing offset, and the aim the pattern is centred on.
 
 mod airy;
+mod assignment;
 mod gaussian;
 mod pattern;
 mod stations;
 mod unity;
 
 pub use airy::Airy;
+pub use assignment::{patterns, station_beams};
 pub use gaussian::Gaussian;
 pub use pattern::{Extent, Pattern, PatternError};
 pub use stations::{StationBeam, StationBeams};

@@ -17,9 +17,11 @@ mod open;
 mod pointings;
 mod random_groups;
 mod schedule;
+mod site;
 mod station;
 mod station_axes;
 mod station_table;
+mod summary;
 mod time;
 
 pub use block::Block;
@@ -29,7 +31,9 @@ pub use memory::MemorySource;
 pub use meta::{BlockSource, Observation, ObservationError};
 pub use open::{ReadOptions, Selection, open, open_with};
 pub use schedule::Schedule;
+pub use site::Site;
 pub use station::{Mount, Station};
+pub use summary::{StationSummary, SuggestedImage, Summary, suggest_image};
 pub use time::{ParallacticAngles, baseline_uvw, hour_angle_declination, parallactic_angle};
 
 /// Speed of light in vacuum, m/s (exact, SI).
