@@ -353,7 +353,7 @@ fn about_pole(
         }
     }
 
-    // Circles out to the farthest corner, about five of them.
+    // Circles out to the farthest corner, about six of them.
     let sign = pole.signum();
     let farthest = edges
         .iter()
@@ -363,7 +363,7 @@ fn about_pole(
     let circle_step = DEC_STEPS
         .iter()
         .copied()
-        .find(|s| s.radians() >= farthest / 5.0 && s.divides_right_angle())
+        .find(|s| s.radians() >= farthest / 6.0 && s.divides_right_angle())
         .unwrap_or(DEC_STEPS[DEC_STEPS.len() - 1]);
     let quarter = (FRAC_PI_2 / circle_step.radians()).round() as i64;
     let circles: Vec<i64> = (1..=(farthest / circle_step.radians()).floor() as i64).map(|k| quarter - k).collect();

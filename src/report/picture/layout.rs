@@ -12,6 +12,7 @@ use ndarray::{Array2, ArrayView2};
 const PAPER: Rgb = [255, 255, 255];
 const INK: Rgb = [28, 30, 38];
 const GREY: Rgb = [104, 108, 118];
+const LINE: Rgb = [96, 100, 110];
 const BLANK: Rgb = [236, 236, 236];
 const HATCH: Rgb = [205, 205, 205];
 
@@ -82,8 +83,8 @@ pub fn paint<T: Copy + Into<f64>>(values: ArrayView2<T>, spec: &PictureSpec) -> 
     if let Some(beam) = &spec.beam {
         sheet.beam(&mut canvas, &pen, beam, spec.geometry.pixel);
     }
-    let label = if numbers.unit.is_empty() { String::new() } else { format!("({})", numbers.unit) };
-    let bar = Bar { left: bar_left, top, height: bar_height, labels: bar_labels, name: label };
+    let name = numbers.unit.clone();
+    let bar = Bar { left: bar_left, top, height: bar_height, labels: bar_labels, name };
     bar.paint(&mut canvas, &pen, &scale, &numbers);
     for (i, line) in print_lines.iter().enumerate() {
         write(&mut canvas, &pen, line, SMALL, (24.0, (print_top + 20 * i as i64) as f64 + 8.0), Anchor::Left, GREY);
@@ -174,9 +175,14 @@ impl Sheet {
 
     fn graticule(&self, canvas: &mut Canvas, pen: &Pen, lines: &Graticule, geometry: &ImageGeometry) {
         for line in &lines.lines {
-            for pair in line.windows(2) {
-                let (from, to) = (self.place(pair[0]), self.place(pair[1]));
-                canvas.stroke(from, to, 0.6, [96, 100, 110], 0.45);
+            // Segments of a few points: many short ones would ink their joints twice.
+            let mut from = self.place(line[0]);
+            for (i, place) in line.iter().enumerate().skip(1) {
+                let to = self.place(*place);
+                if (to.0 - from.0).hypot(to.1 - from.1) >= 8.0 || i + 1 == line.len() {
+                    canvas.stroke(from, to, 0.5, LINE, 0.5);
+                    from = to;
+                }
             }
         }
         for label in &lines.inner {
@@ -303,10 +309,10 @@ impl Bar {
         for (value, label) in numbers.values.iter().zip(&numbers.labels) {
             let y = self.top as f64 - 0.5 + (1.0 - scale.place(*value)) * self.height as f64;
             canvas.stroke((right, y), (right + 5.0, y), 1.2, INK, 1.0);
-            let x = right + 10.0 + self.labels;
+            let x = right + 12.0 + self.labels;
             write(canvas, pen, label, LABEL, (x, y), Anchor::Right, INK);
         }
-        let x = right + 10.0 + self.labels + 24.0;
+        let x = right + 12.0 + self.labels + 24.0;
         write_upwards(canvas, pen, &self.name, LABEL, (x, (self.top + self.height / 2) as f64), INK);
     }
 }
