@@ -23,6 +23,7 @@ const LABEL: f32 = 16.0;
 const SMALL: f32 = 13.5;
 const TICK: f64 = 7.0;
 const BAR: i64 = 20;
+const DECLINATION: &str = "Declination (ICRS)";
 
 /// Paints an image (`[y][x]`, NaN = blank) with its axes, colour bar, beam and small print.
 ///
@@ -54,15 +55,15 @@ pub fn paint<T: Copy + Into<f64>>(values: ArrayView2<T>, spec: &PictureSpec) -> 
         let labels = lines.ticks.iter().filter(|t| t.edge == edge).filter_map(|t| t.label.as_deref());
         labels.map(|l| pen.width(l, LABEL)).fold(0.0, f64::max)
     };
-    let bar_height = image_height.max(180) as i64;
-    let numbers = BarNumbers::of(&scale, spec.unit, 34.0 / bar_height as f64);
+    let bar_height = image_height.max(120) as i64;
+    let numbers = BarNumbers::of(&scale, spec.unit, 40.0 / bar_height as f64);
     let bar_labels = numbers.labels.iter().map(|l| pen.width(l, LABEL)).fold(0.0, f64::max);
 
     let left = (58.0 + widest(Edge::Left)).ceil() as i64;
     let top = 78 + if lines.polar { 26 } else { 0 };
     let right_labels = if lines.polar { widest(Edge::Right) + 10.0 } else { 0.0 };
     let bar_left = left + image_width as i64 + (24.0 + right_labels).ceil() as i64;
-    let sheet_width = bar_left + BAR + (10.0 + bar_labels + 48.0).ceil() as i64;
+    let sheet_width = bar_left + BAR + (15.0 + bar_labels + 48.0).ceil() as i64;
     let small_print = small_print(spec, &zoom, &scale, shown.iter().any(|v| v.is_nan()));
     let print_top = top + bar_height + 68;
     let title_width = pen.width(spec.title, TITLE).max(pen.width(spec.quantity, LABEL)) + 48.0;
@@ -209,7 +210,10 @@ impl Sheet {
             ((self.left + self.width / 2) as f64, (self.top + self.height / 2) as f64);
         let (below, beside) = match lines.polar {
             true => ("Right ascension along the frame, declination on the circles (ICRS)", ""),
-            false => ("Right ascension (ICRS)", "Declination (ICRS)"),
+            false if (self.height as f64) < pen.width(DECLINATION, LABEL) => {
+                ("Right ascension below, declination at the left (ICRS)", "")
+            }
+            false => ("Right ascension (ICRS)", DECLINATION),
         };
         let below = fit(pen, below, LABEL, (canvas.width() - 40) as f64);
         let below_half = pen.width(&below, LABEL) / 2.0 + 12.0;
@@ -309,10 +313,10 @@ impl Bar {
         for (value, label) in numbers.values.iter().zip(&numbers.labels) {
             let y = self.top as f64 - 0.5 + (1.0 - scale.place(*value)) * self.height as f64;
             canvas.stroke((right, y), (right + 5.0, y), 1.2, INK, 1.0);
-            let x = right + 12.0 + self.labels;
+            let x = right + 15.0 + self.labels;
             write(canvas, pen, label, LABEL, (x, y), Anchor::Right, INK);
         }
-        let x = right + 12.0 + self.labels + 24.0;
+        let x = right + 15.0 + self.labels + 24.0;
         write_upwards(canvas, pen, &self.name, LABEL, (x, (self.top + self.height / 2) as f64), INK);
     }
 }
@@ -345,7 +349,7 @@ fn small_print(spec: &PictureSpec, zoom: &Zoom, scale: &Scale, has_blank: bool) 
 }
 
 /// An angle in the unit that keeps it between 1 and 100 or so, with three significant digits.
-pub(crate) fn readable_angle(radians: f64) -> String {
+pub fn readable_angle(radians: f64) -> String {
     let arcsec = radians.to_degrees() * 3600.0;
     let (value, unit) = match arcsec {
         a if a < 0.1 => (a * 1000.0, " mas"),
