@@ -34,7 +34,14 @@ fn stated(label: &str) -> f64 {
         .map(|p| p.parse().unwrap())
         .collect();
     let units = parts.iter().enumerate().map(|(i, p)| p / 60f64.powi(i as i32)).sum::<f64>();
-    (if time { units * 15.0 } else if negative { -units } else { units }).to_radians()
+    (if time {
+        units * 15.0
+    } else if negative {
+        -units
+    } else {
+        units
+    })
+    .to_radians()
 }
 
 fn turn(angle: f64) -> f64 {
@@ -112,7 +119,9 @@ fn both_axes_have_labels_with_room() {
         let (ra, dec) = (random.random_range(0.0..360.0), random.random_range(-reach..reach + 1e-9));
         let geometry = geometry(ra, dec, side, 800, 600);
         let lines = graticule(&geometry, &whole(&geometry), ROOM);
-        for (edge, coordinate) in [(Edge::Bottom, Coordinate::RightAscension), (Edge::Left, Coordinate::Declination)] {
+        for (edge, coordinate) in
+            [(Edge::Bottom, Coordinate::RightAscension), (Edge::Left, Coordinate::Declination)]
+        {
             let places: Vec<f64> = lines
                 .ticks
                 .iter()
@@ -208,7 +217,12 @@ fn pictures_of_all_kinds_are_painted() {
             scale: None,
         };
         let canvas = paint(image.view(), &spec).unwrap_or_else(|e| panic!("{name}: {e}"));
-        assert!(canvas.width() <= 1700 && canvas.height() <= 1500, "{name}: {} {}", canvas.width(), canvas.height());
+        assert!(
+            canvas.width() <= 1700 && canvas.height() <= 1500,
+            "{name}: {} {}",
+            canvas.width(),
+            canvas.height()
+        );
         let path = folder.join(format!("{name}.png"));
         write_picture(&path, &canvas).unwrap();
         let reader = png::Decoder::new(std::io::BufReader::new(std::fs::File::open(&path).unwrap()));

@@ -450,13 +450,12 @@ mod tests {
     #[test]
     fn dirty_beam_of_scattered_visibilities() {
         let mut random = rand_chacha::ChaCha8Rng::seed_from_u64(8);
-        let points: Vec<(f64, f64)> = std::iter::repeat_with(|| {
-            (random.random_range(-1.0..1.0f64), random.random_range(-1.0..1.0f64))
-        })
-        .filter(|(u, v)| u.hypot(*v) < 1.0)
-        .take(300)
-        .map(|(u, v)| (0.12 * u, 0.06 * v))
-        .collect();
+        let points: Vec<(f64, f64)> =
+            std::iter::repeat_with(|| (random.random_range(-1.0..1.0f64), random.random_range(-1.0..1.0f64)))
+                .filter(|(u, v)| u.hypot(*v) < 1.0)
+                .take(300)
+                .map(|(u, v)| (0.12 * u, 0.06 * v))
+                .collect();
         let image = Array2::from_shape_fn((151, 151), |(y, x)| {
             let (e, n) = (75.0 - x as f64, y as f64 - 75.0);
             points.iter().map(|(u, v)| (2.0 * PI * (u * e + v * n)).cos()).sum::<f64>() / 300.0
@@ -490,9 +489,10 @@ mod tests {
     fn blank_pixels_beside_the_lobe_do_no_harm() {
         let want = beam(8.0, 5.0, -30.0);
         let mut image = gaussian_image(65, 1.0, &want);
-        image.indexed_iter_mut().filter(|((y, x), _)| (*x as i64 - 32).abs() + (*y as i64 - 32).abs() > 9).for_each(
-            |(_, value)| *value = f64::NAN,
-        );
+        image
+            .indexed_iter_mut()
+            .filter(|((y, x), _)| (*x as i64 - 32).abs() + (*y as i64 - 32).abs() > 9)
+            .for_each(|(_, value)| *value = f64::NAN);
         let got = fit_beam(image.view(), (32, 32), 1.0).unwrap();
         assert!((got.major - 8.0).abs() < 1e-9 && (got.minor - 5.0).abs() < 1e-9, "{got:?}");
     }

@@ -25,8 +25,8 @@ pub struct ProductHeader {
     pub bandwidth_hz: f64,
     /// Beam; `None` leaves BMAJ, BMIN and BPA out.
     pub beam: Option<FittedBeam>,
-    /// Start of the observation, ISO 8601 UTC; empty leaves DATE-OBS out.
-    pub date_obs: String,
+    /// Start of the observation, Modified Julian Date, UTC; `None` leaves DATE-OBS and MJD-OBS out.
+    pub start_mjd_utc: Option<f64>,
     /// What the image is, one line, as a COMMENT.
     pub description: String,
     /// Settings and steps, one HISTORY entry each; long ones are wrapped.
@@ -107,9 +107,14 @@ fn product_header(path: &Path, geometry: &ImageGeometry, about: &ProductHeader) 
         0.0 => about.frequency_hz, // An axis of one pixel needs a step; unknown width, no narrower claim.
         w => return Err(bad("CDELT3", w.to_string(), "a bandwidth in Hz that is not negative")),
     };
-    if !about.date_obs.is_empty() && !is_iso_date(&about.date_obs) {
-        return Err(bad("DATE-OBS", about.date_obs.clone(), "a date as YYYY-MM-DDThh:mm:ss[.s], UTC"));
-    }
+    let start = match about.start_mjd_utc {
+        None => None,
+        Some(mjd) => {
+            let date = iso_date(mjd);
+            let expected = "a Modified Julian Date between the years 1858 and 9999";
+            Some((mjd, date.ok_or_else(|| bad("MJD-OBS", mjd.to_string(), expected))?))
+        }
+    };
 
     let (ra, dec) = geometry.centre.to_deg();
     let (x0, y0) = geometry.reference();
@@ -150,8 +155,11 @@ fn product_header(path: &Path, geometry: &ImageGeometry, about: &ProductHeader) 
             .set("BMIN", beam.minor.to_degrees(), "[deg] beam, minor axis, full width half maximum")
             .set("BPA", beam.position_angle.to_degrees(), "[deg] beam, North through East");
     }
-    if !about.date_obs.is_empty() {
-        header.set("DATE-OBS", about.date_obs.as_str(), "start of the observation").set("TIMESYS", "UTC", "");
+    if let Some((mjd, date)) = start {
+        header
+            .set("DATE-OBS", date, "start of the observation")
+            .set("MJD-OBS", mjd, "[d] start of the observation")
+            .set("TIMESYS", "UTC", "time system of the dates");
     }
     header.set("ORIGIN", format!("evensky {}", env!("CARGO_PKG_VERSION")), "program that wrote this file");
     if !about.description.is_empty() {
@@ -165,18 +173,26 @@ fn product_header(path: &Path, geometry: &ImageGeometry, about: &ProductHeader) 
     Ok(header)
 }
 
-/// `YYYY-MM-DD`, with `Thh:mm:ss` and decimals if any (FITS Standard 4.0 §9.1.1).
-fn is_iso_date(text: &str) -> bool {
-    let fits = |part: &str, pattern: &str| {
-        part.len() == pattern.len()
-            && part.bytes().zip(pattern.bytes()).all(|(b, p)| if p == b'0' { b.is_ascii_digit() } else { b == p })
-    };
-    let (date, time) = text.split_once('T').unwrap_or((text, "00:00:00"));
-    let (whole, decimals) = time.split_once('.').unwrap_or((time, "0"));
-    fits(date, "0000-00-00")
-        && fits(whole, "00:00:00")
-        && !decimals.is_empty()
-        && decimals.bytes().all(|b| b.is_ascii_digit())
+/// `YYYY-MM-DDThh:mm:ss.sss` of a Modified Julian Date (FITS Standard 4.0 §9.1.1), or `None` outside 1858 to 9999.
+///
+/// The Gregorian date follows Fliegel & Van Flandern (1968, Comm. ACM 11, 657), in whole numbers.
+fn iso_date(mjd: f64) -> Option<String> {
+    if !(0.0..2_973_483.0).contains(&mjd) {
+        return None;
+    }
+    let milliseconds = (mjd * 86_400_000.0).round() as i64;
+    let (day, within) = (milliseconds.div_euclid(86_400_000), milliseconds.rem_euclid(86_400_000));
+    let mut l = day + 2_400_001 + 68_569;
+    let n = 4 * l / 146_097;
+    l -= (146_097 * n + 3) / 4;
+    let i = 4000 * (l + 1) / 1_461_001;
+    l = l - 1461 * i / 4 + 31;
+    let j = 80 * l / 2447;
+    let (month_day, century_month) = (l - 2447 * j / 80, j / 11);
+    let (month, year) = (j + 2 - 12 * century_month, 100 * (n - 49) + i + century_month);
+    let (seconds, fraction) = (within / 1000, within % 1000);
+    let (hour, minute, second) = (seconds / 3600, seconds / 60 % 60, seconds % 60);
+    Some(format!("{year:04}-{month:02}-{month_day:02}T{hour:02}:{minute:02}:{second:02}.{fraction:03}"))
 }
 
 /// The text in the printable ASCII that a FITS header may hold, at most `longest` letters. Signs with a plain spelling
@@ -261,13 +277,25 @@ mod tests {
         assert_eq!(ascii("long name", 4), "long");
     }
 
+    /// Outside values: astropy.time.Time(mjd, format='mjd').isot, 8.0.2.
     #[test]
     fn dates() {
-        for good in ["2026-12-01", "2026-12-01T04:05:06", "2026-12-01T04:05:06.789"] {
-            assert!(is_iso_date(good), "{good}");
+        for (mjd, want) in MJD_TABLE {
+            assert_eq!(iso_date(*mjd).as_deref(), Some(*want));
         }
-        for bad in ["", "yesterday", "2026-12-1", "2026-12-01T4:05", "2026-12-01T04:05:06.", "01/12/26"] {
-            assert!(!is_iso_date(bad), "{bad}");
+        for bad in [-1.0, f64::NAN, f64::INFINITY, 3e6] {
+            assert_eq!(iso_date(bad), None, "{bad}");
         }
     }
+
+    const MJD_TABLE: &[(f64, &str)] = &[
+        (0.0, "1858-11-17T00:00:00.000"),
+        (51544.5, "2000-01-01T12:00:00.000"),
+        (61375.170214, "2026-12-01T04:05:06.490"),
+        (60369.999999999, "2024-03-01T00:00:00.000"),
+        (60370.25, "2024-03-01T06:00:00.000"),
+        (58849.0, "2020-01-01T00:00:00.000"),
+        (88127.75, "2100-02-28T18:00:00.000"),
+        (45000.123456, "1982-01-31T02:57:46.598"),
+    ];
 }

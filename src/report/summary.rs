@@ -23,10 +23,10 @@ pub fn summary_text(record: &RunRecord, folder: &str) -> String {
         push(
             &mut text,
             &format!(
-                "beam       {} × {} at position angle {:.1}°",
+                "beam       {} × {} at position angle {}°",
                 arcsec(beam.major_arcsec),
                 arcsec(beam.minor_arcsec),
-                beam.position_angle_deg
+                format!("{:.1}", beam.position_angle_deg).replace('-', "−")
             ),
         );
     }
@@ -87,13 +87,7 @@ fn made(record: &RunRecord) -> String {
     let title = if record.title.is_empty() { "untitled run" } else { &record.title };
     let mut text = title.to_string();
     if let Some(image) = &record.image {
-        let _ = write!(
-            text,
-            ": {} × {} pixels of {}",
-            image.width_px,
-            image.height_px,
-            arcsec(image.pixel_arcsec)
-        );
+        let _ = write!(text, ": {} × {} pixels of {}", image.width_px, image.height_px, arcsec(image.pixel_arcsec));
     }
     if !record.pointings.is_empty() {
         let pointings = record.pointings.len();

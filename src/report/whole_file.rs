@@ -84,7 +84,7 @@ pub fn write_whole(
 /// # Errors
 /// As [`write_whole`], and when the value cannot be put in JSON.
 pub fn write_json(path: &Path, value: &impl Serialize) -> Result<(), WriteError> {
-    let text = serde_json::to_string_pretty(value)
-        .map_err(|source| WriteError::Json { path: path.to_owned(), source })?;
+    let text =
+        serde_json::to_string_pretty(value).map_err(|source| WriteError::Json { path: path.to_owned(), source })?;
     write_whole(path, |file| file.write_all(text.as_bytes()).and_then(|()| file.write_all(b"\n")))
 }

@@ -77,7 +77,8 @@ mod tests {
     /// than 0.02 (own bound, about what the eye tells apart beside each other).
     #[test]
     fn rising_lightness_is_even() {
-        let lights: Vec<f64> = (0..=100).map(|i| lightness(ColourMap::Rising.colour(f64::from(i) / 100.0))).collect();
+        let lights: Vec<f64> =
+            (0..=100).map(|i| lightness(ColourMap::Rising.colour(f64::from(i) / 100.0))).collect();
         assert!(lights.windows(2).all(|w| w[1] > w[0]), "{lights:?}");
         let (first, last) = (lights[0], lights[100]);
         for (i, l) in lights.iter().enumerate() {
@@ -104,7 +105,9 @@ mod tests {
         for i in 3..=10 {
             let t = f64::from(i) / 10.0;
             let opponent = |c: Rgb| f64::from(c[2]) - (f64::from(c[0]) + f64::from(c[1])) / 2.0;
-            assert!(opponent(ColourMap::TwoSided.colour(-t)) > 20.0 && opponent(ColourMap::TwoSided.colour(t)) < -20.0);
+            assert!(
+                opponent(ColourMap::TwoSided.colour(-t)) > 20.0 && opponent(ColourMap::TwoSided.colour(t)) < -20.0
+            );
         }
     }
 

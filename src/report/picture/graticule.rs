@@ -128,10 +128,11 @@ pub struct LabelRoom {
 
 /// The graticule of a picture of `geometry` cut to `frame`.
 pub fn graticule(geometry: &ImageGeometry, frame: &Frame, room: LabelRoom) -> Graticule {
-    let pole = [FRAC_PI_2, -FRAC_PI_2].into_iter().find(|dec| {
-        geometry.pixel_of(Direction { ra: 0.0, dec: *dec }).is_some_and(|place| frame.holds(place))
-    });
-    let edges: Vec<EdgeTrack> = Edge::ALL.into_iter().map(|edge| EdgeTrack::follow(geometry, frame, edge)).collect();
+    let pole = [FRAC_PI_2, -FRAC_PI_2]
+        .into_iter()
+        .find(|dec| geometry.pixel_of(Direction { ra: 0.0, dec: *dec }).is_some_and(|place| frame.holds(place)));
+    let edges: Vec<EdgeTrack> =
+        Edge::ALL.into_iter().map(|edge| EdgeTrack::follow(geometry, frame, edge)).collect();
     match pole {
         Some(pole) => about_pole(geometry, frame, &edges, room, pole),
         None => away_from_poles(geometry, frame, &edges, room),
@@ -172,7 +173,13 @@ impl EdgeTrack {
     }
 
     /// Crossings of the lines at whole multiples of `step`, as (multiple, place along the edge 0 to 1).
-    fn crossings(&self, geometry: &ImageGeometry, frame: &Frame, coordinate: Coordinate, step: f64) -> Vec<(i64, f64)> {
+    fn crossings(
+        &self,
+        geometry: &ImageGeometry,
+        frame: &Frame,
+        coordinate: Coordinate,
+        step: f64,
+    ) -> Vec<(i64, f64)> {
         let values: Vec<Option<f64>> = self.values(coordinate).collect();
         let mut found = Vec::new();
         for (i, pair) in values.windows(2).enumerate() {
@@ -274,9 +281,10 @@ fn away_from_poles(geometry: &ImageGeometry, frame: &Frame, edges: &[EdgeTrack],
     let mut lines = Vec::new();
     if needs_lines(frame, geometry, edges) {
         let range = |coordinate| {
-            edges.iter().filter_map(|e| e.range(coordinate)).fold((f64::INFINITY, f64::NEG_INFINITY), |a, b| {
-                (a.0.min(b.0), a.1.max(b.1))
-            })
+            edges
+                .iter()
+                .filter_map(|e| e.range(coordinate))
+                .fold((f64::INFINITY, f64::NEG_INFINITY), |a, b| (a.0.min(b.0), a.1.max(b.1)))
         };
         let (ra_range, dec_range) = (range(Coordinate::RightAscension), range(Coordinate::Declination));
         for (coordinate, step) in [Coordinate::RightAscension, Coordinate::Declination].into_iter().zip(steps) {

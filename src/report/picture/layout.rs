@@ -206,8 +206,7 @@ impl Sheet {
             };
             write(canvas, pen, label, LABEL, place, anchor, INK);
         }
-        let (middle_x, middle_y) =
-            ((self.left + self.width / 2) as f64, (self.top + self.height / 2) as f64);
+        let (middle_x, middle_y) = ((self.left + self.width / 2) as f64, (self.top + self.height / 2) as f64);
         let (below, beside) = match lines.polar {
             true => ("Right ascension along the frame, declination on the circles (ICRS)", ""),
             false if (self.height as f64) < pen.width(DECLINATION, LABEL) => {
@@ -257,7 +256,11 @@ impl Sheet {
         if !(points(beam.major).is_finite() && points(beam.major) <= room && self.width.min(self.height) >= 90) {
             return; // Larger than a third of the picture: the small print states it.
         }
-        let factor = if points(beam.minor) < 5.0 { (9.0 / points(beam.minor)).ceil().min(room / points(beam.major)) } else { 1.0 };
+        let factor = if points(beam.minor) < 5.0 {
+            (9.0 / points(beam.minor)).ceil().min(room / points(beam.major))
+        } else {
+            1.0
+        };
         let factor = factor.floor().max(1.0);
         let (major, minor) = (points(beam.major) * factor, points(beam.minor) * factor);
         let label = if factor > 1.0 { format!("beam × {factor}") } else { "beam".to_string() };
@@ -335,7 +338,9 @@ fn small_print(spec: &PictureSpec, zoom: &Zoom, scale: &Scale, has_blank: bool) 
     parts.push(match (zoom.average, zoom.enlarge) {
         (1, 1) => "One picture point a pixel.".to_string(),
         (1, factor) => format!("Each pixel is shown {factor} points wide."),
-        (side, _) => format!("Each picture point is the mean of {side} × {side} pixels; point sources look fainter."),
+        (side, _) => {
+            format!("Each picture point is the mean of {side} × {side} pixels; point sources look fainter.")
+        }
     });
     parts.push(match scale.stretch {
         Stretch::Linear => "Linear scale.".to_string(),

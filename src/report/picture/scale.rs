@@ -242,9 +242,7 @@ mod tests {
 
     #[test]
     fn places_and_values_are_inverse() {
-        for scale in
-            [Scale::new(-0.2, 3.0, asinh(0.01)).unwrap(), Scale::new(1e6, 4e6, Stretch::Linear).unwrap()]
-        {
+        for scale in [Scale::new(-0.2, 3.0, asinh(0.01)).unwrap(), Scale::new(1e6, 4e6, Stretch::Linear).unwrap()] {
             assert!(scale.place(scale.low).abs() < 1e-12 && (scale.place(scale.high) - 1.0).abs() < 1e-12);
             for i in 0..=20 {
                 let value = scale.value_at(f64::from(i) / 20.0);
@@ -266,7 +264,7 @@ mod tests {
     fn asinh_bar_marks_factors_of_ten_on_both_sides() {
         let scale = Scale::new(-0.05, 1.0, asinh(1e-3)).unwrap();
         let numbers = BarNumbers::of(&scale, "", 0.06);
-        assert_eq!(numbers.labels.join(" "), "−0.01 −0.001 0 0.001 0.01 0.1 1");
+        assert_eq!(numbers.labels.join(" "), "−0.05 −0.01 −0.001 0 0.001 0.01 0.1 1");
         for (value, text) in numbers.values.iter().zip(&numbers.labels) {
             assert_eq!(text.replace('−', "-").parse::<f64>().unwrap(), *value);
         }
@@ -285,9 +283,12 @@ mod tests {
 
     #[test]
     fn impossible_scales_are_refused() {
-        for (low, high, stretch) in
-            [(1.0, 1.0, Stretch::Linear), (f64::NAN, 1.0, Stretch::Linear), (0.0, 1.0, asinh(0.0)), (2.0, 1.0, asinh(1.0))]
-        {
+        for (low, high, stretch) in [
+            (1.0, 1.0, Stretch::Linear),
+            (f64::NAN, 1.0, Stretch::Linear),
+            (0.0, 1.0, asinh(0.0)),
+            (2.0, 1.0, asinh(1.0)),
+        ] {
             let text = Scale::new(low, high, stretch).unwrap_err().to_string();
             assert!(text.contains("colour scale"), "{text}");
         }
