@@ -115,7 +115,7 @@ fn page_is_whole_and_self_contained() {
     ] {
         assert!(page.contains(part), "the page lacks {part:?}");
     }
-    for outside in ["http:", "https:", "<script", "url(", "<the>", "none", "undefined"] {
+    for outside in ["http:", "https:", "<script", "url(", "<the>", ">none", " none ", "undefined"] {
         assert!(!page.contains(outside), "the page holds {outside:?}");
     }
     assert!(!page.contains("WARNING"), "a good run shows no warning");

@@ -162,7 +162,7 @@ pub(super) fn thousands(count: u64) -> String {
     let plain = count.to_string();
     let mut text = String::new();
     for (i, digit) in plain.chars().enumerate() {
-        if i > 0 && (plain.len() - i) % 3 == 0 {
+        if i > 0 && (plain.len() - i).is_multiple_of(3) {
             text.push('\u{2009}');
         }
         text.push(digit);

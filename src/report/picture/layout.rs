@@ -243,7 +243,7 @@ impl Sheet {
         let length = dx.hypot(dy);
         let inward = (dx * straight.0 + dy * straight.1) / length;
         // A line that grazes the frame gets a straight tick, or its own would be unreadable.
-        if !(inward.abs() > 0.3) {
+        if inward.is_nan() || inward.abs() <= 0.3 {
             return straight;
         }
         (dx / length * inward.signum(), dy / length * inward.signum())
