@@ -1,0 +1,3 @@
+//! From visibilities to images.
+
+pub mod beam_fit;
