@@ -1,3 +1,10 @@
-//! From visibilities to images.
+//! From the sums of all pointings to images: flat sky, weight map, point spread function, and the check of their sums.
 
 pub mod beam_fit;
+mod flat;
+mod mosaic;
+mod self_check;
+
+pub use flat::{flat_noise, flat_sky, response_map};
+pub use mosaic::{Mosaic, Pointing, Tally};
+pub use self_check::{SelfCheck, self_check};

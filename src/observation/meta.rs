@@ -33,6 +33,13 @@ pub struct Observation {
     pub notes: Vec<String>,
 }
 
+impl Observation {
+    /// Indices of the hands that carry total intensity: parallel hands and Stokes I.
+    pub fn total_intensity(&self) -> Vec<usize> {
+        (0..self.hands.len()).filter(|&hand| self.hands[hand].carries_total_intensity()).collect()
+    }
+}
+
 /// Reads one pointing's visibilities, block by block, as often as asked.
 pub trait BlockSource: Send {
     /// What the blocks belong to.

@@ -23,6 +23,7 @@ mod station_axes;
 mod station_table;
 mod summary;
 mod time;
+mod watched;
 
 pub use block::Block;
 pub use hand::Hand;
@@ -35,6 +36,7 @@ pub use site::Site;
 pub use station::{Mount, Station};
 pub use summary::{StationSummary, SuggestedImage, Summary, suggest_image};
 pub use time::{ParallacticAngles, baseline_uvw, hour_angle_declination, parallactic_angle};
+pub use watched::Watched;
 
 /// Speed of light in vacuum, m/s (exact, SI).
 pub const SPEED_OF_LIGHT: f64 = 299_792_458.0;

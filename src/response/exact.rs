@@ -9,7 +9,7 @@ use num_complex::{Complex32, Complex64};
 use rayon::prelude::*;
 
 /// Directions handled by one thread at a time.
-const POINTS_PER_TASK: usize = 128;
+const POINTS_PER_TASK: usize = 32;
 
 /// Direct sums over visibilities and directions. Cost: visibilities × directions.
 ///
@@ -143,20 +143,7 @@ impl Response for Exact {
     }
 
     fn predict(&self, sky: &[Component], blocks: &mut [Block]) -> Result<(), ResponseError> {
-        let points: Vec<Point> = sky.iter().map(|c| self.point(c.direction)).collect();
-        let fluxes: Vec<Vec<f64>> =
-            self.frequencies_hz.iter().map(|&hz| sky.iter().map(|c| c.flux_at(hz)).collect()).collect();
-        for block in blocks {
-            let times = rows_by_time(block);
-            let predicted: Vec<(usize, usize, Complex64)> = times
-                .par_iter()
-                .flat_map_iter(|(time, rows)| self.predict_time(block, *time, rows, &points, &fluxes))
-                .collect();
-            block.data.fill(Complex32::ZERO);
-            for (at, hand, value) in predicted {
-                block.data[at + hand] = Complex32::new(value.re as f32, value.im as f32);
-            }
-        }
+        blocks.iter_mut().for_each(|block| self.predict_exactly(sky, block));
         Ok(())
     }
 
@@ -177,6 +164,22 @@ impl Response for Exact {
 }
 
 impl Exact {
+    /// As [`Response::predict`], which for direct sums cannot fail.
+    pub fn predict_exactly(&self, sky: &[Component], block: &mut Block) {
+        let points: Vec<Point> = sky.iter().map(|c| self.point(c.direction)).collect();
+        let fluxes: Vec<Vec<f64>> =
+            self.frequencies_hz.iter().map(|&hz| sky.iter().map(|c| c.flux_at(hz)).collect()).collect();
+        let times = rows_by_time(block);
+        let predicted: Vec<(usize, usize, Complex64)> = times
+            .par_iter()
+            .flat_map_iter(|(time, rows)| self.predict_time(block, *time, rows, &points, &fluxes))
+            .collect();
+        block.data.fill(Complex32::ZERO);
+        for (at, hand, value) in predicted {
+            block.data[at + hand] = Complex32::new(value.re as f32, value.im as f32);
+        }
+    }
+
     fn predict_time(
         &self,
         block: &Block,

@@ -1,0 +1,165 @@
+//! Pointings summed into one mosaic.
+
+use crate::beam::StationBeams;
+use crate::observation::{Block, BlockSource, Watched};
+use crate::response::gridded::Options;
+use crate::response::{Exact, Gridded, Response, ResponseError, Sums};
+use crate::sky::{Component, Direction, ImageGeometry};
+use ndarray::Array2;
+
+/// One pointing with both its responses.
+pub struct Pointing {
+    /// Its visibilities.
+    pub source: Box<dyn BlockSource>,
+    /// The fast response.
+    pub gridded: Gridded,
+    /// The exact one, its judge.
+    pub exact: Exact,
+    /// What its visibilities amount to.
+    pub tally: Tally,
+}
+
+/// What the visibilities of a pointing amount to: total-intensity hands only.
+#[derive(Debug, Clone, Copy, PartialEq, Default)]
+pub struct Tally {
+    /// Rows.
+    pub rows: u64,
+    /// Visibilities used.
+    pub used: u64,
+    /// Visibilities not used (flagged).
+    pub flagged: u64,
+    /// Sum of weights, Jy⁻².
+    pub weight: f64,
+    /// Sum of weight times frequency, Hz Jy⁻².
+    pub weight_hz: f64,
+    /// First and last time, MJD UTC; infinite when there are no rows.
+    pub span: (f64, f64),
+}
+
+impl Tally {
+    fn add(&mut self, block: &Block, hands: &[usize], frequencies_hz: &[f64]) {
+        self.rows += block.rows() as u64;
+        for row in 0..block.rows() {
+            self.span.0 = self.span.0.min(block.mjd_utc[row]);
+            self.span.1 = self.span.1.max(block.mjd_utc[row]);
+            for (channel, hz) in frequencies_hz.iter().enumerate() {
+                let at = block.index(row, channel);
+                for &hand in hands {
+                    let weight = f64::from(block.weight[at + hand]);
+                    if weight > 0.0 {
+                        self.used += 1;
+                        self.weight += weight;
+                        self.weight_hz += weight * hz;
+                    } else {
+                        self.flagged += 1;
+                    }
+                }
+            }
+        }
+    }
+}
+
+/// A mosaic under way: a common pixel grid and the pointings that contribute to it.
+pub struct Mosaic {
+    geometry: ImageGeometry,
+    pointings: Vec<Pointing>,
+}
+
+impl Mosaic {
+    /// A mosaic of no pointings yet.
+    pub fn new(geometry: ImageGeometry) -> Self {
+        Mosaic { geometry, pointings: Vec::new() }
+    }
+
+    /// Plans and builds the kernels of a pointing. `rows` is told the number of rows as they are read.
+    ///
+    /// # Errors
+    /// When the visibilities cannot be read or the tolerance cannot be kept.
+    pub fn add(
+        &mut self,
+        mut source: Box<dyn BlockSource>,
+        beams: StationBeams,
+        tolerance: f64,
+        options: Options,
+        mut rows: impl FnMut(u64) + Send,
+    ) -> Result<(), ResponseError> {
+        let mut observation = source.observation().clone();
+        observation.aim = beams.aim();
+        let hands = observation.total_intensity();
+        let mut tally = Tally { span: (f64::INFINITY, f64::NEG_INFINITY), ..Tally::default() };
+        let gridded = {
+            let mut counted = Watched::new(source.as_mut(), |block| {
+                tally.add(block, &hands, &observation.frequencies_hz);
+                rows(block.rows() as u64);
+                Ok(())
+            });
+            Gridded::new(&beams, self.geometry, tolerance, &mut counted, options)?
+        };
+        let exact = Exact::new(&observation, beams, self.geometry);
+        self.pointings.push(Pointing { source, gridded, exact, tally });
+        Ok(())
+    }
+
+    /// The pointings.
+    pub fn pointings(&self) -> &[Pointing] {
+        &self.pointings
+    }
+
+    /// The pointings, to be read again.
+    pub fn pointings_mut(&mut self) -> &mut [Pointing] {
+        &mut self.pointings
+    }
+
+    /// The common pixel grid.
+    pub fn geometry(&self) -> &ImageGeometry {
+        &self.geometry
+    }
+
+    /// N and W of all pointings: one sum, not a patchwork.
+    ///
+    /// # Errors
+    /// When visibilities cannot be read.
+    pub fn sums(&mut self, mut rows: impl FnMut(u64) + Send) -> Result<Sums, ResponseError> {
+        let mut sums = Sums::zero(&self.geometry);
+        for pointing in &mut self.pointings {
+            let mut counted = Watched::new(pointing.source.as_mut(), |block| {
+                rows(block.rows() as u64);
+                Ok(())
+            });
+            pointing.gridded.adjoint(&mut counted, &mut sums)?;
+        }
+        Ok(sums)
+    }
+
+    /// The point spread function of the flat sky at `place`: N/W of the visibilities of 1 Jy there and nothing else,
+    /// NaN where `blank` is. A dirty image of one such source equals it, times the flux density.
+    ///
+    /// # Errors
+    /// When visibilities cannot be read.
+    pub fn point_spread(
+        &mut self,
+        place: Direction,
+        sums: &Sums,
+        blank: &Array2<f64>,
+        mut rows: impl FnMut(u64) + Send,
+    ) -> Result<Array2<f64>, ResponseError> {
+        let source =
+            Component { name: "unit".to_owned(), direction: place, flux_jy: 1.0, reference_hz: 1.0, spectral_index: 0.0 };
+        let sky = [source];
+        let mut of_unit = Sums { numerator: Array2::zeros(blank.dim()), normaliser: Array2::zeros(blank.dim()) };
+        for Pointing { source, gridded, exact, .. } in &mut self.pointings {
+            let mut modelled = Watched::new(source.as_mut(), |block: &mut Block| {
+                rows(block.rows() as u64);
+                // one component: the direct sum is the cheap way, and it has no error to add
+                exact.predict_exactly(&sky, block);
+                Ok(())
+            });
+            gridded.adjoint(&mut modelled, &mut of_unit)?;
+        }
+        let mut psf = of_unit.numerator;
+        ndarray::Zip::from(&mut psf).and(&sums.normaliser).and(blank).for_each(|value, &w, &b| {
+            *value = if b.is_nan() { f64::NAN } else { *value / w };
+        });
+        Ok(psf)
+    }
+}
