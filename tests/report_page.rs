@@ -98,13 +98,13 @@ fn page_is_whole_and_self_contained() {
         "promised 1e-4",
         "3.1e-5 (N)",
         "123 µJy/beam",
-        "2.52′ × 98.4″",
+        "2.52′ × 1.64′",
         "data:image/png;base64,iVBORw==",
         "moss-2",
-        "1\u{2009}209\u{2009}600",
+        "1\u{202f}209\u{202f}600",
         "airy, 13 m",
         "WM01, WM02",
-        "91\u{2009}000 combinations",
+        "91\u{202f}000 combinations",
         "12.7 s",
         "812 kB",
         "0123456789abcdef0123456789abcdef0123456789abcdef0123456789abcdef",
@@ -157,11 +157,11 @@ fn summary_is_short_and_says_where_to_look() {
     assert_eq!(
         lines[0],
         "Wether Moss & <the> \"north\" field: 480 × 400 pixels of 24.8″ from 2 pointings, \
-         1\u{2009}210\u{2009}000 visibilities (800 more were flagged)"
+         1\u{202f}210\u{202f}000 visibilities (800 more were flagged)"
     );
     assert_eq!(lines[1], "accuracy   promised 1e-4, measured 3.1e-5 (N) and 2.2e-5 (W): kept");
     assert_eq!(lines[2], "noise      123 µJy/beam at its lowest, thermal only");
-    assert_eq!(lines[3], "beam       2.52′ × 98.4″ at position angle −31.2°");
+    assert_eq!(lines[3], "beam       2.52′ × 1.64′ at position angle −31.2°");
     assert_eq!(lines[4], "time       13.0 s on 2 threads");
     assert_eq!(lines[5], "look first moss-out/report.html");
     assert_eq!(lines.len(), 6);

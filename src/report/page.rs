@@ -5,7 +5,8 @@
 
 use super::record::RunRecord;
 use super::summary::{
-    accuracy_line, arcsec, broken_promise, bytes, digits, duration, flux, scientific, summary_sentence, thousands,
+    accuracy_line, arcsec, broken_promise, bytes, digits, duration, flux, scientific, sizes, summary_sentence,
+    thousands,
 };
 use super::whole_file::{WriteError, write_whole};
 use base64::Engine;
@@ -87,9 +88,10 @@ pub fn render_page(record: &RunRecord, pictures: &[PagePicture]) -> Result<Strin
     let sentence = summary_sentence(record);
     let accuracy: Option<String> = record.accuracy.as_ref().map(accuracy_line);
     let broken = broken_promise(record);
+    let beam_sizes: Option<String> = record.beam.as_ref().map(sizes);
     let limits: Vec<String> = limits.into_iter().map(str::to_string).collect();
     let page = environment.get_template("page.html")?.render(context! {
-        r => figures, sentence, accuracy, broken, pictures, settings, limits, total, longest
+        r => figures, sentence, accuracy, broken, beam_sizes, pictures, settings, limits, total, longest
     })?;
     Ok(page)
 }

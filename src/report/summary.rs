@@ -1,7 +1,6 @@
 //! The closing summary: what a person reads in ten seconds, and the same as one JSON object.
 
-use super::record::{Accuracy, RunRecord};
-use std::fmt::Write;
+use super::record::{Accuracy, BeamFigures, RunRecord};
 
 /// The closing summary in plain text, without a newline at the end.
 pub fn summary_text(record: &RunRecord, folder: &str) -> String {
@@ -23,9 +22,8 @@ pub fn summary_text(record: &RunRecord, folder: &str) -> String {
         push(
             &mut text,
             &format!(
-                "beam       {} × {} at position angle {}°",
-                arcsec(beam.major_arcsec),
-                arcsec(beam.minor_arcsec),
+                "beam       {} at position angle {}°",
+                sizes(beam),
                 format!("{:.1}", beam.position_angle_deg).replace('-', "−")
             ),
         );
@@ -52,11 +50,12 @@ pub fn summary_json(record: &RunRecord, folder: &str) -> serde_json::Value {
     serde_json::Value::Object(object)
 }
 
-/// One sentence: what was made of what.
+/// One sentence without the title: what was made of what. Empty when nothing was.
 pub fn summary_sentence(record: &RunRecord) -> String {
-    let mut sentence = made(record);
-    sentence.push('.');
-    sentence
+    match what(record) {
+        text if text.is_empty() => text,
+        text => format!("{text}."),
+    }
 }
 
 /// The warning for an accuracy outside the promise, or `None`.
@@ -82,26 +81,28 @@ pub(super) fn accuracy_line(accuracy: &Accuracy) -> String {
 }
 
 fn made(record: &RunRecord) -> String {
+    let title = if record.title.is_empty() { "untitled run" } else { &record.title };
+    match what(record) {
+        text if text.is_empty() => title.to_string(),
+        text => format!("{title}: {text}"),
+    }
+}
+
+fn what(record: &RunRecord) -> String {
     let used: u64 = record.pointings.iter().map(|p| p.visibilities_used).sum();
     let flagged: u64 = record.pointings.iter().map(|p| p.visibilities_flagged).sum();
-    let title = if record.title.is_empty() { "untitled run" } else { &record.title };
-    let mut text = title.to_string();
+    let mut parts = Vec::new();
     if let Some(image) = &record.image {
-        let _ = write!(text, ": {} × {} pixels of {}", image.width_px, image.height_px, arcsec(image.pixel_arcsec));
+        parts.push(format!("{} × {} pixels of {}", image.width_px, image.height_px, arcsec(image.pixel_arcsec)));
     }
     if !record.pointings.is_empty() {
         let pointings = record.pointings.len();
-        let _ = write!(
-            text,
-            " from {pointings} pointing{}, {} visibilities",
-            if pointings == 1 { "" } else { "s" },
-            thousands(used)
-        );
-        if flagged > 0 {
-            let _ = write!(text, " ({} more were flagged)", thousands(flagged));
-        }
+        let plural = if pointings == 1 { "" } else { "s" };
+        let left_out =
+            if flagged > 0 { format!(" ({} more were flagged)", thousands(flagged)) } else { String::new() };
+        parts.push(format!("from {pointings} pointing{plural}, {} visibilities{left_out}", thousands(used)));
     }
-    text
+    parts.join(" ")
 }
 
 fn look_first(record: &RunRecord) -> Option<&str> {
@@ -148,6 +149,12 @@ pub(super) fn arcsec(angle: f64) -> String {
     super::picture::readable_angle((angle / 3600.0).to_radians())
 }
 
+/// The sizes of a beam in one unit.
+pub(super) fn sizes(beam: &BeamFigures) -> String {
+    let radians = |arcsec: f64| (arcsec / 3600.0).to_radians();
+    super::picture::readable_sizes(radians(beam.major_arcsec), radians(beam.minor_arcsec))
+}
+
 /// Three significant digits.
 pub(super) fn digits(value: f64) -> String {
     if value == 0.0 || !value.is_finite() {
@@ -163,7 +170,7 @@ pub(super) fn thousands(count: u64) -> String {
     let mut text = String::new();
     for (i, digit) in plain.chars().enumerate() {
         if i > 0 && (plain.len() - i).is_multiple_of(3) {
-            text.push('\u{2009}');
+            text.push('\u{202f}');
         }
         text.push(digit);
     }
@@ -202,7 +209,7 @@ mod tests {
         assert_eq!(scientific(f64::NAN), "not a number");
         assert_eq!(flux(0.000_123_4), "123 µJy/beam");
         assert_eq!(flux(0.0456), "45.6 mJy/beam");
-        assert_eq!(thousands(1_234_567), "1\u{2009}234\u{2009}567");
+        assert_eq!(thousands(1_234_567), "1\u{202f}234\u{202f}567");
         assert_eq!(thousands(12), "12");
         assert_eq!(duration(0.01), "10 ms");
         assert_eq!(duration(21.34), "21.3 s");

@@ -327,11 +327,9 @@ impl Bar {
 fn small_print(spec: &PictureSpec, zoom: &Zoom, scale: &Scale, has_blank: bool) -> String {
     let mut parts = Vec::new();
     if let Some(beam) = &spec.beam {
-        let arcsec = |angle: f64| readable_angle(angle);
         parts.push(format!(
-            "Beam {} × {}, position angle {}°.",
-            arcsec(beam.major),
-            arcsec(beam.minor),
+            "Beam {}, position angle {}°.",
+            readable_sizes(beam.major, beam.minor),
             format!("{:.1}", beam.position_angle.to_degrees()).replace('-', "−")
         ));
     }
@@ -355,15 +353,29 @@ fn small_print(spec: &PictureSpec, zoom: &Zoom, scale: &Scale, has_blank: bool) 
 
 /// An angle in the unit that keeps it between 1 and 100 or so, with three significant digits.
 pub fn readable_angle(radians: f64) -> String {
-    let arcsec = radians.to_degrees() * 3600.0;
-    let (value, unit) = match arcsec {
-        a if a < 0.1 => (a * 1000.0, " mas"),
-        a if a < 100.0 => (a, "″"),
-        a if a < 6000.0 => (a / 60.0, "′"),
-        a => (a / 3600.0, "°"),
-    };
+    let (per_radian, unit) = readable_unit(radians);
+    format!("{}{unit}", three_digits(radians * per_radian))
+}
+
+/// The sizes of an ellipse, both in the unit that suits the larger.
+pub fn readable_sizes(major: f64, minor: f64) -> String {
+    let (per_radian, unit) = readable_unit(major);
+    format!("{}{unit} × {}{unit}", three_digits(major * per_radian), three_digits(minor * per_radian))
+}
+
+fn readable_unit(radians: f64) -> (f64, &'static str) {
+    let per_radian = 1f64.to_degrees() * 3600.0;
+    match radians * per_radian {
+        a if a < 0.1 => (per_radian * 1000.0, " mas"),
+        a if a < 100.0 => (per_radian, "″"),
+        a if a < 6000.0 => (per_radian / 60.0, "′"),
+        _ => (per_radian / 3600.0, "°"),
+    }
+}
+
+fn three_digits(value: f64) -> String {
     let decimals = (2 - value.abs().max(1e-3).log10().floor() as i32).clamp(0, 4) as usize;
-    format!("{value:.decimals$}{unit}")
+    format!("{value:.decimals$}")
 }
 
 /// The line cut with an ellipsis where it would run over.

@@ -16,7 +16,7 @@ pub use canvas::{Canvas, Rgb};
 pub use colours::ColourMap;
 pub use graticule::{Coordinate, Edge, Frame, Graticule, InnerLabel, LabelRoom, Tick, graticule};
 pub use layout::paint;
-pub(super) use layout::readable_angle;
+pub(super) use layout::{readable_angle, readable_sizes};
 pub use scale::{BarNumbers, Scale, Stretch};
 
 use super::whole_file::{WriteError, write_whole};
