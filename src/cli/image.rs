@@ -215,7 +215,9 @@ impl Making<'_> {
         let beam = match fit_beam(psf.view(), reference, geometry.pixel) {
             Ok(beam) => Some(beam),
             Err(error) => {
-                self.record.warnings.push(format!("no beam could be fitted, BMAJ, BMIN and BPA are absent: {error}"));
+                self.record
+                    .warnings
+                    .push(format!("no beam could be fitted, BMAJ, BMIN and BPA are absent: {error}"));
                 None
             }
         };
@@ -235,7 +237,8 @@ impl Making<'_> {
                 check.pixels,
             );
             if !accuracy.kept {
-                self.record.warnings.push(format!(
+                // the page and the summary say it from the record; this says it whatever is quiet
+                self.progress.warn(&format!(
                     "THE PROMISED ACCURACY WAS NOT KEPT: promised {tolerance:e}, measured {:.1e} for the numerator and \
                      {:.1e} for the normaliser. Do not use these images; please report this run file",
                     check.numerator_error, check.normaliser_error

@@ -143,8 +143,13 @@ impl Mosaic {
         blank: &Array2<f64>,
         mut rows: impl FnMut(u64) + Send,
     ) -> Result<Array2<f64>, ResponseError> {
-        let source =
-            Component { name: "unit".to_owned(), direction: place, flux_jy: 1.0, reference_hz: 1.0, spectral_index: 0.0 };
+        let source = Component {
+            name: "unit".to_owned(),
+            direction: place,
+            flux_jy: 1.0,
+            reference_hz: 1.0,
+            spectral_index: 0.0,
+        };
         let sky = [source];
         let mut of_unit = Sums { numerator: Array2::zeros(blank.dim()), normaliser: Array2::zeros(blank.dim()) };
         for Pointing { source, gridded, exact, .. } in &mut self.pointings {

@@ -1,7 +1,7 @@
 //! The promise, measured: gridded against exact sums on a sample of a run's own visibilities and pixels.
 
-use super::mosaic::Pointing;
 use super::Mosaic;
+use super::mosaic::Pointing;
 use crate::observation::{Block, BlockSource, Observation, ObservationError};
 use crate::response::{Response, ResponseError, Sums};
 use crate::sky::Direction;
@@ -79,7 +79,13 @@ pub fn self_check(mosaic: &mut Mosaic, sums: &Sums, seed: u64) -> Result<Option<
         size[1] += w * w;
     }
     let relative = |i: usize| if size[i] > 0.0 { f64::sqrt(error[i] / size[i]) } else { 0.0 };
-    Ok(Some(SelfCheck { numerator_error: relative(0), normaliser_error: relative(1), visibilities, pixels, complete }))
+    Ok(Some(SelfCheck {
+        numerator_error: relative(0),
+        normaliser_error: relative(1),
+        visibilities,
+        pixels,
+        complete,
+    }))
 }
 
 /// A source with a random share of its rows, the same in every pass.

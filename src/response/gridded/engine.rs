@@ -16,7 +16,7 @@ use crate::response::ResponseError;
 use crate::response::rows::{Intensity, Recentre, Seen, cis_turns, wavelengths_per_metre};
 use crate::response::window::{PolynomialWindow, Window, locate};
 use crate::sky::{Component, ImageGeometry};
-use ndarray::{Array2, LinalgScalar};
+use ndarray::{Array2, Axis, LinalgScalar, s};
 use num_complex::{Complex, Complex32, Complex64};
 use rayon::prelude::*;
 
@@ -536,25 +536,26 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
                     }
                 }
             });
-            sum.par_iter_mut().enumerate().for_each(|(at, sum)| {
+            sum.par_chunks_mut(4096).enumerate().for_each(|(chunk, sum)| {
                 for image in &images {
-                    *sum = *sum + image[at];
+                    sum.iter_mut().zip(&image[chunk * 4096..]).for_each(|(sum, &z)| *sum = *sum + z);
                 }
             });
         }
         let w = self.plan.layers.w(task.layer);
         let (x0, y0) = self.plan.patch.origin;
-        for y in 0..ny {
-            for x in 0..nx {
+        let mut window = numerator.slice_mut(s![y0..y0 + ny, x0..x0 + nx]);
+        window.axis_iter_mut(Axis(0)).into_par_iter().enumerate().for_each(|(y, mut row)| {
+            for (x, out) in row.iter_mut().enumerate() {
                 let at = y * nx + x;
                 if !self.mask[at] {
                     continue;
                 }
                 let z = Complex64::new(double(sum[at].re), double(sum[at].im));
                 let value = if self.plan.layers.bends { (z * cis_turns(w * self.bend[at])).re } else { z.re };
-                numerator[[y0 + y, x0 + x]] += value * self.taper.0[x] * self.taper.1[y];
+                *out += value * self.taper.0[x] * self.taper.1[y];
             }
-        }
+        });
     }
 
     fn finish_powers(&self, partition: &Partition, powers: &[[f64; POWER_LANES]], normaliser: &mut Array2<f64>) {

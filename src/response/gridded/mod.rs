@@ -18,6 +18,7 @@ mod family;
 mod offgrid;
 mod patch;
 mod plan;
+mod register;
 mod smooth;
 mod survey;
 mod terms;

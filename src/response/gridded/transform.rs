@@ -62,6 +62,15 @@ pub(crate) struct Transform<T: GridReal> {
     size: (usize, usize),
     to_sky: (Arc<dyn Fft<T>>, Arc<dyn Fft<T>>),
     to_grid: (Arc<dyn Fft<T>>, Arc<dyn Fft<T>>),
+    /// Index in the transform of every stored column and row, and of every pixel column and row.
+    at: Places,
+}
+
+struct Places {
+    columns: Vec<usize>,
+    rows: Vec<usize>,
+    xs: Vec<usize>,
+    ys: Vec<usize>,
 }
 
 /// Index in a transform of length `n` of a signed position.
@@ -72,25 +81,25 @@ fn wrap(position: i64, n: usize) -> usize {
 impl<T: GridReal> Transform<T> {
     pub(crate) fn new(shape: GridShape, size: (usize, usize)) -> Self {
         let mut planner = FftPlanner::new();
+        let stored = |count: usize, origin: usize, n: usize| -> Vec<usize> {
+            (0..count).map(|i| wrap(i as i64 - origin as i64, n)).collect()
+        };
+        let pixels = |size: usize, n: usize| -> Vec<usize> {
+            (0..size).map(|i| wrap(i as i64 + Patch::span(size).0 as i64, n)).collect()
+        };
+        let at = Places {
+            columns: stored(shape.width, shape.origin.0, shape.fft.0),
+            rows: stored(shape.height, shape.origin.1, shape.fft.1),
+            xs: pixels(size.0, shape.fft.0),
+            ys: pixels(size.1, shape.fft.1),
+        };
         Transform {
+            at,
             shape,
             size,
             to_sky: (planner.plan_fft_inverse(shape.fft.0), planner.plan_fft_inverse(shape.fft.1)),
             to_grid: (planner.plan_fft_forward(shape.fft.0), planner.plan_fft_forward(shape.fft.1)),
         }
-    }
-
-    fn column_index(&self, column: usize) -> usize {
-        wrap(column as i64 - self.shape.origin.0 as i64, self.shape.fft.0)
-    }
-
-    fn row_index(&self, row: usize) -> usize {
-        wrap(row as i64 - self.shape.origin.1 as i64, self.shape.fft.1)
-    }
-
-    /// Index in the transform of a pixel of the patch.
-    fn pixel_index(pixel: usize, size: usize, n: usize) -> usize {
-        wrap(pixel as i64 + Patch::span(size).0 as i64, n)
     }
 
     /// The patch images of the first `terms` terms of a grid, `[term][y][x]`; not yet divided by the window's transform.
@@ -103,17 +112,16 @@ impl<T: GridReal> Transform<T> {
             || (vec![zero; gx * terms], vec![zero; self.to_sky.0.get_inplace_scratch_len()]),
             |(buffer, scratch), (out, cells)| {
                 buffer.fill(zero);
-                for (column, cell) in cells.iter().enumerate() {
-                    let at = self.column_index(column);
+                for (cell, &at) in cells.iter().zip(&self.at.columns) {
                     for term in 0..terms {
                         let entry = &mut buffer[term * gx + at];
                         *entry = *entry + Complex::new(cell[term], cell[term + LANES]);
                     }
                 }
                 self.to_sky.0.process_with_scratch(buffer, scratch);
-                for term in 0..terms {
-                    for x in 0..nx {
-                        out[term * nx + x] = buffer[term * gx + Self::pixel_index(x, nx, gx)];
+                for (out, line) in out.chunks_exact_mut(nx).zip(buffer.chunks_exact(gx)) {
+                    for (out, &at) in out.iter_mut().zip(&self.at.xs) {
+                        *out = line[at];
                     }
                 }
             },
@@ -127,8 +135,7 @@ impl<T: GridReal> Transform<T> {
                 for start in (0..nx).step_by(STRIP) {
                     let count = STRIP.min(nx - start);
                     buffer.fill(zero);
-                    for row in 0..self.shape.height {
-                        let at = self.row_index(row);
+                    for (row, &at) in self.at.rows.iter().enumerate() {
                         let line = &rows[(row * terms + term) * nx + start..][..count];
                         for (c, &value) in line.iter().enumerate() {
                             let entry = &mut buffer[c * gy + at];
@@ -136,10 +143,9 @@ impl<T: GridReal> Transform<T> {
                         }
                     }
                     self.to_sky.1.process_with_scratch(&mut buffer[..count * gy], &mut scratch);
-                    for y in 0..ny {
-                        let at = Self::pixel_index(y, ny, gy);
-                        for c in 0..count {
-                            image[y * nx + start + c] = buffer[c * gy + at];
+                    for (line, &at) in image.chunks_exact_mut(nx).zip(&self.at.ys) {
+                        for (c, out) in line[start..start + count].iter_mut().enumerate() {
+                            *out = buffer[c * gy + at];
                         }
                     }
                 }
@@ -163,17 +169,15 @@ impl<T: GridReal> Transform<T> {
                 for start in (0..nx).step_by(STRIP) {
                     let count = STRIP.min(nx - start);
                     buffer.fill(zero);
-                    for y in 0..ny {
-                        let at = Self::pixel_index(y, ny, gy);
-                        for c in 0..count {
-                            buffer[c * gy + at] = image[y * nx + start + c];
+                    for (line, &at) in image.chunks_exact(nx).zip(&self.at.ys) {
+                        for (c, &value) in line[start..start + count].iter().enumerate() {
+                            buffer[c * gy + at] = value;
                         }
                     }
                     self.to_grid.1.process_with_scratch(&mut buffer[..count * gy], &mut scratch);
-                    for row in 0..self.shape.height {
-                        let at = self.row_index(row);
-                        for c in 0..count {
-                            out[row * nx + start + c] = buffer[c * gy + at];
+                    for (line, &at) in out.chunks_exact_mut(nx).zip(&self.at.rows) {
+                        for (c, out) in line[start..start + count].iter_mut().enumerate() {
+                            *out = buffer[c * gy + at];
                         }
                     }
                 }
@@ -184,14 +188,13 @@ impl<T: GridReal> Transform<T> {
             || (vec![zero; gx * terms], vec![zero; self.to_grid.0.get_inplace_scratch_len()]),
             |(buffer, scratch), (row, cells)| {
                 buffer.fill(zero);
-                for (term, columns) in columns.iter().enumerate() {
-                    for x in 0..nx {
-                        buffer[term * gx + Self::pixel_index(x, nx, gx)] = columns[row * nx + x];
+                for (line, columns) in buffer.chunks_exact_mut(gx).zip(&columns) {
+                    for (&value, &at) in columns[row * nx..(row + 1) * nx].iter().zip(&self.at.xs) {
+                        line[at] = value;
                     }
                 }
                 self.to_grid.0.process_with_scratch(buffer, scratch);
-                for (column, cell) in cells.iter_mut().enumerate() {
-                    let at = self.column_index(column);
+                for (cell, &at) in cells.iter_mut().zip(&self.at.columns) {
                     *cell = [T::zero(); 2 * LANES];
                     for term in 0..terms {
                         let value = buffer[term * gx + at];

@@ -4,9 +4,14 @@
 //! register of AVX-512 or two of AVX2. The same body is compiled for each instruction set and chosen at run time, since
 //! released binaries are built for plain x86-64, where a fused multiply-add is a library call.
 //!
-//! This is the only file with `unsafe`: calls of functions compiled for instructions whose presence was just checked.
+//! The sums over cells are written on whole registers ([`super::register`]): left to itself, the compiler vectorises
+//! them across cells, with scattered loads, and is ten times slower.
+//!
+//! `unsafe` here: calls of functions compiled for instructions whose presence was just checked.
 
 #![allow(unsafe_code)]
+
+use super::register::{Plain, Register};
 
 use crate::response::window::{MAX_TAPS, PolynomialWindow, Real};
 
@@ -22,6 +27,12 @@ pub(crate) trait GridReal: Real + rustfft::FftNum {
     const COS: &'static [f64];
     /// Coefficients of sin(2πt)/t in t², constant first, for |t| ≤ 1/4.
     const SIN: &'static [f64];
+    /// A cell in AVX2 registers.
+    #[cfg(target_arch = "x86_64")]
+    type Avx2: Register<Self>;
+    /// A cell in AVX-512 registers.
+    #[cfg(target_arch = "x86_64")]
+    type Avx512: Register<Self>;
 }
 
 /// A number in the grid's precision.
@@ -57,11 +68,19 @@ const COS_DOUBLE: [f64; 12] = taylor(false);
 const SIN_DOUBLE: [f64; 12] = taylor(true);
 
 impl GridReal for f32 {
+    #[cfg(target_arch = "x86_64")]
+    type Avx2 = super::register::SingleAvx2;
+    #[cfg(target_arch = "x86_64")]
+    type Avx512 = super::register::SingleAvx512;
     const COS: &'static [f64] = &COS_SINGLE;
     const SIN: &'static [f64] = &SIN_SINGLE;
 }
 
 impl GridReal for f64 {
+    #[cfg(target_arch = "x86_64")]
+    type Avx2 = super::register::DoubleAvx2;
+    #[cfg(target_arch = "x86_64")]
+    type Avx512 = super::register::DoubleAvx512;
     const COS: &'static [f64] = &COS_DOUBLE;
     const SIN: &'static [f64] = &SIN_DOUBLE;
 }
@@ -162,11 +181,13 @@ fn window_taps<T: GridReal, const FUSED: bool>(window: &PolynomialWindow<T>, f: 
 }
 
 #[inline(always)]
-fn spread_body<T: GridReal, const W: usize, const FUSED: bool>(
+fn spread_body<T: GridReal, R: Register<T>, const W: usize, const FUSED: bool>(
     samples: &[Sample<T>],
     lane: &Lane<T>,
     grid: &mut [Cell<T>],
 ) {
+    // a support of 0 stands for any
+    let support = if W == 0 { lane.window.support() } else { W };
     for sample in samples {
         let m = coefficients::<T, FUSED>(sample, lane);
         let mut value = [T::default(); 2 * LANES];
@@ -174,18 +195,14 @@ fn spread_body<T: GridReal, const W: usize, const FUSED: bool>(
             value[j] = m[j] * sample.re - m[j + LANES] * sample.im;
             value[j + LANES] = fma::<T, FUSED>(m[j], sample.im, m[j + LANES] * sample.re);
         }
+        let value = R::load(&value);
         let across = window_taps::<T, FUSED>(lane.window, sample.fx);
         let down = window_taps::<T, FUSED>(lane.window, sample.fy);
         let mut start = sample.cell as usize;
-        for y in 0..W {
-            let mut line = value;
-            for v in &mut line {
-                *v = *v * down[y];
-            }
-            for (cell, &tap) in grid[start..start + W].iter_mut().zip(&across[..W]) {
-                for (cell, &v) in cell.iter_mut().zip(&line) {
-                    *cell = fma::<T, FUSED>(v, tap, *cell);
-                }
+        for &tap in &down[..support] {
+            let line = value.times(tap);
+            for (cell, &tap) in grid[start..start + support].iter_mut().zip(&across[..support]) {
+                line.times_plus(tap, R::load(cell)).store(cell);
             }
             start += lane.width;
         }
@@ -193,29 +210,29 @@ fn spread_body<T: GridReal, const W: usize, const FUSED: bool>(
 }
 
 #[inline(always)]
-fn gather_body<T: GridReal, const W: usize, const FUSED: bool>(
+fn gather_body<T: GridReal, R: Register<T>, const W: usize, const FUSED: bool>(
     samples: &[Sample<T>],
     lane: &Lane<T>,
     grid: &[Cell<T>],
     out: &mut [[f64; 2]],
 ) {
+    let support = if W == 0 { lane.window.support() } else { W };
     for (sample, out) in samples.iter().zip(out) {
         let across = window_taps::<T, FUSED>(lane.window, sample.fx);
         let down = window_taps::<T, FUSED>(lane.window, sample.fy);
-        let mut value = [T::default(); 2 * LANES];
+        let zero = [T::default(); 2 * LANES];
+        let mut sum = R::load(&zero);
         let mut start = sample.cell as usize;
-        for y in 0..W {
-            let mut line = [T::default(); 2 * LANES];
-            for (cell, &tap) in grid[start..start + W].iter().zip(&across[..W]) {
-                for (line, &cell) in line.iter_mut().zip(cell) {
-                    *line = fma::<T, FUSED>(cell, tap, *line);
-                }
+        for &tap in &down[..support] {
+            let mut line = R::load(&zero);
+            for (cell, &tap) in grid[start..start + support].iter().zip(&across[..support]) {
+                line = R::load(cell).times_plus(tap, line);
             }
-            for (value, &line) in value.iter_mut().zip(&line) {
-                *value = fma::<T, FUSED>(line, down[y], *value);
-            }
+            sum = line.times_plus(tap, sum);
             start += lane.width;
         }
+        let mut value = zero;
+        sum.store(&mut value);
         let m = coefficients::<T, FUSED>(sample, lane);
         // Σ conj(m) · value
         let (mut re, mut im) = (0.0, 0.0);
@@ -241,7 +258,7 @@ pub(crate) struct Share<T> {
 }
 
 #[inline(always)]
-fn accumulate_body<T: Real, const FUSED: bool>(
+fn accumulate_body<T: GridReal, R: Register<T>>(
     shares: &[Share<T>],
     table: &[Cell<T>],
     offset: u32,
@@ -249,15 +266,15 @@ fn accumulate_body<T: Real, const FUSED: bool>(
 ) {
     // short runs in T, their sums in double precision
     for run in shares.chunks(64) {
-        let mut sum = [T::default(); 2 * LANES];
+        let mut sum = R::load(&[T::default(); 2 * LANES]);
         for share in run {
             let (p, q) = (&table[(share.p + offset) as usize], &table[(share.q + offset) as usize]);
-            for j in 0..2 * LANES {
-                sum[j] = fma::<T, FUSED>(p[j] * share.weight, q[j], sum[j]);
-            }
+            sum = R::load(p).times(share.weight).product_plus(R::load(q), sum);
         }
-        for (out, sum) in out.iter_mut().zip(&sum) {
-            *out += double(*sum);
+        let mut total = [T::default(); 2 * LANES];
+        sum.store(&mut total);
+        for (out, total) in out.iter_mut().zip(&total) {
+            *out += double(*total);
         }
     }
 }
@@ -310,25 +327,20 @@ impl Instructions {
     }
 }
 
+/// Calls a body compiled for the window's support; rare supports share one.
 macro_rules! by_support {
-    ($body:ident, $fused:literal, $window:expr, ($($arg:expr),*)) => {
+    ($body:ident, $register:ty, $window:expr, ($($arg:expr),*)) => {
         match $window.support() {
-            1 => $body::<T, 1, $fused>($($arg),*),
-            2 => $body::<T, 2, $fused>($($arg),*),
-            3 => $body::<T, 3, $fused>($($arg),*),
-            4 => $body::<T, 4, $fused>($($arg),*),
-            5 => $body::<T, 5, $fused>($($arg),*),
-            6 => $body::<T, 6, $fused>($($arg),*),
-            7 => $body::<T, 7, $fused>($($arg),*),
-            8 => $body::<T, 8, $fused>($($arg),*),
-            9 => $body::<T, 9, $fused>($($arg),*),
-            10 => $body::<T, 10, $fused>($($arg),*),
-            11 => $body::<T, 11, $fused>($($arg),*),
-            12 => $body::<T, 12, $fused>($($arg),*),
-            13 => $body::<T, 13, $fused>($($arg),*),
-            14 => $body::<T, 14, $fused>($($arg),*),
-            15 => $body::<T, 15, $fused>($($arg),*),
-            _ => $body::<T, 16, $fused>($($arg),*),
+            4 => $body::<T, $register, 4, true>($($arg),*),
+            5 => $body::<T, $register, 5, true>($($arg),*),
+            6 => $body::<T, $register, 6, true>($($arg),*),
+            7 => $body::<T, $register, 7, true>($($arg),*),
+            8 => $body::<T, $register, 8, true>($($arg),*),
+            9 => $body::<T, $register, 9, true>($($arg),*),
+            10 => $body::<T, $register, 10, true>($($arg),*),
+            11 => $body::<T, $register, 11, true>($($arg),*),
+            12 => $body::<T, $register, 12, true>($($arg),*),
+            _ => $body::<T, $register, 0, true>($($arg),*),
         }
     };
 }
@@ -339,32 +351,32 @@ mod compiled {
 
     #[target_feature(enable = "avx2,fma")]
     pub(super) fn spread_avx2<T: GridReal>(samples: &[Sample<T>], lane: &Lane<T>, grid: &mut [Cell<T>]) {
-        by_support!(spread_body, true, lane.window, (samples, lane, grid))
+        by_support!(spread_body, T::Avx2, lane.window, (samples, lane, grid))
     }
 
     #[target_feature(enable = "avx512f,avx512vl,avx512dq,avx2,fma")]
     pub(super) fn spread_avx512<T: GridReal>(samples: &[Sample<T>], lane: &Lane<T>, grid: &mut [Cell<T>]) {
-        by_support!(spread_body, true, lane.window, (samples, lane, grid))
+        by_support!(spread_body, T::Avx512, lane.window, (samples, lane, grid))
     }
 
     #[target_feature(enable = "avx2,fma")]
-    pub(super) fn accumulate_avx2<T: Real>(
+    pub(super) fn accumulate_avx2<T: GridReal>(
         shares: &[Share<T>],
         table: &[Cell<T>],
         offset: u32,
         out: &mut [f64; 16],
     ) {
-        accumulate_body::<T, true>(shares, table, offset, out);
+        accumulate_body::<T, T::Avx2>(shares, table, offset, out);
     }
 
     #[target_feature(enable = "avx512f,avx512vl,avx512dq,avx2,fma")]
-    pub(super) fn accumulate_avx512<T: Real>(
+    pub(super) fn accumulate_avx512<T: GridReal>(
         shares: &[Share<T>],
         table: &[Cell<T>],
         offset: u32,
         out: &mut [f64; 16],
     ) {
-        accumulate_body::<T, true>(shares, table, offset, out);
+        accumulate_body::<T, T::Avx512>(shares, table, offset, out);
     }
 
     #[target_feature(enable = "avx2,fma")]
@@ -374,7 +386,7 @@ mod compiled {
         grid: &[Cell<T>],
         out: &mut [[f64; 2]],
     ) {
-        by_support!(gather_body, true, lane.window, (samples, lane, grid, out))
+        by_support!(gather_body, T::Avx2, lane.window, (samples, lane, grid, out))
     }
 
     #[target_feature(enable = "avx512f,avx512vl,avx512dq,avx2,fma")]
@@ -384,14 +396,14 @@ mod compiled {
         grid: &[Cell<T>],
         out: &mut [[f64; 2]],
     ) {
-        by_support!(gather_body, true, lane.window, (samples, lane, grid, out))
+        by_support!(gather_body, T::Avx512, lane.window, (samples, lane, grid, out))
     }
 }
 
 /// Adds `samples` times their kernel coefficients to the grid of one block of terms.
 pub(crate) fn spread<T: GridReal>(with: Instructions, samples: &[Sample<T>], lane: &Lane<T>, grid: &mut [Cell<T>]) {
     match with {
-        Instructions::Plain => by_support!(spread_body, false, lane.window, (samples, lane, grid)),
+        Instructions::Plain => spread_body::<T, Plain<T>, 0, false>(samples, lane, grid),
         #[cfg(target_arch = "x86_64")]
         // SAFETY: `Instructions` other than Plain come from `detect`, which checked these features.
         Instructions::Avx2 => unsafe { compiled::spread_avx2(samples, lane, grid) },
@@ -399,7 +411,7 @@ pub(crate) fn spread<T: GridReal>(with: Instructions, samples: &[Sample<T>], lan
         // SAFETY: as above.
         Instructions::Avx512 => unsafe { compiled::spread_avx512(samples, lane, grid) },
         #[cfg(not(target_arch = "x86_64"))]
-        _ => by_support!(spread_body, false, lane.window, (samples, lane, grid)),
+        _ => spread_body::<T, Plain<T>, 0, false>(samples, lane, grid),
     }
 }
 
@@ -412,7 +424,7 @@ pub(crate) fn gather<T: GridReal>(
     out: &mut [[f64; 2]],
 ) {
     match with {
-        Instructions::Plain => by_support!(gather_body, false, lane.window, (samples, lane, grid, out)),
+        Instructions::Plain => gather_body::<T, Plain<T>, 0, false>(samples, lane, grid, out),
         #[cfg(target_arch = "x86_64")]
         // SAFETY: `Instructions` other than Plain come from `detect`, which checked these features.
         Instructions::Avx2 => unsafe { compiled::gather_avx2(samples, lane, grid, out) },
@@ -420,12 +432,12 @@ pub(crate) fn gather<T: GridReal>(
         // SAFETY: as above.
         Instructions::Avx512 => unsafe { compiled::gather_avx512(samples, lane, grid, out) },
         #[cfg(not(target_arch = "x86_64"))]
-        _ => by_support!(gather_body, false, lane.window, (samples, lane, grid, out)),
+        _ => gather_body::<T, Plain<T>, 0, false>(samples, lane, grid, out),
     }
 }
 
 /// Adds to `out` the sums over `shares` of weight times the product of both stations' sixteen powers.
-pub(crate) fn accumulate<T: Real>(
+pub(crate) fn accumulate<T: GridReal>(
     with: Instructions,
     shares: &[Share<T>],
     table: &[Cell<T>],
@@ -433,7 +445,7 @@ pub(crate) fn accumulate<T: Real>(
     out: &mut [f64; 2 * LANES],
 ) {
     match with {
-        Instructions::Plain => accumulate_body::<T, false>(shares, table, offset, out),
+        Instructions::Plain => accumulate_body::<T, Plain<T>>(shares, table, offset, out),
         #[cfg(target_arch = "x86_64")]
         // SAFETY: `Instructions` other than Plain come from `detect`, which checked these features.
         Instructions::Avx2 => unsafe { compiled::accumulate_avx2(shares, table, offset, out) },
@@ -441,6 +453,6 @@ pub(crate) fn accumulate<T: Real>(
         // SAFETY: as above.
         Instructions::Avx512 => unsafe { compiled::accumulate_avx512(shares, table, offset, out) },
         #[cfg(not(target_arch = "x86_64"))]
-        _ => accumulate_body::<T, false>(shares, table, offset, out),
+        _ => accumulate_body::<T, Plain<T>>(shares, table, offset, out),
     }
 }
