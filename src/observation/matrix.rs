@@ -93,8 +93,9 @@ fn lone<'a>(axes: &'a [Axis], names: &[&str]) -> Result<Option<&'a Axis>, Compla
 
 impl Matrix {
     /// Understands the axes. The first must be COMPLEX; STOKES, FREQ and IF (or BAND) may come in any order; any other
-    /// must have length 1.
-    pub fn new(axes: &[Axis], offset: usize, kind: NumberKind) -> Result<Matrix, Complaint> {
+    /// must have length 1. The array must fill `bytes` from `offset`, which lie in the file: nothing is allocated before
+    /// that is known.
+    pub fn new(axes: &[Axis], offset: usize, bytes: usize, kind: NumberKind) -> Result<Matrix, Complaint> {
         let first = axes.first().ok_or_else(|| ("no axes".to_string(), "COMPLEX, STOKES, FREQ".to_string()))?;
         if first.name != "COMPLEX" {
             return Err((
@@ -142,6 +143,14 @@ impl Matrix {
                     "a smaller array".to_string(),
                 )
             })?;
+        }
+        let needed = stride.checked_mul(first.length).and_then(|n| n.checked_mul(kind.size()));
+        if needed != Some(bytes) {
+            let needed = needed.map_or("more bytes than a machine can count".to_string(), |n| format!("{n} bytes"));
+            return Err((
+                format!("a row has {bytes} bytes of data, but the axes ask for {needed}"),
+                "the same".into(),
+            ));
         }
         let hands = hands(stokes)?;
         let bands = band.map_or(1, |axis| axis.length);
@@ -203,6 +212,11 @@ impl Matrix {
         self.planes == 3 || self.weights.is_some()
     }
 
+    /// Whether weights come with the data and in a column too.
+    pub fn has_both_weights(&self) -> bool {
+        self.planes == 3 && self.weights.is_some()
+    }
+
     /// Channels of all bands.
     pub fn channels(&self) -> usize {
         self.bands * self.channels_per_band
@@ -213,9 +227,9 @@ impl Matrix {
         self.channels() * self.hands.len()
     }
 
-    /// Bytes of the array, and where it ends in the row.
-    pub fn end(&self) -> usize {
-        self.offset.saturating_add(self.cells().saturating_mul(self.planes * self.kind.size()))
+    /// Where it ends in the row.
+    fn end(&self) -> usize {
+        self.offset + self.cells() * self.planes * self.kind.size()
     }
 
     /// Whether rows can be turned to the other order of stations.

@@ -6,6 +6,8 @@ use crate::fits::{FitsFile, Hdu, Table};
 
 /// Station numbers above this are taken for damage.
 const LARGEST_NUMBER: f64 = 1e6;
+/// No array has as many stations.
+const MOST_STATIONS: u64 = 10_000;
 const NONE: u32 = u32::MAX;
 
 /// A station as its table gives it, before the axes are decided upon.
@@ -55,6 +57,10 @@ impl StationTables {
                     .push(format!("{}: UT1UTC = {} s is not believed; 0 is used", table.label, self.ut1_utc_s));
                 self.ut1_utc_s = 0.0;
             }
+        }
+        if table.rows > MOST_STATIONS {
+            let problem = format!("{}: {} stations", table.label, table.rows);
+            return Err(content(path, problem, format!("at most {MOST_STATIONS}")));
         }
         let number = hdu.version();
         if self.arrays.iter().any(|(n, _)| *n == number) {
