@@ -217,7 +217,7 @@ fn read_parts(path: &Path) -> Result<(), String> {
         match hdu.kind {
             HduKind::Image => drop(file.image_f64(n).map_err(|e| e.to_string())?),
             HduKind::BinaryTable => {
-                let table = Table::new(hdu).map_err(|e| e.to_string())?;
+                let table = Table::new(hdu).map_err(|e| e.at(path).to_string())?;
                 let visit = |_, row: &[u8]| {
                     table.columns.iter().for_each(|c| drop((c.number(row, 0), c.text(row))));
                     Ok(())
