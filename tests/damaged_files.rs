@@ -1,6 +1,6 @@
 //! More than 500 damaged files, seeded: each must give an error or a sane read. No panic, no hang, and memory bounded.
 //!
-//! Bound on memory, asserted for every file: 16 MiB + 32 × the length of the file. (Blocks are at most 64 MiB, but
+//! Bound on memory, asserted for every file: 16 MiB + 32 × the length of the file. (Blocks are at most 16 MiB, but
 //! never larger than the rows of the file ask for. 16 MiB: chunks of the file, and an index of station numbers up to
 //! a million. 32: one byte of a file becomes at most 6 bytes of visibilities and weights, twice for the pass that
 //! looks at the file first, and a card of 80 bytes becomes some 300.)

@@ -164,6 +164,7 @@ impl StationTables {
     }
 
     /// Index of a station by array and station number. Where there is only one table, every array uses it.
+    #[inline]
     pub fn index(&self, array: i64, number: f64) -> Option<u32> {
         if !((0.0..=LARGEST_NUMBER).contains(&number) && number.fract() == 0.0) {
             return None;
