@@ -10,7 +10,7 @@ use std::io::Write;
 use std::path::Path;
 use std::time::Instant;
 
-const PASSES: usize = 7;
+const PASSES: usize = 31;
 const STATIONS: usize = 32;
 
 /// A file of about `megabytes` with `channels` channels and two hands.
@@ -98,7 +98,7 @@ fn main() {
     for (what, channels) in [("wide rows, 128 channels × 2 hands", 128), ("narrow rows, 3 channels × 2 hands", 3)]
     {
         let path = folder.path().join("bench.uvfits");
-        let bytes = make(&path, 256, channels);
+        let bytes = make(&path, 64, channels);
         let mut source = open(&path, &Selection::All).expect("a sound file").remove(0);
         let from: Vec<u8> = vec![1; bytes as usize];
         let mut to: Vec<u8> = vec![0; bytes as usize];

@@ -166,13 +166,14 @@ impl StationTables {
     /// Index of a station by array and station number. Where there is only one table, every array uses it.
     #[inline]
     pub fn index(&self, array: i64, number: f64) -> Option<u32> {
-        if !((0.0..=LARGEST_NUMBER).contains(&number) && number.fract() == 0.0) {
+        let whole = number as u32; // saturates; NaN becomes 0 and is found below
+        if f64::from(whole) != number {
             return None;
         }
         let table = match &self.arrays[..] {
             [(_, only)] => only,
             several => &several.iter().find(|(n, _)| *n == array)?.1,
         };
-        table.get(number as usize).copied().filter(|index| *index != NONE)
+        table.get(whole as usize).copied().filter(|index| *index != NONE)
     }
 }
