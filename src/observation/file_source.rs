@@ -1,7 +1,7 @@
 //! Rows of a visibility file, handed out block by block, for random groups and FITS-IDI alike.
 
 use super::fields::Quantity;
-use super::matrix::Matrix;
+use super::matrix::{Matrix, Scratch};
 use super::open::content;
 use super::station_table::StationTables;
 use super::{Block, BlockSource, Observation, ObservationError, SPEED_OF_LIGHT};
@@ -92,6 +92,7 @@ pub(super) struct FileSource {
     /// Position: range, row.
     next: (usize, u64),
     raw: Vec<u8>,
+    scratch: Box<Scratch>,
     /// Source number of the first row, where the file has no source table to tell several apart.
     lone_source: Option<i64>,
     skipped: Skipped,
@@ -127,6 +128,7 @@ impl FileSource {
             block_rows,
             next,
             raw: Vec::new(),
+            scratch: Box::default(),
             lone_source: None,
             skipped: Skipped::default(),
             counted: false,
@@ -213,7 +215,7 @@ impl FileSource {
             return Ok(());
         }
         let start = block.weight.len();
-        segment.matrix.append(bytes, &mut block.data, &mut block.weight);
+        segment.matrix.append(bytes, &mut self.scratch, &mut block.data, &mut block.weight);
         // Stored for first minus second station, in light travel time: ours is r_second − r_first, in metres.
         let mut uvw = [0, 1, 2].map(|i| -SPEED_OF_LIGHT * self.uvw_scale * segment.uvw[i].value(bytes));
         let mjd = segment.mjd.value(bytes);

@@ -239,13 +239,13 @@ impl Matrix {
 
     /// Appends the visibilities and weights of a row of the file. Weights that are not positive and finite, and those
     /// of data that are not finite, become 0; data that are not finite become 0 too, so that no sum meets a NaN.
-    pub fn append(&self, row: &[u8], data: &mut Vec<Complex32>, weight: &mut Vec<f32>) {
+    pub fn append(&self, row: &[u8], scratch: &mut Scratch, data: &mut Vec<Complex32>, weight: &mut Vec<f32>) {
         let raw = row.get(self.offset..self.end()).unwrap_or(&[]);
         let start = weight.len();
         if let (NumberKind::F32, true, None) = (self.kind, self.scale == 1.0 && self.zero == 0.0, &self.order) {
             match self.planes {
-                2 => append_plain::<8>(raw, data, weight),
-                _ => append_plain::<12>(raw, data, weight),
+                2 => append_plain::<8>(raw, scratch, data, weight),
+                _ => append_plain::<12>(raw, scratch, data, weight),
             }
         } else {
             match self.kind {
@@ -353,13 +353,33 @@ fn checked(re: u32, im: u32, weight: u32) -> (Complex32, f32) {
     (Complex32::new(f32::from_bits(re & data), f32::from_bits(im & data)), f32::from_bits(weight & used))
 }
 
+/// Visibilities converted together.
+const BATCH: usize = 128;
+
+/// Room for a batch, kept by the caller: clearing it for every row cost more than converting a short one.
+#[derive(Debug)]
+pub(super) struct Scratch {
+    words: [u32; 3 * BATCH],
+    values: [Complex32; BATCH],
+    weights: [f32; BATCH],
+}
+
+impl Default for Scratch {
+    fn default() -> Self {
+        Scratch { words: [0; 3 * BATCH], values: [Complex32::ZERO; BATCH], weights: [0.0; BATCH] }
+    }
+}
+
 /// Unscaled f32 in our order: cells of N bytes, 8 without and 12 with a weight.
 ///
-/// A batch is swapped and checked on the stack and appended in one go: value by value was several times slower.
-fn append_plain<const N: usize>(raw: &[u8], data: &mut Vec<Complex32>, weight: &mut Vec<f32>) {
-    const BATCH: usize = 128;
-    let mut words = [0u32; 3 * BATCH];
-    let (mut values, mut weights) = ([Complex32::ZERO; BATCH], [0.0f32; BATCH]);
+/// A batch is swapped and checked in `scratch` and appended in one go: value by value was several times slower.
+fn append_plain<const N: usize>(
+    raw: &[u8],
+    scratch: &mut Scratch,
+    data: &mut Vec<Complex32>,
+    weight: &mut Vec<f32>,
+) {
+    let Scratch { words, values, weights } = scratch;
     for batch in raw.chunks(BATCH * N) {
         for (word, bytes) in words.iter_mut().zip(batch.as_chunks::<4>().0) {
             *word = u32::from_be_bytes(*bytes);
@@ -367,13 +387,13 @@ fn append_plain<const N: usize>(raw: &[u8], data: &mut Vec<Complex32>, weight: &
         let cells = batch.len() / N;
         if N == 12 {
             for ((cell, value), weight) in
-                words.as_chunks::<3>().0[..cells].iter().zip(&mut values).zip(&mut weights)
+                words.as_chunks::<3>().0[..cells].iter().zip(values.iter_mut()).zip(weights.iter_mut())
             {
                 (*value, *weight) = checked(cell[0], cell[1], cell[2]);
             }
         } else {
             for ((cell, value), weight) in
-                words.as_chunks::<2>().0[..cells].iter().zip(&mut values).zip(&mut weights)
+                words.as_chunks::<2>().0[..cells].iter().zip(values.iter_mut()).zip(weights.iter_mut())
             {
                 (*value, *weight) = checked(cell[0], cell[1], 1.0f32.to_bits());
             }
