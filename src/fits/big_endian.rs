@@ -47,6 +47,7 @@ impl NumberKind {
     }
 
     /// The number at the start of `bytes`; NaN when there are too few bytes.
+    #[inline]
     pub fn get(self, bytes: &[u8]) -> f64 {
         match self {
             NumberKind::U8 => first::<u8>(bytes),
@@ -59,6 +60,7 @@ impl NumberKind {
     }
 }
 
+#[inline(always)]
 fn first<T: Element>(bytes: &[u8]) -> f64 {
     bytes.get(..T::SIZE).map_or(f64::NAN, |b| T::from_be(b).to_f64())
 }

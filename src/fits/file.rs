@@ -203,16 +203,15 @@ impl FitsFile {
     }
 
     fn read_hdu(&self, position: u64) -> Result<Hdu, FitsProblem> {
-        let mut label = match self.hdus.len() {
+        let label = match self.hdus.len() {
             0 => "primary header".to_string(),
             n => format!("extension {n}"),
         };
         let bytes = self.read_header_bytes(position, &label)?;
-        let header = Header::parse(&bytes, label.clone())?;
+        let mut header = Header::parse(&bytes, label.clone())?;
         if let Ok(Some(name)) = header.text("EXTNAME") {
-            label = format!("{label} ({name})");
+            header.set_label(format!("{label} ({name})"));
         }
-        let header = Header::parse(&bytes, label)?;
         self.layout(header, position + bytes.len() as u64)
     }
 

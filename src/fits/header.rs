@@ -2,6 +2,7 @@
 
 use super::card::{self, Value};
 use super::{BLOCK, CARD, FitsProblem};
+use std::collections::HashMap;
 
 /// One line of a header.
 #[derive(Debug, Clone, PartialEq)]
@@ -27,6 +28,8 @@ fn is_structural(name: &str) -> bool {
 #[derive(Debug, Clone, PartialEq, Default)]
 pub struct Header {
     entries: Vec<Entry>,
+    /// Where each keyword stands first, so that a header of a hundred thousand cards is not searched for each keyword.
+    places: HashMap<String, usize>,
     label: String,
 }
 
@@ -39,9 +42,9 @@ impl Header {
     /// Sets a keyword, in its old place when it is there already. An empty comment is left out.
     pub fn set(&mut self, name: &str, value: impl Into<Value>, comment: &str) -> &mut Header {
         let new = Entry::Keyword { name: name.to_string(), value: value.into(), comment: comment.to_string() };
-        match self.entries.iter_mut().find(|e| matches!(e, Entry::Keyword { name: n, .. } if n == name)) {
-            Some(old) => *old = new,
-            None => self.entries.push(new),
+        match self.places.get(name) {
+            Some(place) => self.entries[*place] = new,
+            None => self.push_keyword(new),
         }
         self
     }
@@ -73,10 +76,17 @@ impl Header {
 
     /// The value of a keyword (of its first card, when it stands there twice).
     pub fn get(&self, name: &str) -> Option<&Value> {
-        self.entries.iter().find_map(|entry| match entry {
-            Entry::Keyword { name: n, value, .. } if n == name => Some(value),
+        match self.entries.get(*self.places.get(name)?) {
+            Some(Entry::Keyword { value, .. }) => Some(value),
             _ => None,
-        })
+        }
+    }
+
+    fn push_keyword(&mut self, entry: Entry) {
+        if let Entry::Keyword { name, .. } = &entry {
+            self.places.entry(name.clone()).or_insert(self.entries.len());
+        }
+        self.entries.push(entry);
     }
 
     /// All keywords with their values, in order.
@@ -164,9 +174,14 @@ impl Header {
         u64::try_from(value).map_err(|_| self.complain(name, expected))
     }
 
+    /// Gives it another label.
+    pub(super) fn set_label(&mut self, label: String) {
+        self.label = label;
+    }
+
     /// Parses the cards of a header. `label` names it in messages.
     pub(super) fn parse(bytes: &[u8], label: String) -> Result<Header, FitsProblem> {
-        let mut header = Header { entries: Vec::new(), label };
+        let mut header = Header { label, ..Header::default() };
         let mut open_string = false; // the last keyword is a string that ended in '&'
         for (number, raw) in bytes.chunks_exact(CARD).enumerate() {
             let (name_field, rest) = raw.split_at(8);
@@ -189,7 +204,7 @@ impl Header {
             if let Some(field) = rest.strip_prefix("= ") {
                 let (value, comment) = card::parse_value(field);
                 open_string = matches!(&value, Value::Text(text) if text.ends_with('&'));
-                header.entries.push(Entry::Keyword { name, value, comment });
+                header.push_keyword(Entry::Keyword { name, value, comment });
             } else if name == "HISTORY" {
                 header.history(rest.trim_end());
             } else if name == "COMMENT" {

@@ -58,6 +58,7 @@ impl Quantity {
     }
 
     /// Its value in a row.
+    #[inline]
     pub fn value(&self, row: &[u8]) -> f64 {
         self.fields.iter().fold(self.constant, |sum, (offset, kind, scale)| {
             sum + scale * row.get(*offset..).map_or(f64::NAN, |bytes| kind.get(bytes))

@@ -39,11 +39,12 @@ pub(super) fn open(
     }
     let mut notes = Vec::new();
     let mut segments: Vec<Segment> = Vec::new();
+    let mut empty = 0;
     let mut reference = None;
     for hdu in tables(&file, "UV_DATA") {
-        let (segment, this) = read_layout(&path, hdu, stations.to_utc_s, &mut notes)?;
+        let (segment, this) = read_layout(&path, hdu, stations.to_utc_s)?;
         if segment.rows == 0 {
-            notes.push(format!("{}: no rows", hdu.header.label()));
+            empty += 1;
             continue;
         }
         if let Some(first) = segments.first() {
@@ -60,6 +61,13 @@ pub(super) fn open(
     let (Some(reference), Some(first)) = (reference, segments.first()) else {
         return Err(content(&path, "the UV_DATA tables have no rows (NAXIS2 = 0)", "at least one visibility"));
     };
+    // One note for all tables: a file may have thousands.
+    if empty > 0 {
+        notes.push(format!("{empty} UV_DATA tables have no rows"));
+    }
+    if segments.iter().any(|s| s.matrix.has_both_weights()) {
+        notes.push("weights stand in the data and in a WEIGHT column; the column only flags".to_string());
+    }
     let bands = first.matrix.bands;
     let set_ups = read_set_ups(&file, need(&file, "FREQUENCY")?, bands)?;
     if set_ups.is_empty() {
@@ -74,12 +82,7 @@ pub(super) fn open(
 }
 
 /// The layout of one UV_DATA table.
-fn read_layout(
-    path: &Path,
-    hdu: &Hdu,
-    to_utc_s: f64,
-    notes: &mut Vec<String>,
-) -> Result<(Segment, Reference), ObservationError> {
+fn read_layout(path: &Path, hdu: &Hdu, to_utc_s: f64) -> Result<(Segment, Reference), ObservationError> {
     let fits = |problem: FitsProblem| problem.at(path);
     let header = &hdu.header;
     let table = Table::new(hdu).map_err(fits)?;
@@ -98,21 +101,14 @@ fn read_layout(
         let length = usize::try_from(length).map_err(|_| fits(header.complain(&keyword, "a smaller number")))?;
         axes.push(Axis::read(header, n, length).map_err(fits)?);
     }
-    let mut matrix = Matrix::new(&axes, flux.offset, kind)
+    let mut matrix = Matrix::new(&axes, flux.offset, flux.width, kind)
         .map_err(|(problem, expected)| complain(problem, expected))?
         .scaled(flux.scale, flux.zero, flux.null);
-    if matrix.end() != flux.offset.saturating_add(flux.width) {
-        let expected = format!("{} numbers, the product of the axes", matrix.cells().saturating_mul(matrix.planes));
-        return Err(complain(format!("the column {} is {}", flux.name, flux.describe()), expected));
-    }
     if let Some(column) = table.find(&["WEIGHT"]).filter(|c| c.repeat > 0)
         && let ColumnKind::Number(kind) = column.kind
     {
         let weights = WeightColumn { offset: column.offset, kind, count: column.repeat };
         matrix = matrix.weighted(weights).map_err(|(problem, expected)| complain(problem, expected))?;
-        if matrix.planes == 3 {
-            notes.push(format!("{label}: weights stand in the data and in a WEIGHT column; the column only flags"));
-        }
     }
     for (keyword, length) in
         [("NO_STKD", matrix.hands.len()), ("NO_BAND", matrix.bands), ("NO_CHAN", matrix.channels_per_band)]

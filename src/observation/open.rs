@@ -30,7 +30,8 @@ pub struct ReadOptions {
 
 impl Default for ReadOptions {
     fn default() -> Self {
-        ReadOptions { block_bytes: 64 << 20 }
+        // Arrays of this size are given back and taken again without new pages from the system; of 64 MiB they are not.
+        ReadOptions { block_bytes: 16 << 20 }
     }
 }
 

@@ -18,6 +18,8 @@ const PROBE_BYTES: usize = 1 << 20;
 const SAMPLES: usize = 64;
 /// Runs of rows remembered for one pointing; beyond that the rows between are read and left out.
 const MOST_RANGES: usize = 10_000;
+/// Each pointing holds its own list of stations: all of them together stay below a gigabyte.
+const MOST_STATION_COPIES: usize = 4_000_000;
 
 /// A source: a row of the source table, or what the main header says.
 #[derive(Debug, Clone)]
@@ -89,6 +91,7 @@ pub(super) fn read_sources(
     let (name, epoch) = (table.find(&["SOURCE"]), table.find(&["EPOCH", "EQUINOX"]));
     let shift = table.find(&["FREQOFF"]);
     let mut sources = Vec::new();
+    let mut unstated = Vec::new();
     table.for_each_row(file, |row, bytes| {
         let number = |column: Option<&Column>| column.and_then(|c| c.number(bytes, 0));
         let id = id.number(bytes, 0).unwrap_or(f64::NAN).round() as i64;
@@ -99,7 +102,8 @@ pub(super) fn read_sources(
             let text = epoch.and_then(|c| c.text(bytes))?;
             text.trim_start_matches(['J', 'B']).parse().ok()
         });
-        check_equinox(path, equinox, &whose, notes)?;
+        check_equinox(path, equinox, &whose, &mut unstated)?;
+        unstated.truncate(1);
         let phase_centre =
             direction(path, &whose, number(Some(ra)).unwrap_or(f64::NAN), number(Some(dec)).unwrap_or(f64::NAN))?;
         // Some writers leave 0, 0 where no pointing position was recorded.
@@ -111,6 +115,8 @@ pub(super) fn read_sources(
         sources.push(Source { id, name, phase_centre, aim, shift_hz });
         Ok::<(), ObservationError>(())
     })?;
+    // One note stands for all rows.
+    notes.extend(unstated);
     if sources.is_empty() {
         return Err(content(path, format!("{}: no rows", table.label), "at least one source"));
     }
@@ -156,6 +162,16 @@ pub(super) fn assemble(
         vec![(Key { source: None, set_up: None }, ranges, 0, 0)]
     };
 
+    let wanted = match selection {
+        Selection::All => keys.len(),
+        Selection::Names(names) => names.len(),
+    };
+    let station_count = shared.stations.stations.len();
+    if wanted.saturating_mul(station_count) > MOST_STATION_COPIES {
+        let problem = format!("{wanted} pointings of {station_count} stations are too many at once");
+        return Err(content(&path, problem, "fewer, chosen by name"));
+    }
+    let by_id: HashMap<i64, &Source> = sources.iter().rev().map(|source| (source.id, source)).collect();
     let mut decision: Option<Decision> = None;
     let mut pointings: Vec<FileSource> = Vec::new();
     let mut unusable = Vec::new();
@@ -163,7 +179,7 @@ pub(super) fn assemble(
         let at = || shared.segments.get(segment).map_or(String::new(), |s| s.row_label(row));
         let source = match key.source {
             None => &sources[0],
-            Some(id) => sources.iter().find(|s| s.id == id).ok_or_else(|| {
+            Some(id) => by_id.get(&id).copied().ok_or_else(|| {
                 let known: Vec<String> = sources.iter().map(|s| s.id.to_string()).collect();
                 content(&path, format!("{}: SOURCE is {id}", at()), format!("one of {}", known.join(", ")))
             })?,

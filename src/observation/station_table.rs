@@ -6,6 +6,8 @@ use crate::fits::{FitsFile, Hdu, Table};
 
 /// Station numbers above this are taken for damage.
 const LARGEST_NUMBER: f64 = 1e6;
+/// No array has as many stations.
+const MOST_STATIONS: u64 = 10_000;
 const NONE: u32 = u32::MAX;
 
 /// A station as its table gives it, before the axes are decided upon.
@@ -55,6 +57,10 @@ impl StationTables {
                     .push(format!("{}: UT1UTC = {} s is not believed; 0 is used", table.label, self.ut1_utc_s));
                 self.ut1_utc_s = 0.0;
             }
+        }
+        if table.rows > MOST_STATIONS {
+            let problem = format!("{}: {} stations", table.label, table.rows);
+            return Err(content(path, problem, format!("at most {MOST_STATIONS}")));
         }
         let number = hdu.version();
         if self.arrays.iter().any(|(n, _)| *n == number) {
@@ -158,14 +164,16 @@ impl StationTables {
     }
 
     /// Index of a station by array and station number. Where there is only one table, every array uses it.
+    #[inline]
     pub fn index(&self, array: i64, number: f64) -> Option<u32> {
-        if !((0.0..=LARGEST_NUMBER).contains(&number) && number.fract() == 0.0) {
+        let whole = number as u32; // saturates; NaN becomes 0 and is found below
+        if f64::from(whole) != number {
             return None;
         }
         let table = match &self.arrays[..] {
             [(_, only)] => only,
             several => &several.iter().find(|(n, _)| *n == array)?.1,
         };
-        table.get(number as usize).copied().filter(|index| *index != NONE)
+        table.get(whole as usize).copied().filter(|index| *index != NONE)
     }
 }

@@ -7,6 +7,7 @@
 //! `cargo test --test python_references -- --nocapture` shows the figures.
 
 mod environment;
+mod visibilities;
 
 use evensky::beam::{Airy, Extent, Gaussian, Pattern, StationBeam, StationBeams, Unity};
 use evensky::observation::{
