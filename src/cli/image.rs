@@ -18,7 +18,7 @@ use crate::run::{Image, RunFile, iso_utc};
 use crate::sky::{Direction, ImageGeometry};
 use clap::Args;
 use ndarray::Array2;
-use std::collections::BTreeMap;
+use std::collections::{BTreeMap, BTreeSet};
 use std::path::{Path, PathBuf};
 use std::time::{Instant, SystemTime, UNIX_EPOCH};
 
@@ -99,22 +99,16 @@ fn now_utc() -> String {
     iso_utc(40_587.0 + seconds / 86_400.0).unwrap_or_default()
 }
 
+/// Size and checksum of every file that decides the result, each once.
 fn checksums(run: &RunFile) -> Result<Vec<InputFile>, CliError> {
-    let visibilities: Vec<&Path> = run.pointings()?.iter().map(|p| p.visibilities.value.as_path()).collect();
-    let mut inputs = Vec::new();
-    for path in run.inputs() {
-        let role = if path == run.path {
-            "run file"
-        } else if visibilities.contains(&path.as_path()) {
-            "visibilities"
-        } else {
-            "table"
-        };
-        match InputFile::measure(&path, role) {
-            Ok(input) => inputs.push(input),
-            // a file that only `simulate` reads need not be there
-            Err(_) if role == "table" => {}
-            Err(source) => return Err(told(Unreadable { path, source })),
+    let visibilities = run.pointings()?.iter().map(|p| ("visibilities", p.visibilities.value.clone()));
+    let others = run.inputs().into_iter().map(|path| (if path == run.path { "run file" } else { "table" }, path));
+    let mut inputs: Vec<InputFile> = Vec::new();
+    let mut seen = BTreeSet::new();
+    for (role, path) in others.chain(visibilities) {
+        if seen.insert(path.clone()) {
+            let measured = InputFile::measure(&path, role);
+            inputs.push(measured.map_err(|source| told(Unreadable { path, source }))?);
         }
     }
     Ok(inputs)

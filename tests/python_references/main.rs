@@ -7,6 +7,9 @@
 //! `cargo test --test python_references -- --nocapture` shows the figures.
 
 mod environment;
+#[path = "../image_support/mod.rs"]
+mod image_support;
+mod products;
 mod visibilities;
 
 use evensky::beam::{Airy, Extent, Gaussian, Pattern, StationBeam, StationBeams, Unity};
