@@ -374,7 +374,7 @@ fn what_cannot_be_simulated_is_told() {
         (
             &[("times = 20", "times = 10000000\nlowest_elevation_deg = 1")],
             2,
-            ["run.toml:7: simulate: ", "at most 2147483648"],
+            ["run.toml:7: simulate: ", "at most 268435456"],
         ),
         (
             &[("noise_jy = 0", "lowest_elevation_deg = 90")],

@@ -15,8 +15,8 @@ use rand_distr::StandardNormal;
 const TIMES_PER_BLOCK: (usize, usize) = (8, 64);
 /// Visibilities in one block, where that leaves it times enough.
 const VISIBILITIES_PER_BLOCK: usize = 1 << 20;
-/// Most visibilities of a file: they are held in memory, 12 bytes each.
-const MOST_VISIBILITIES: usize = 1 << 31;
+/// Most visibilities of a file: they are held in memory, 12 bytes each (3 GiB), while it is made.
+const MOST_VISIBILITIES: usize = 1 << 28;
 /// Stations that a BASELINE number has room for.
 const MOST_STATIONS: usize = 2047;
 const SECONDS_PER_DAY: f64 = 86_400.0;
