@@ -64,6 +64,11 @@ impl Hand {
         }
     }
 
+    /// The hand of a name that [`Hand::name`] gives.
+    pub fn from_name(name: &str) -> Option<Hand> {
+        Self::CODES.iter().map(|(_, hand)| *hand).find(|hand| hand.name() == name)
+    }
+
     /// The feed (0 for X or R, 1 for Y or L) whose pattern a parallel hand sees at both stations.
     pub fn parallel_feed(self) -> Option<usize> {
         match self {

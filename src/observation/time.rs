@@ -88,6 +88,12 @@ impl ParallacticAngles {
         let to_icrs = icrs_to_earth(mjd_utc, self.ut1_utc_s).transpose();
         self.verticals.iter().map(|up| position_angle(&self.frame, &(to_icrs * up))).collect()
     }
+
+    /// Elevations of the aim above the horizon (geodetic vertical, no refraction) at a time, radians, one per station.
+    pub fn elevations_at(&self, mjd_utc: f64) -> Vec<f64> {
+        let aim = icrs_to_earth(mjd_utc, self.ut1_utc_s) * self.frame.axes.row(2).transpose();
+        self.verticals.iter().map(|up| up.dot(&aim).atan2(up.cross(&aim).norm())).collect()
+    }
 }
 
 #[cfg(test)]

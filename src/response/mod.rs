@@ -10,11 +10,13 @@
 //! error. Nothing above this folder knows which it holds.
 
 mod exact;
+mod fine_grid;
 pub mod gridded;
 mod rows;
 pub mod window;
 
 pub use exact::Exact;
+pub use fine_grid::{FineGridError, fine_grid};
 pub use gridded::Gridded;
 
 use crate::observation::{Block, BlockSource, ObservationError};

@@ -51,6 +51,8 @@ pub struct Simulate {
     pub seed: u64,
     /// Share of the rows flagged.
     pub flagged_fraction: f64,
+    /// Rows are left out while either station would look below this elevation, degrees.
+    pub lowest_elevation_deg: f64,
     /// How the visibilities are predicted.
     pub method: At<Method>,
 }
@@ -140,6 +142,12 @@ pub(super) fn read_simulate(section: &Section, has_image: bool) -> Option<Simula
         "a fraction, at least 0 and less than 1",
         number(|f| (0.0..1.0).contains(&f)),
     );
+    let lowest_elevation = section.or(
+        "lowest_elevation_deg",
+        0.0,
+        "an elevation in degrees, -90 to less than 90",
+        number(|deg| (-90.0..90.0).contains(&deg)),
+    );
     let method = section.or("method", Method::Exact, "\"exact\" or \"gridded\"", |value| match value {
         DeValue::String(word) if word == "exact" => Some(Method::Exact),
         DeValue::String(word) if word == "gridded" => Some(Method::Gridded),
@@ -148,8 +156,7 @@ pub(super) fn read_simulate(section: &Section, has_image: bool) -> Option<Simula
     if method.value == Method::Gridded && !has_image {
         let problem = Problem::Conflict {
             found: "\"gridded\" without a table [image]".to_owned(),
-            expected: "[image], whose pixels and tolerance the gridded prediction needs, or method = \"exact\""
-                .to_owned(),
+            expected: "[image], whose tolerance the gridded prediction keeps, or method = \"exact\"".to_owned(),
         };
         section.complain(method.line, "method", problem);
     }
@@ -184,6 +191,7 @@ pub(super) fn read_simulate(section: &Section, has_image: bool) -> Option<Simula
         noise_jy: noise.value,
         seed: seed.map_or(0, |at| at.value),
         flagged_fraction: flagged.value,
+        lowest_elevation_deg: lowest_elevation.value,
         method,
     })
 }

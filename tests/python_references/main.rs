@@ -381,3 +381,66 @@ fn adjoint_with_unity_beams_agrees_with_finufft() {
     }
     compare("nufft.py", &json!({ "cases": cases }));
 }
+
+/// What `evensky simulate` writes, without beams: station positions, u, v, w and visibilities from the layout and the sky.
+#[test]
+fn a_simulated_file_agrees_with_astropy_and_numpy() {
+    let folder = tempfile::tempdir().expect("a temporary folder");
+    let mut random = ChaCha8Rng::seed_from_u64(17);
+    let site = [-28.5, 41.2, 15.0];
+    let places: Vec<[f64; 3]> =
+        (0..7).map(|_| std::array::from_fn(|_| random.random_range(-900.0..900.0))).collect();
+    let names: Vec<String> = (1..=places.len()).map(|n| format!("P{n}")).collect();
+    let sources = [("ONE", 201.3, 29.8), ("TWO", 203.0, 31.5)];
+    let components: Vec<Value> = (0..5)
+        .map(|_| {
+            json!({
+                "ra_deg": random.random_range(199.0..205.0), "dec_deg": random.random_range(28.0..33.0),
+                "flux_jy": random.random_range(0.1..2.0), "reference_hz": 1.3e9,
+                "spectral_index": random.random_range(-1.5..0.5),
+            })
+        })
+        .collect();
+    let layout: Vec<String> =
+        names.iter().zip(&places).map(|(name, [e, n, u])| format!("{name},{e:?},{n:?},{u:?}")).collect();
+    let sky: Vec<String> = components
+        .iter()
+        .enumerate()
+        .map(|(i, c)| {
+            let cells =
+                ["ra_deg", "dec_deg", "flux_jy", "reference_hz", "spectral_index"].map(|key| c[key].to_string());
+            format!("S{i},{}", cells.join(","))
+        })
+        .collect();
+    let pointings: Vec<String> = sources
+        .iter()
+        .map(|(name, ra, dec)| format!("[[simulate.pointing]]\nname = \"{name}\"\naim_deg = [{ra:?}, {dec:?}]\n"))
+        .collect();
+    let run = format!(
+        "[simulate]\noutput = \"seen.fits\"\nsky = \"sky.csv\"\nstations = \"layout.csv\"\nsite_deg = [{:?}, {:?}]\n\
+         site_height_m = {:?}\nstart_utc = 2026-02-11T02:30:00Z\ntimes = 9\ninterval_s = 1500\nfirst_hz = 1.25e9\n\
+         channel_hz = 2e7\nchannels = 4\nhands = [\"XX\", \"YY\"]\n{}\
+         [beams.none]\nshape = \"unity\"\n[[stations]]\nmatch = \"*\"\nbeam = \"none\"\n",
+        site[0],
+        site[1],
+        site[2],
+        pointings.concat()
+    );
+    let write = |name: &str, text: String| std::fs::write(folder.path().join(name), text).expect("a written file");
+    write("run.toml", run);
+    write("layout.csv", format!("name,east_m,north_m,up_m\n{}\n", layout.join("\n")));
+    write("sky.csv", format!("name,ra_deg,dec_deg,flux_jy,reference_hz,spectral_index\n{}\n", sky.join("\n")));
+    let output = std::process::Command::new(env!("CARGO_BIN_EXE_evensky"))
+        .args(["simulate", "--quiet"])
+        .arg(folder.path().join("run.toml"))
+        .output()
+        .expect("the program starts");
+    assert!(output.status.success(), "{}", String::from_utf8_lossy(&output.stderr));
+    let of_source =
+        |&(name, ra_deg, dec_deg): &(&str, f64, f64)| json!({ "name": name, "ra_deg": ra_deg, "dec_deg": dec_deg });
+    let data = json!({
+        "file": folder.path().join("seen.fits"), "rows": 2 * 9 * 21, "components": components, "stations": names,
+        "site": site, "east_north_up": places, "sources": sources.iter().map(of_source).collect::<Vec<_>>(),
+    });
+    compare("simulated.py", &data);
+}
