@@ -39,13 +39,15 @@ fn peak_memory_mib() -> Option<f64> {
 
 fn main() {
     let short = std::env::args().any(|a| a == "--test");
-    let (times, channels) = if short { (4, 4) } else { (160, 32) };
+    let (times, channels) = if short { (4, 4) } else { (480, 32) };
     println!("instructions: {}", Instructions::detect().name());
     for beam in [Beam::Unity, Beam::Gaussian, Beam::Mixed] {
         let setting = Setting {
             stations: 27,
             radius_m: 500.0,
             times,
+            // eight hours, whatever the number of times
+            interval: 8.0 / 24.0 / times as f64,
             channels,
             beam,
             offset: 1.9f64.to_radians() / 60.0,

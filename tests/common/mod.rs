@@ -49,6 +49,8 @@ pub struct Setting {
     pub stations: usize,
     pub radius_m: f64,
     pub times: usize,
+    /// Days between times.
+    pub interval: f64,
     pub channels: usize,
     pub first_hz: f64,
     pub band: f64,
@@ -75,6 +77,7 @@ impl Default for Setting {
             stations: 9,
             radius_m: 300.0,
             times: 7,
+            interval: 0.013,
             channels: 5,
             first_hz: 1.3e9,
             band: 0.08,
@@ -93,7 +96,7 @@ pub fn scene(setting: &Setting) -> Scene {
     let schedule = Schedule {
         array_name: "TEST".into(),
         stations: stations(setting.stations, setting.radius_m, setting.seed),
-        mjd_utc: (0..setting.times).map(|t| 59_000.2 + 0.013 * t as f64).collect(),
+        mjd_utc: (0..setting.times).map(|t| 59_000.2 + setting.interval * t as f64).collect(),
         frequencies_hz: (0..setting.channels)
             .map(|c| setting.first_hz * (1.0 + setting.band * c as f64 / setting.channels.max(1) as f64))
             .collect(),

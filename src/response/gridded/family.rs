@@ -1,6 +1,7 @@
 //! The members of a partition: which screens M(x) its terms must stand for.
 
 use super::patch::Patch;
+use super::smooth::chebyshev_points;
 use crate::beam::StationBeams;
 use num_complex::Complex64;
 use rand::Rng;
@@ -13,9 +14,6 @@ use std::f64::consts::TAU;
 /// Times and channels that training members are drawn from, at most.
 const TRAINING_TIMES: usize = 24;
 const TRAINING_CHANNELS: usize = 5;
-/// Offsets in w that training members are drawn from, as fractions of the half range (Chebyshev points).
-const TRAINING_W: [f64; 7] = [-1.0, -0.901, -0.623, 0.0, 0.623, 0.901, 1.0];
-
 /// A direction in a patch.
 #[derive(Debug, Clone, Copy, PartialEq)]
 pub(crate) struct PatchPoint {
@@ -87,8 +85,19 @@ impl Family<'_> {
         self.pairs.len() * self.angles.len() * self.frequencies_hz.len() * self.feeds.len()
     }
 
+    /// Offsets in w that training members are drawn from: Chebyshev points, more of them the further phases turn.
+    fn training_offsets(&self) -> Vec<f64> {
+        if self.half_w == 0.0 {
+            return vec![0.0];
+        }
+        let ((left, right), (low, high)) = self.span();
+        let corner = self.point(left, low).bend.abs().max(self.point(right, high).bend.abs());
+        let count = 7 + (12.0 * self.half_w * corner).ceil().min(60.0) as usize;
+        chebyshev_points(-self.half_w, self.half_w, count)
+    }
+
     fn draw(&self, times: &[usize], channels: &[usize], most: usize, rng: &mut ChaCha8Rng) -> Vec<Member> {
-        let offsets: &[f64] = if self.half_w > 0.0 { &TRAINING_W } else { &[0.0] };
+        let offsets = self.training_offsets();
         let all = self.pairs.len() * times.len() * channels.len() * self.feeds.len() * offsets.len();
         let chosen: Vec<usize> =
             if all <= most { (0..all).collect() } else { sample(rng, all, most).into_iter().collect() };
@@ -101,7 +110,7 @@ impl Family<'_> {
                     d
                 };
                 Member {
-                    dw: offsets[digit(offsets.len())] * self.half_w,
+                    dw: offsets[digit(offsets.len())],
                     feed: self.feeds[digit(self.feeds.len())],
                     hz: self.frequencies_hz[channels[digit(channels.len())]],
                     time: times[digit(times.len())],

@@ -13,6 +13,7 @@
 //! Files, in the order of a run: `patch` (which pixels), `survey` (how far u, v, w reach), `plan` (shares of the tolerance,
 //! partitions), `family`, `smooth` and `terms` (kernels), `engine` (gridding), `vector` (inner loops), `transform`.
 
+mod choice;
 mod engine;
 mod family;
 mod offgrid;

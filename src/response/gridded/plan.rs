@@ -3,16 +3,16 @@
 //! A plan is made before any gridding, from the beams, the patch, a survey of the visibilities and the tolerance asked
 //! for; the same inputs give the same plan.
 
+use super::choice::{Question, channel_groups, cheapest};
 use super::family::{Family, MEAN};
 use super::patch::Patch;
 use super::survey::Survey;
-use super::terms::{MOST_TERMS, Terms, node_counts};
+use super::terms::{MOST_TERMS, Terms, WORST_MEMBER, node_counts};
 use super::transform::GridShape;
-use super::vector::LANES;
 use crate::beam::StationBeams;
 use crate::response::ResponseError;
 use crate::response::rows::{Intensity, Seen, wavelengths_per_metre};
-use crate::response::window::{Choice, choose};
+use crate::response::window::Choice;
 use serde::Serialize;
 use std::collections::HashMap;
 use std::f64::consts::TAU;
@@ -22,9 +22,10 @@ use std::time::Instant;
 /// Shares of the tolerance. Errors of different origin add, so the shares sum to at most 1.
 mod share {
     /// Aliasing of the window (largest over the field, both axes).
-    pub const WINDOW: f64 = 0.25;
-    /// Difference between any kernel and its terms, w included, relative to the products' root mean square.
-    pub const TERMS: f64 = 0.5;
+    pub const WINDOW: f64 = 0.2;
+    /// Difference between kernels and their terms, w included, relative to the products' root mean square: root mean
+    /// square over the field and over all members; no member alone passes [`super::terms::WORST_MEMBER`] times it.
+    pub const TERMS: f64 = 0.6;
     /// Beam products beyond a patch's edge.
     pub const EDGE: f64 = 0.1;
     /// Curvature left out where w is ignored.
@@ -37,18 +38,6 @@ const SINGLE_PRECISION_DOWN_TO: f64 = 8e-6;
 pub const SMALLEST_TOLERANCE: f64 = 1e-7;
 /// Largest tolerance that is still an image.
 pub const LARGEST_TOLERANCE: f64 = 0.1;
-
-/// Rough costs that choose between plans, in nanoseconds on a processor of the 2020s (measured once by
-/// `cargo bench`; only their ratios matter).
-mod cost {
-    /// A visibility in one block of terms, fixed and per cell of the window.
-    pub const SAMPLE: f64 = 25.0;
-    pub const CELL: f64 = 0.55;
-    /// A cell of a transform, per term, all passes included.
-    pub const TRANSFORM: f64 = 12.0;
-    /// A pixel multiplied by its screen, per term.
-    pub const PIXEL: f64 = 15.0;
-}
 
 /// Visibilities that share terms: some station pairs, a run of channels.
 #[derive(Debug, Clone)]
@@ -118,9 +107,10 @@ pub struct KernelReport {
     pub terms: Vec<usize>,
     /// Terms of each partition's power products.
     pub power_terms: Vec<usize>,
-    /// Largest difference met between a beam product (peak 1) and the kernel that stands for it.
+    /// Largest difference met between a beam product (peak 1) and the kernel that stands for it, root mean square over the
+    /// field.
     pub largest_difference: f64,
-    /// The bound that difference must keep.
+    /// The bound that every such difference keeps; all of them together keep a third of it in the root mean square.
     pub bound: f64,
     /// Members measured in training and checks.
     pub measured_members: usize,
@@ -157,13 +147,6 @@ pub(crate) fn edge_level(tolerance: f64) -> f64 {
     share::EDGE * tolerance
 }
 
-struct Candidate {
-    by_class: bool,
-    groups: usize,
-    oversampling: f64,
-    turns: f64,
-}
-
 impl Plan {
     pub(crate) fn make(inputs: Inputs) -> Result<Plan, ResponseError> {
         let started = Instant::now();
@@ -195,79 +178,27 @@ impl Plan {
         let power_bound = share::TERMS * tolerance * power_rms;
         let classes = pair_classes(beams, &survey.pairs);
 
-        // choose the cheapest of a few ways
-        let mut windows: HashMap<u64, Choice> = HashMap::new();
-        for oversampling in [1.5, 2.0] {
-            if let Ok(choice) = choose(0.5 * share::WINDOW * tolerance, oversampling) {
-                windows.insert(oversampling.to_bits(), choice);
-            }
-        }
         let reach = (survey.u_m * k_high * patch.pixel(), survey.v_m * k_high * patch.pixel());
-        let mut best: Option<(f64, Candidate)> = None;
-        let halves: Vec<f64> = if turns_total > 0.0 {
-            [0.24, 0.1, 0.04].iter().map(|&t: &f64| t.min(turns_total)).collect()
-        } else {
-            vec![0.0]
+        let question = Question {
+            survey,
+            classes: &classes,
+            frequencies_hz,
+            bound,
+            window_error: 0.5 * share::WINDOW * tolerance,
+            reach,
+            patch_size: patch.size,
+            turns: turns_total,
+            half_bend,
         };
-        let mut tried_halves: Vec<f64> = Vec::new();
-        for &turns in &halves {
-            if tried_halves.contains(&turns) {
-                continue;
-            }
-            tried_halves.push(turns);
-            let layers = layer_count(turns_total, turns);
-            family.half_w = if half_bend > 0.0 { turns / half_bend } else { 0.0 };
-            let nodes = (14, 14);
-            for by_class in [false, true] {
-                if by_class && classes.len() == 1 {
-                    continue;
-                }
-                for groups in [1, 2, 4, 8] {
-                    if groups > frequencies_hz.len() {
-                        break;
-                    }
-                    // the widest group is the first: its channels span the largest ratio
-                    family.frequencies_hz =
-                        frequencies_hz[channel_groups(frequencies_hz.len(), groups)[0].clone()].to_vec();
-                    let mut per_sample = 0.0;
-                    let mut terms = 0.0;
-                    let lists: Vec<&Vec<(u32, u32)>> = classes.iter().collect();
-                    let of_class: Vec<Vec<(u32, u32)>> =
-                        if by_class { lists.into_iter().cloned().collect() } else { vec![survey.pairs.clone()] };
-                    for pairs in of_class {
-                        let fraction = pairs.len() as f64 / survey.pairs.len().max(1) as f64;
-                        family.pairs = pairs;
-                        let k = Terms::estimate(&family, nodes, bound);
-                        per_sample += fraction * k.div_ceil(LANES) as f64;
-                        terms += k as f64;
-                    }
-                    for (&bits, choice) in &windows {
-                        let oversampling = f64::from_bits(bits);
-                        let shape = GridShape::new(patch.size, oversampling, reach, choice.support);
-                        let spread = survey.samples as f64
-                            * per_sample
-                            * (cost::SAMPLE + cost::CELL * (choice.support * choice.support) as f64);
-                        let transforms = terms
-                            * groups as f64
-                            * layers as f64
-                            * (cost::TRANSFORM * (shape.fft.0 * shape.fft.1.min(2 * shape.height)) as f64
-                                + cost::PIXEL * (patch.size.0 * patch.size.1) as f64);
-                        let total = spread + transforms;
-                        if best.as_ref().is_none_or(|(least, _)| total < *least) {
-                            best = Some((total, Candidate { by_class, groups, oversampling, turns }));
-                        }
-                    }
-                }
-            }
-        }
+        let chosen = cheapest(&question, &mut family);
         let refuse =
             |reason: String, reachable: f64| ResponseError::Tolerance { asked: tolerance, reachable, reason };
-        let (_, chosen) = best.ok_or_else(|| {
+        let chosen = chosen.ok_or_else(|| {
             refuse("no anti-alias window of 16 cells or fewer is good enough".to_owned(), SMALLEST_TOLERANCE)
         })?;
-        let window = windows[&chosen.oversampling.to_bits()];
+        let window = chosen.window;
         let shape = GridShape::new(patch.size, chosen.oversampling, reach, window.support);
-        let layers = make_layers(bends, w_range, layer_count(turns_total, chosen.turns));
+        let layers = make_layers(bends, w_range, chosen.layers);
         family.half_w = if bends { 0.5 * layers.step } else { 0.0 };
 
         // build the terms of every partition
@@ -275,7 +206,12 @@ impl Plan {
         let of_class = if chosen.by_class { classes } else { vec![survey.pairs.clone()] };
         let mut partitions = Vec::new();
         let mut class_of_pair = HashMap::new();
-        let mut report = KernelReport { tolerance, bound, w_layers: layers.count, ..KernelReport::default() };
+        let mut report = KernelReport {
+            tolerance,
+            bound: WORST_MEMBER * bound,
+            w_layers: layers.count,
+            ..KernelReport::default()
+        };
         family.frequencies_hz = frequencies_hz.to_vec();
         family.pairs = survey.pairs.clone();
         let nodes = node_counts(&family, 0.1 * bound);
@@ -406,14 +342,6 @@ fn pair_classes(beams: &StationBeams, pairs: &[(u32, u32)]) -> Vec<Vec<(u32, u32
         }
     }
     classes.into_iter().map(|(_, list)| list).collect()
-}
-
-fn channel_groups(channels: usize, groups: usize) -> Vec<Range<usize>> {
-    (0..groups).map(|g| g * channels / groups..(g + 1) * channels / groups).collect()
-}
-
-fn layer_count(turns_total: f64, half_turns: f64) -> usize {
-    if turns_total == 0.0 { 1 } else { ((turns_total / half_turns) - 1e-9).ceil().max(1.0) as usize }
 }
 
 fn make_layers(bends: bool, (low, high): (f64, f64), count: usize) -> Layers {

@@ -29,6 +29,8 @@ const CHECK_MEMBERS: usize = 400;
 const CHECK_POINTS: usize = 160;
 /// Rounds of train-and-check at most.
 const ROUNDS: usize = 7;
+/// How far one member may pass the bound that all of them keep in the root mean square.
+pub(crate) const WORST_MEMBER: f64 = 3.0;
 /// More terms than this never pay.
 pub(crate) const MOST_TERMS: usize = 320;
 
@@ -57,7 +59,8 @@ pub(crate) struct TooManyTerms {
 }
 
 impl Terms {
-    /// Terms whose largest difference from any member stays below `bound`.
+    /// Terms whose difference from the members, root mean square over the field, stays below `bound` in the root mean
+    /// square of all members and below [`WORST_MEMBER`] times it for every one.
     pub(crate) fn build(family: &Family, mut nodes: (usize, usize), bound: f64) -> Result<Terms, TooManyTerms> {
         let mut rng = ChaCha8Rng::seed_from_u64(0x7e12);
         let (mut nodes_x, mut nodes_y) = node_positions(family, nodes);
@@ -77,16 +80,17 @@ impl Terms {
             }
             let mut matrix = family.screens(&members, &points);
             let cross = eliminate(&mut matrix, points.len(), goal, MOST_TERMS);
-            if cross.remainder > bound {
-                return Err(TooManyTerms { reached: cross.remainder });
+            if cross.measure() > bound {
+                return Err(TooManyTerms { reached: cross.measure() });
             }
             let terms = Terms::from_cross(family, &members, &points, &cross, nodes_x.clone(), nodes_y.clone());
             let fresh = family.random(CHECK_MEMBERS, &mut rng);
             measured += fresh.len();
-            let (worst, offenders) = terms.check(family, &fresh, bound, &mut rng);
-            reached = cross.remainder.max(worst);
-            if worst <= bound {
-                return Ok(Terms { largest: reached, measured_members: measured, ..terms });
+            let (mean, worst, offenders) = terms.check(family, &fresh, bound, &mut rng);
+            reached = mean.max(worst / WORST_MEMBER);
+            let largest = cross.remainder.max(worst);
+            if reached <= bound {
+                return Ok(Terms { largest, measured_members: measured, ..terms });
             }
             members.extend(offenders);
             goal *= 0.7;
@@ -132,14 +136,23 @@ impl Terms {
         self.screens.iter().map(|screen| (0..targets.len()).map(|t| at(screen, t)).collect()).collect()
     }
 
-    /// The largest difference between `members` and their sums of terms at random directions, and who exceeds `bound`.
-    fn check(&self, family: &Family, members: &[Member], bound: f64, rng: &mut ChaCha8Rng) -> (f64, Vec<Member>) {
+    /// Differences between `members` and their sums of terms at random directions: root mean square of all, the largest,
+    /// and who exceeds `bound`.
+    fn check(
+        &self,
+        family: &Family,
+        members: &[Member],
+        bound: f64,
+        rng: &mut ChaCha8Rng,
+    ) -> (f64, f64, Vec<Member>) {
         let targets = family.random_points(CHECK_POINTS, rng);
         let differences = self.differences(family, members, &targets);
         let worst = differences.iter().copied().fold(0.0, f64::max);
         let offenders =
             members.iter().zip(&differences).filter(|(_, d)| **d > bound).map(|(m, _)| m.clone()).collect();
-        (worst, offenders)
+        let square: f64 = differences.iter().map(|d| d * d).sum();
+        let worst = if square.is_nan() { f64::NAN } else { worst };
+        ((square / members.len().max(1) as f64).sqrt(), worst, offenders)
     }
 
     /// For each member the root mean square over `targets` of M − Σ M(x_j) θ_j.
@@ -224,11 +237,21 @@ pub(crate) fn node_counts(family: &Family, bound: f64) -> (usize, usize) {
     (needed(left, right, true), needed(low, high, false))
 }
 
-/// Pivots of an elimination, and the largest root-mean-square remainder of any row.
+/// Pivots of an elimination, and what is left of the rows.
 struct Cross {
     rows: Vec<usize>,
     columns: Vec<usize>,
+    /// Largest root mean square of any row.
     remainder: f64,
+    /// Root mean square of all.
+    mean: f64,
+}
+
+impl Cross {
+    /// What is compared with a bound.
+    fn measure(&self) -> f64 {
+        self.mean.max(self.remainder / WORST_MEMBER)
+    }
 }
 
 /// What is left of a row: where its largest entry stands, that entry's square, and the sum of all squares.
@@ -253,7 +276,7 @@ impl Left {
     }
 }
 
-/// Gaussian elimination with complete pivoting, in place, until no row's root mean square passes `goal`.
+/// Gaussian elimination with complete pivoting, in place, until what is left ([`Cross::measure`]) is at most `goal`.
 fn eliminate(matrix: &mut [Complex64], columns: usize, goal: f64, most: usize) -> Cross {
     let look = |row: &[Complex64]| {
         let mut left = Left::NOTHING;
@@ -261,13 +284,15 @@ fn eliminate(matrix: &mut [Complex64], columns: usize, goal: f64, most: usize) -
         left
     };
     let mut left: Vec<Left> = matrix.par_chunks(columns).map(look).collect();
-    let mut cross = Cross { rows: Vec::new(), columns: Vec::new(), remainder: 0.0 };
+    let mut cross = Cross { rows: Vec::new(), columns: Vec::new(), remainder: 0.0, mean: 0.0 };
     loop {
         let total = left.iter().map(|l| l.total).fold(0.0, f64::max);
         cross.remainder = (total / columns.max(1) as f64).sqrt();
+        let sum: f64 = left.iter().map(|l| l.total).sum();
+        cross.mean = (sum / matrix.len().max(1) as f64).sqrt();
         let best = left.iter().enumerate().max_by(|a, b| a.1.peak.total_cmp(&b.1.peak));
         let Some((row, &Left { column, .. })) = best else { return cross };
-        if cross.remainder <= goal || cross.rows.len() == most {
+        if cross.measure() <= goal || cross.rows.len() == most {
             return cross;
         }
         cross.rows.push(row);

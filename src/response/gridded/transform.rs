@@ -156,7 +156,7 @@ impl<T: GridReal> Transform<T> {
 
     /// The exact transpose of [`Transform::to_patch`] with conjugate phases: patch images into a grid.
     pub(crate) fn to_grid(&self, images: &[Vec<Complex<T>>], grid: &mut [Cell<T>]) {
-        let (nx, ny) = self.size;
+        let (nx, _) = self.size;
         let (gx, gy) = self.shape.fft;
         let terms = images.len();
         let zero = Complex::new(T::zero(), T::zero());

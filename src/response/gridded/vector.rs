@@ -23,10 +23,12 @@ pub(crate) type Cell<T> = [T; 2 * LANES];
 
 /// The number types grids are made of.
 pub(crate) trait GridReal: Real + rustfft::FftNum {
-    /// Coefficients of cos(2πt) in t², constant first, for |t| ≤ 1/4.
+    /// Coefficients of cos(2πt) in t², constant first, for |t| ≤ 1/2.
     const COS: &'static [f64];
-    /// Coefficients of sin(2πt)/t in t², constant first, for |t| ≤ 1/4.
+    /// Coefficients of sin(2πt)/t in t², constant first, for |t| ≤ 1/2.
     const SIN: &'static [f64];
+    /// 1.5 times the number whose last bit is worth 1: added and taken away again, it rounds to whole numbers.
+    const WHOLE: Self;
     /// A cell in AVX2 registers.
     #[cfg(target_arch = "x86_64")]
     type Avx2: Register<Self>;
@@ -48,7 +50,7 @@ pub(crate) fn double<T: Real>(value: T) -> f64 {
 }
 
 // Taylor coefficients (−1)^k (2π)^{2k}/(2k)! and (−1)^k (2π)^{2k+1}/(2k+1)!; the first term left out is at most
-// (π/2)^16/16! = 7e-11 in single, (π/2)^24/24! = 8e-20 in double precision.
+// π^20/20! = 4e-9 in single, π^32/32! = 3e-20 in double precision.
 const fn taylor<const N: usize>(odd: bool) -> [f64; N] {
     let tau = std::f64::consts::TAU;
     let mut out = [0.0; N];
@@ -62,10 +64,10 @@ const fn taylor<const N: usize>(odd: bool) -> [f64; N] {
     }
     out
 }
-const COS_SINGLE: [f64; 8] = taylor(false);
-const SIN_SINGLE: [f64; 8] = taylor(true);
-const COS_DOUBLE: [f64; 12] = taylor(false);
-const SIN_DOUBLE: [f64; 12] = taylor(true);
+const COS_SINGLE: [f64; 10] = taylor(false);
+const SIN_SINGLE: [f64; 10] = taylor(true);
+const COS_DOUBLE: [f64; 16] = taylor(false);
+const SIN_DOUBLE: [f64; 16] = taylor(true);
 
 impl GridReal for f32 {
     #[cfg(target_arch = "x86_64")]
@@ -74,6 +76,7 @@ impl GridReal for f32 {
     type Avx512 = super::register::SingleAvx512;
     const COS: &'static [f64] = &COS_SINGLE;
     const SIN: &'static [f64] = &SIN_SINGLE;
+    const WHOLE: f32 = 12_582_912.0;
 }
 
 impl GridReal for f64 {
@@ -83,6 +86,7 @@ impl GridReal for f64 {
     type Avx512 = super::register::DoubleAvx512;
     const COS: &'static [f64] = &COS_DOUBLE;
     const SIN: &'static [f64] = &SIN_DOUBLE;
+    const WHOLE: f64 = 6_755_399_441_055_744.0;
 }
 
 /// One visibility on its way to or from the grids.
@@ -154,7 +158,8 @@ fn coefficients<T: GridReal, const FUSED: bool>(sample: &Sample<T>, lane: &Lane<
         let mut t = [T::default(); LANES];
         let mut t2 = [T::default(); LANES];
         for j in 0..LANES {
-            t[j] = sample.dw * lane.bend[j];
+            let turns = sample.dw * lane.bend[j];
+            t[j] = turns - ((turns + T::WHOLE) - T::WHOLE);
             t2[j] = t[j] * t[j];
         }
         let cos = polynomial::<T, FUSED>(T::COS, &t2);
