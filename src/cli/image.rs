@@ -7,7 +7,7 @@ use super::{CliError, Common};
 use crate::beam::StationBeams;
 use crate::imaging::beam_fit::fit_beam;
 use crate::imaging::{Mosaic, flat_sky, response_map, self_check};
-use crate::observation::Observation;
+use crate::observation::{Mount, Observation};
 use crate::report::{
     Accuracy, BeamFigures, ImageFigures, InputFile, KernelFigures, Noise, PointingRecord, Product, ProductHeader,
     RunRecord, StageTime, StationGroup, WriteError, summary_json, summary_text, write_json, write_page,
@@ -287,7 +287,6 @@ impl Making<'_> {
             .iter()
             .enumerate()
             .filter(|(index, station)| {
-                use crate::observation::Mount;
                 let beam = beams.beam(*index);
                 !matches!(station.mount, Mount::AltAzimuth | Mount::Equatorial)
                     && !(beam.pattern.round() && beam.offset == [0.0, 0.0])
