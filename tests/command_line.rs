@@ -174,7 +174,7 @@ fn an_output_folder_that_cannot_be_made_is_told() {
     let [file, out] = [&file, &out].map(|path| path.to_str().expect("a plain name"));
     let (said, message) = run(&["image", "--quiet", file, "--out", out], 1);
     assert!(
-        said.is_empty() && message.contains("run.toml/products: the output folder cannot be made ("),
+        said.is_empty() && message.contains("run.toml/products: the output folder cannot be made or written in ("),
         "{message}"
     );
 }

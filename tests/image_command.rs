@@ -265,7 +265,7 @@ fn progress_is_plain_off_a_terminal() {
 }
 
 /// Threads share out sums whose order then differs: rounding of single-precision grids (6e-8), carried by some ten
-/// thousand visibilities of random sign, is bounded by 1e-6 of the largest sum, a hundredth of the promise. Quotients are
+/// thousand visibilities of random sign, is bounded by 3e-6 of the largest sum, a thirtieth of the promise. Quotients are
 /// compared as the sums they come from, since they grow where W is small. The same number of threads gives the same bits.
 #[test]
 fn threads_change_nothing_but_rounding() {
@@ -290,7 +290,7 @@ fn threads_change_nothing_but_rounding() {
             }
         }
         println!("product {n}: largest difference {:.1e} of the largest sum", worst / largest);
-        assert!(seen > 1000 && worst <= 1e-6 * largest, "product {n}: {worst:e} of {largest:e}");
+        assert!(seen > 1000 && worst <= 3e-6 * largest, "product {n}: {worst:e} of {largest:e}");
     }
 }
 
@@ -462,6 +462,26 @@ fn the_run_file_can_say_where_the_stations_looked() {
     moved.0.aim = Direction::from_deg(200.4, 31.2);
     let geometry = small(Direction::from_deg(200.2, 31.1), 40, 44);
     held_against_exact(&invented, &[pointing], &[moved], geometry, "aim_deg = [200.4, 31.2]\n");
+}
+
+/// A pointing that looks elsewhere adds nothing, and the reason given is that, not its data.
+#[test]
+fn a_pointing_that_misses_the_image_is_told() {
+    let invented = Invented { times: 2, ..Invented::default() };
+    let both = [("HERE", 99.6), ("ELSEWHERE", 140.0)]
+        .map(|(name, ra)| invented.pointing(name, Direction::from_deg(ra, 20.0)));
+    let folder = Folder::new();
+    write_pointings(&folder.path("data.idifits"), &both);
+    folder.run_file(&run_text(&["data.idifits"], &small(Direction::from_deg(99.6, 20.1), 40, 44), TOLERANCE));
+    let ended = folder.imaged(&["--quiet"]);
+    let warning = "pointing ELSEWHERE does not reach the image and adds nothing";
+    assert!(ended.err.contains(warning), "{}", ended.err);
+    let record = folder.record();
+    assert_eq!(record["warnings"], serde_json::json!([warning]));
+    for (n, (_, block)) in both.iter().enumerate() {
+        let usable = block.weight.iter().filter(|w| **w > 0.0).count() as u64;
+        assert_eq!(record["pointings"][n]["visibilities_used"].as_u64(), Some(usable));
+    }
 }
 
 /// Two runs, one output folder: the later products replace the earlier.

@@ -7,10 +7,10 @@ use super::{CliError, Common};
 use crate::beam::StationBeams;
 use crate::imaging::beam_fit::fit_beam;
 use crate::imaging::{Mosaic, flat_sky, response_map, self_check};
-use crate::observation::Observation;
+use crate::observation::{Mount, Observation};
 use crate::report::{
     Accuracy, BeamFigures, ImageFigures, InputFile, KernelFigures, Noise, PointingRecord, Product, ProductHeader,
-    RunRecord, StageTime, StationGroup, summary_json, summary_text, write_json, write_page,
+    RunRecord, StageTime, StationGroup, WriteError, summary_json, summary_text, write_json, write_page,
 };
 use crate::response::Sums;
 use crate::response::gridded::Options;
@@ -36,6 +36,7 @@ pub struct Arguments {
 /// When it cannot be made.
 pub fn run(arguments: &Arguments, common: &Common) -> Result<String, CliError> {
     let progress = common.progress();
+    let started = Instant::now();
     let run = RunFile::read(&arguments.run)?;
     let settings = run.image()?.clone();
     let inputs = open_pointings(&run, &progress)?;
@@ -54,9 +55,16 @@ pub fn run(arguments: &Arguments, common: &Common) -> Result<String, CliError> {
     record.inputs = checksums(&run)?;
     record.stations = station_groups(&inputs);
     let mut making = Making { progress: &progress, record, settings };
+    making.timed("opening and checksums", started);
     let images = making.images(inputs)?;
     let started = Instant::now();
-    let written = images.write(&folder).map_err(told)?;
+    // all products are made here and moved at the end: a run that fails leaves those of an earlier one as they were, and
+    // no record ever stands beside images of another run
+    let unfinished = tempfile::Builder::new()
+        .prefix(".unfinished-")
+        .tempdir_in(&folder)
+        .map_err(|source| CliError::Folder { path: folder.clone(), source })?;
+    let written = images.write(unfinished.path()).map_err(told)?;
     making.timed("writing products", started);
     let mut record = making.record;
     record.products = written.products;
@@ -65,8 +73,9 @@ pub fn run(arguments: &Arguments, common: &Common) -> Result<String, CliError> {
     }
     record.products.push(product("run.json", "inputs, settings, measured accuracy, timings"));
     record.products.push(product("report.html", "this run on one page"));
-    write_page(&folder.join("report.html"), &record, &written.pictures).map_err(told)?;
-    write_json(&folder.join("run.json"), &record).map_err(told)?;
+    write_page(&unfinished.path().join("report.html"), &record, &written.pictures).map_err(told)?;
+    write_json(&unfinished.path().join("run.json"), &record).map_err(told)?;
+    hand_over(unfinished.path(), &folder, &record.products)?;
     let place = folder.display().to_string();
     let said = summary_json(&record, &place);
     common.conclusion(&said, || summary_text(&record, &place) + "\n")
@@ -83,6 +92,16 @@ fn told(error: impl std::error::Error + Send + Sync + 'static) -> CliError {
 
 fn product(path: &str, what: &str) -> Product {
     Product { path: path.to_owned(), what: what.to_owned() }
+}
+
+/// Moves the finished products to their places.
+fn hand_over(from: &Path, to: &Path, products: &[Product]) -> Result<(), CliError> {
+    for Product { path, .. } in products {
+        let place = to.join(path);
+        std::fs::rename(from.join(path), &place)
+            .map_err(|source| told(WriteError::Rename { path: place, source }))?;
+    }
+    Ok(())
 }
 
 /// Finds out before the long work that the folder takes files.
@@ -268,7 +287,6 @@ impl Making<'_> {
             .iter()
             .enumerate()
             .filter(|(index, station)| {
-                use crate::observation::Mount;
                 let beam = beams.beam(*index);
                 !matches!(station.mount, Mount::AltAzimuth | Mount::Equatorial)
                     && !(beam.pattern.round() && beam.offset == [0.0, 0.0])

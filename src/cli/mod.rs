@@ -114,8 +114,8 @@ pub enum CliError {
     /// A response cannot be made or applied.
     #[error(transparent)]
     Response(#[from] ResponseError),
-    /// The output folder cannot be made.
-    #[error("{}: the output folder cannot be made ({source}); expected a folder, or a place for one (--out DIR)", path.display())]
+    /// The output folder cannot be made or takes no files.
+    #[error("{}: the output folder cannot be made or written in ({source}); expected a folder, or a place for one (--out DIR)", path.display())]
     Folder {
         /// The folder.
         path: PathBuf,

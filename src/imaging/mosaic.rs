@@ -95,6 +95,14 @@ impl Mosaic {
             });
             Gridded::new(&beams, self.geometry, tolerance, &mut counted, options)?
         };
+        if tally.rows == 0 {
+            // a pointing that does not reach the image is planned unread; what it holds is told all the same
+            source.rewind()?;
+            while let Some(block) = source.next_block()? {
+                tally.add(&block, &hands, &observation.frequencies_hz);
+                rows(block.rows() as u64);
+            }
+        }
         let exact = Exact::new(&observation, beams, self.geometry);
         self.pointings.push(Pointing { source, gridded, exact, tally });
         Ok(())
