@@ -17,7 +17,7 @@ use std::time::Instant;
 /// Arguments of `simulate`.
 #[derive(Debug, Args)]
 pub struct Arguments {
-    /// The run file (TOML), with a table [simulate]
+    /// The run file (TOML); its table "simulate" says what to observe
     #[arg(value_name = "RUN.toml")]
     pub run: PathBuf,
 }
