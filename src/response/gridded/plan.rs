@@ -22,14 +22,14 @@ use std::time::Instant;
 /// Shares of the tolerance. Errors of different origin add, so the shares sum to at most 1.
 mod share {
     /// Aliasing of the window (largest over the field, both axes).
-    pub const WINDOW: f64 = 0.2;
+    pub const WINDOW: f64 = 0.3;
     /// Difference between kernels and their terms, w included, relative to the products' root mean square: root mean
     /// square over the field and over all members; no member alone passes [`super::terms::WORST_MEMBER`] times it.
     pub const TERMS: f64 = 0.6;
     /// Beam products beyond a patch's edge.
-    pub const EDGE: f64 = 0.1;
+    pub const EDGE: f64 = 0.05;
     /// Curvature left out where w is ignored.
-    pub const FLAT: f64 = 0.1;
+    pub const FLAT: f64 = 0.05;
 }
 
 /// Below this tolerance grids and tables are kept in double precision.
