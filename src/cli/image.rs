@@ -288,8 +288,9 @@ impl Making<'_> {
             .enumerate()
             .filter(|(index, station)| {
                 let beam = beams.beam(*index);
-                !matches!(station.mount, Mount::AltAzimuth | Mount::Equatorial)
-                    && !(beam.pattern.round() && beam.offset == [0.0, 0.0])
+                let known = matches!(station.mount, Mount::AltAzimuth | Mount::Equatorial);
+                let turning_matters = !beam.pattern.round() || beam.offset != [0.0, 0.0];
+                !known && turning_matters
             })
             .map(|(_, station)| station.name.as_str())
             .collect();

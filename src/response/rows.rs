@@ -36,8 +36,11 @@ impl Recentre {
 }
 
 /// exp(2πi · turns), with whole turns taken out first.
+#[inline]
 pub(crate) fn cis_turns(turns: f64) -> Complex64 {
-    Complex64::cis(TAU * (turns - turns.round()))
+    // 1.5 · 2^52 added and taken away rounds to whole turns, up to 2^51 of them
+    const WHOLE: f64 = 6_755_399_441_055_744.0;
+    Complex64::cis(TAU * (turns - ((turns + WHOLE) - WHOLE)))
 }
 
 /// Wavenumber per metre of path: ν/c in wavelengths per metre.

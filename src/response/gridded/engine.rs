@@ -3,9 +3,9 @@
 use super::offgrid::{Spread, half_width};
 use super::patch::Patch;
 use super::plan::{Partition, Plan};
-use super::smooth::interpolation;
+use super::smooth::{chebyshev_points, interpolation};
 use super::terms::Terms;
-use super::transform::Transform;
+use super::transform::{Scratch, Transform};
 use super::vector::{
     Cell, GridReal, Instructions, LANES, Lane, Sample, Share, accumulate, double, gather, real, spread,
 };
@@ -22,6 +22,10 @@ use rayon::prelude::*;
 
 /// Samples handed to the inner loops at once: their coefficients stay in the first cache.
 const BATCH: usize = 256;
+/// Channels between phases computed from scratch.
+const ANCHOR: usize = 16;
+/// Pixels added at once: a chunk of the eight images of a block stays in the second cache.
+const CHUNK: usize = 2048;
 /// Power terms a cell of the power table holds.
 const POWER_LANES: usize = 2 * LANES;
 
@@ -45,6 +49,25 @@ pub(super) struct Engine<T: GridReal> {
     bend: Vec<f64>,
     instructions: Instructions,
     grid_memory: usize,
+    /// First partition of each pair of stations (their class), [`u32::MAX`] for pairs without data.
+    class: Vec<u32>,
+    bands: Vec<Band<T>>,
+}
+
+/// How the station quantities of one partition follow frequency.
+struct Band<T> {
+    /// Frequencies at which patterns are evaluated for the kernel's directions and for the power's.
+    kernel: Nodes<T>,
+    power: Nodes<T>,
+    /// Step in wavelengths per metre between channels, where it is the same for all.
+    step: Option<f64>,
+}
+
+/// Frequencies that patterns are evaluated at, and how their values there make those of every channel.
+struct Nodes<T> {
+    hz: Vec<f64>,
+    /// `[channel][node]`; `None` where every channel is a node.
+    weights: Option<Vec<Vec<T>>>,
 }
 
 /// A real station quantity whose pairwise products make |A|².
@@ -65,12 +88,28 @@ struct Task {
     layer: usize,
 }
 
+/// A task and one copy of its grids, one a block of terms.
+struct Work<T> {
+    task: Task,
+    copy: usize,
+    grids: Vec<Vec<Cell<T>>>,
+}
+
 /// A block's rows about the patch's centre, and the distinct times they were taken at.
 struct Prepared {
     /// u′, v′, path and w of each row, metres.
     rows: Vec<[f64; 4]>,
     time: Vec<u32>,
     angles: Vec<Vec<f64>>,
+}
+
+/// Which station quantities a table holds.
+struct Quantities<'a, T> {
+    terms: &'a Terms,
+    nodes: &'a Nodes<T>,
+    /// Terms a cell holds.
+    lanes: usize,
+    slots: usize,
 }
 
 /// Station quantities of one partition at its terms' directions, for one block of rows.
@@ -150,11 +189,32 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
         let available = Instructions::available();
         let instructions =
             if available.contains(&options.instructions) { options.instructions } else { Instructions::Plain };
+        let stations = observation.stations.len();
+        let mut class = vec![u32::MAX; stations * stations];
+        for (&(p, q), &first) in &plan.class_of_pair {
+            class[p as usize * stations + q as usize] = first as u32;
+        }
+        let angles: Vec<Vec<f64>> = plan.probe_times.iter().map(|&mjd| beams.angles_at(mjd)).collect();
+        let bands = plan
+            .partitions
+            .iter()
+            .map(|partition| {
+                let hz = &observation.frequencies_hz[partition.channels.clone()];
+                let error = 0.01 * tolerance;
+                Band {
+                    kernel: Nodes::choose(beams, &feeds, &partition.kernel, &angles, hz, error),
+                    power: Nodes::choose(beams, &feeds, &partition.power, &angles, hz, error),
+                    step: uniform_step(hz),
+                }
+            })
+            .collect();
         Ok(Engine {
+            class,
+            bands,
             recentre: Recentre::new(&observation.phase_centre.frame(), plan.patch.image_frame()),
             wavelengths_per_metre: observation.frequencies_hz.iter().map(|&hz| wavelengths_per_metre(hz)).collect(),
             frequencies_hz: observation.frequencies_hz.clone(),
-            stations: observation.stations.len(),
+            stations,
             beams: beams.clone(),
             transform: Transform::new(plan.shape, plan.patch.size),
             taper: (taper(nx, plan.shape.fft.0), taper(ny, plan.shape.fft.1)),
@@ -220,56 +280,77 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
         &self,
         prepared: &Prepared,
         partition: &Partition,
-        terms: &Terms,
-        lanes: usize,
-        slots: usize,
+        of: Quantities<T>,
         write: impl Fn(usize, &[Vec<Complex64>; 2], usize, &mut [Cell<T>]) + Sync,
-        feeds: &[usize],
     ) -> Table<T> {
+        let Quantities { terms, nodes, lanes, slots } = of;
         let lm: Vec<[f64; 2]> = terms.points.iter().map(|p| p.aim_lm).collect();
         let per_station = terms.points.len().div_ceil(lanes);
         let channels = partition.channels.len();
         let per_channel = slots * self.stations * per_station;
+        let per_time = channels * per_channel;
         let mut taking_part = vec![false; self.stations];
         for &(p, q) in &partition.pairs {
             taking_part[p as usize] = true;
             taking_part[q as usize] = true;
         }
-        let mut cells = vec![[T::zero(); 2 * LANES]; prepared.angles.len() * channels * per_channel];
-        let fill = |time: usize, channel: usize, cells: &mut [Cell<T>], only_turning: bool| {
-            let hz = self.frequencies_hz[partition.channels.start + channel];
+        let fill = |time: usize, only_turning: bool, cells: &mut [Cell<T>], scratch: &mut Vec<Cell<T>>| {
             let mut voltages = [Vec::new(), Vec::new()];
+            let count = nodes.hz.len();
+            scratch.resize(count * slots * per_station, [T::zero(); 2 * LANES]);
             for station in (0..self.stations).filter(|&s| taking_part[s]) {
                 if only_turning && !self.beams.turns(station) {
                     continue;
                 }
-                for &feed in feeds {
-                    voltages[feed].resize(lm.len(), Complex64::ZERO);
-                    let angle = prepared.angles[time][station];
-                    self.beams.voltages(station, angle, hz, feed, &lm, &mut voltages[feed]);
+                for (node, at_node) in nodes.hz.iter().zip(scratch.chunks_exact_mut(slots * per_station)) {
+                    for &feed in &self.feeds {
+                        voltages[feed].resize(lm.len(), Complex64::ZERO);
+                        let angle = prepared.angles[time][station];
+                        self.beams.voltages(station, angle, *node, feed, &lm, &mut voltages[feed]);
+                    }
+                    for (slot, cells) in at_node.chunks_exact_mut(per_station).enumerate() {
+                        write(slot, &voltages, lm.len(), cells);
+                    }
                 }
                 for slot in 0..slots {
-                    let start = (slot * self.stations + station) * per_station;
-                    write(slot, &voltages, lm.len(), &mut cells[start..start + per_station]);
+                    for channel in 0..channels {
+                        let start = channel * per_channel + (slot * self.stations + station) * per_station;
+                        let out = &mut cells[start..start + per_station];
+                        let from = |node: usize| &scratch[(node * slots + slot) * per_station..][..per_station];
+                        match &nodes.weights {
+                            None => out.copy_from_slice(from(channel)),
+                            Some(weights) => {
+                                out.fill([T::zero(); 2 * LANES]);
+                                for (node, &weight) in weights[channel].iter().enumerate() {
+                                    for (out, cell) in out.iter_mut().zip(from(node)) {
+                                        out.iter_mut().zip(cell).for_each(|(o, &c)| *o = *o + c * weight);
+                                    }
+                                }
+                            }
+                        }
+                    }
                 }
             }
         };
-        if cells.is_empty() {
-            return Table { cells, per_station, channels, slots };
+        let mut cells = vec![[T::zero(); 2 * LANES]; prepared.angles.len() * per_time];
+        if !cells.is_empty() {
+            // stations that do not turn look alike at all times: copy what the first time gave them
+            let (first, rest) = cells.split_at_mut(per_time);
+            fill(0, false, first, &mut Vec::new());
+            let first = &*first;
+            let all_turn = (0..self.stations).all(|s| !taking_part[s] || self.beams.turns(s));
+            rest.par_chunks_mut(per_time).enumerate().for_each_init(Vec::new, |scratch, (index, cells)| {
+                if !all_turn {
+                    cells.copy_from_slice(first);
+                }
+                fill(index + 1, true, cells, scratch);
+            });
         }
-        // stations that do not turn look alike at all times: copy what the first time gave them
-        let (first, rest) = cells.split_at_mut(channels * per_channel);
-        first.par_chunks_mut(per_channel).enumerate().for_each(|(channel, cells)| fill(0, channel, cells, false));
-        let first = &*first;
-        rest.par_chunks_mut(per_channel).enumerate().for_each(|(index, cells)| {
-            let (time, channel) = (index / channels + 1, index % channels);
-            cells.copy_from_slice(&first[channel * per_channel..(channel + 1) * per_channel]);
-            fill(time, channel, cells, true);
-        });
         Table { cells, per_station, channels, slots }
     }
 
-    fn kernel_table(&self, prepared: &Prepared, partition: &Partition) -> Table<T> {
+    fn kernel_table(&self, prepared: &Prepared, index: usize) -> Table<T> {
+        let partition = &self.plan.partitions[index];
         let feeds = self.feeds.clone();
         let write = |slot: usize, voltages: &[Vec<Complex64>; 2], count: usize, cells: &mut [Cell<T>]| {
             for (j, value) in voltages[feeds[slot]][..count].iter().enumerate() {
@@ -277,10 +358,13 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
                 cells[j / LANES][j % LANES + LANES] = real(value.im);
             }
         };
-        self.table(prepared, partition, &partition.kernel, LANES, self.feeds.len(), write, &self.feeds)
+        let nodes = &self.bands[index].kernel;
+        let of = Quantities { terms: &partition.kernel, nodes, lanes: LANES, slots: self.feeds.len() };
+        self.table(prepared, partition, of, write)
     }
 
-    fn power_table(&self, prepared: &Prepared, partition: &Partition) -> Table<T> {
+    fn power_table(&self, prepared: &Prepared, index: usize) -> Table<T> {
+        let partition = &self.plan.partitions[index];
         let powers = self.powers.clone();
         let write = |slot: usize, voltages: &[Vec<Complex64>; 2], count: usize, cells: &mut [Cell<T>]| {
             for j in 0..count {
@@ -292,7 +376,9 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
                 cells[j / POWER_LANES][j % POWER_LANES] = real(value);
             }
         };
-        self.table(prepared, partition, &partition.power, POWER_LANES, self.powers.len(), write, &self.feeds)
+        let nodes = &self.bands[index].power;
+        let of = Quantities { terms: &partition.power, nodes, lanes: POWER_LANES, slots: self.powers.len() };
+        self.table(prepared, partition, of, write)
     }
 
     /// Calls `each` with the samples of `rows` that belong to `task`; `weights` decides what they carry: for spreading the
@@ -304,12 +390,12 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
         &self,
         task: Task,
         block: &Block,
-        prepared: &Prepared,
-        table: &Table<T>,
+        at: (&Prepared, &Table<T>),
         rows: std::ops::Range<usize>,
         spreading: bool,
         mut each: impl FnMut(Sample<T>, (usize, usize, usize), f64),
     ) {
+        let (prepared, table) = at;
         let plan = &self.plan;
         let partition = &plan.partitions[task.partition];
         let class = task.partition - task.partition % plan.channel_groups.len();
@@ -322,16 +408,29 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
             if position.abs() > 0.5 * n { position - n * (position / n).round() } else { position }
         };
         let layer_w = plan.layers.w(task.layer);
+        let band_step = self.bands[task.partition].step;
         for row in rows {
             let (p, q) = (block.first[row], block.second[row]);
-            if plan.class_of_pair.get(&(p, q)) != Some(&class) {
+            if self.class[p as usize * self.stations + q as usize] as usize != class {
                 continue;
             }
             let [u, v, path, w_m] = prepared.rows[row];
             let time = prepared.time[row];
+            // turns of the phase per wavenumber; from channel to channel the phase turns by the same step, and is computed
+            // anew often enough that rounding stays below 1e-15
+            let path = path + if plan.layers.bends { w_m * plan.middle_bend } else { 0.0 };
+            let step = band_step.filter(|_| spreading).map(|step| cis_turns(path * step));
+            let mut phase = Complex64::ONE;
             for (local, channel) in partition.channels.clone().enumerate() {
                 let k = self.wavelengths_per_metre[channel];
                 let w = w_m * k;
+                let turns = path * k;
+                if spreading {
+                    phase = match step {
+                        Some(step) if local % ANCHOR != 0 => phase * step,
+                        _ => cis_turns(turns),
+                    };
+                }
                 if plan.layers.count > 1 && plan.layers.of(w) != task.layer {
                     continue;
                 }
@@ -342,8 +441,7 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
                     if weight == 0.0 {
                         continue;
                     }
-                    let turns = path * k + if plan.layers.bends { w * plan.middle_bend } else { 0.0 };
-                    let value = if spreading { value * cis_turns(turns) } else { value };
+                    let value = if spreading { value * phase } else { value };
                     let (first_x, fx) = locate(fold(u * k * scale_x, shape.fft.0), support);
                     let (first_y, fy) = locate(fold(v * k * scale_y, shape.fft.1), support);
                     let column = first_x + shape.origin.0 as i64;
@@ -424,7 +522,7 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
             }
             batch.clear();
         };
-        self.samples(task, block, prepared, table, rows, true, |sample, _, _| {
+        self.samples(task, block, (prepared, table), rows, true, |sample, _, _| {
             batch.push(sample);
             if batch.len() == BATCH {
                 flush(&mut batch);
@@ -455,7 +553,7 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
         };
         for row in rows {
             let (p, q) = (block.first[row], block.second[row]);
-            if self.plan.class_of_pair.get(&(p, q)) != Some(&class) {
+            if self.class[p as usize * self.stations + q as usize] as usize != class {
                 continue;
             }
             let time = prepared.time[row];
@@ -499,7 +597,7 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
             if terms.screens[index].iter().all(|z| pick(z) == 0.0) {
                 return None;
             }
-            Some(py.dot(&values).dot(&px.t()))
+            Some(py.dot(&values).dot(&px.t()).as_standard_layout().into_owned())
         };
         let shape = (py.nrows(), px.nrows());
         (part(|z| z.re).unwrap_or_else(|| Array2::zeros(shape)), part(|z| z.im))
@@ -515,34 +613,44 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
         )
     }
 
-    /// Transforms a task's grids and adds them to N.
-    fn finish(&self, task: Task, grids: &[Vec<Cell<T>>], numerator: &mut Array2<f64>) {
+    /// Transforms the grids of one partition's tasks and adds them to N. Screens are made once for all layers.
+    fn finish(&self, tasks: &[(Task, Vec<Vec<Cell<T>>>)], scratch: &mut Scratch<T>, numerator: &mut Array2<f64>) {
+        let Some((first_task, first_grids)) = tasks.first() else { return };
         let (nx, ny) = self.plan.patch.size;
-        let terms = &self.plan.partitions[task.partition].kernel;
+        let terms = &self.plan.partitions[first_task.partition].kernel;
         let matrices = self.pixels(terms);
-        let mut sum = vec![Complex::<T>::new(T::zero(), T::zero()); nx * ny];
-        for (block, grid) in grids.iter().enumerate() {
+        let zero = Complex::new(T::zero(), T::zero());
+        let mut sums = vec![vec![zero; nx * ny]; tasks.len()];
+        for block in 0..first_grids.len() {
             let first = block * LANES;
             let count = LANES.min(terms.points.len() - first);
-            let mut images = self.transform.to_patch(grid, count);
-            images.par_iter_mut().enumerate().for_each(|(j, image)| {
-                let (re, im) = Self::screen(terms, first + j, &matrices);
-                match &im {
-                    None => image.iter_mut().zip(&re).for_each(|(z, &re)| *z = z.scale(re)),
-                    Some(im) => {
-                        for ((z, &re), &im) in image.iter_mut().zip(&re).zip(im) {
-                            *z = *z * Complex::new(re, im);
+            let screens: Vec<(Array2<T>, Option<Array2<T>>)> =
+                (first..first + count).into_par_iter().map(|index| Self::screen(terms, index, &matrices)).collect();
+            for ((_, grids), sum) in tasks.iter().zip(&mut sums) {
+                self.transform.to_patch(&grids[block], count, scratch);
+                let images = &scratch.images[..count];
+                sum.par_chunks_mut(CHUNK).enumerate().for_each(|(chunk, sum)| {
+                    let here = chunk * CHUNK..chunk * CHUNK + sum.len();
+                    for (image, (re, im)) in images.iter().zip(&screens) {
+                        let re = re.as_slice().unwrap_or(&[]);
+                        let image = &image[here.clone()];
+                        match im.as_ref().and_then(|im| im.as_slice()) {
+                            None => {
+                                for ((sum, &z), &re) in sum.iter_mut().zip(image).zip(&re[here.clone()]) {
+                                    *sum = *sum + z.scale(re);
+                                }
+                            }
+                            Some(im) => {
+                                let parts = re[here.clone()].iter().zip(&im[here.clone()]);
+                                for ((sum, &z), (&re, &im)) in sum.iter_mut().zip(image).zip(parts) {
+                                    *sum = *sum + z * Complex::new(re, im);
+                                }
+                            }
                         }
                     }
-                }
-            });
-            sum.par_chunks_mut(4096).enumerate().for_each(|(chunk, sum)| {
-                for image in &images {
-                    sum.iter_mut().zip(&image[chunk * 4096..]).for_each(|(sum, &z)| *sum = *sum + z);
-                }
-            });
+                });
+            }
         }
-        let w = self.plan.layers.w(task.layer);
         let (x0, y0) = self.plan.patch.origin;
         let mut window = numerator.slice_mut(s![y0..y0 + ny, x0..x0 + nx]);
         window.axis_iter_mut(Axis(0)).into_par_iter().enumerate().for_each(|(y, mut row)| {
@@ -551,8 +659,15 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
                 if !self.mask[at] {
                     continue;
                 }
-                let z = Complex64::new(double(sum[at].re), double(sum[at].im));
-                let value = if self.plan.layers.bends { (z * cis_turns(w * self.bend[at])).re } else { z.re };
+                let mut value = 0.0;
+                for ((task, _), sum) in tasks.iter().zip(&sums) {
+                    let z = Complex64::new(double(sum[at].re), double(sum[at].im));
+                    value += if self.plan.layers.bends {
+                        (z * cis_turns(self.plan.layers.w(task.layer) * self.bend[at])).re
+                    } else {
+                        z.re
+                    };
+                }
                 *out += value * self.taper.0[x] * self.taper.1[y];
             }
         });
@@ -583,6 +698,7 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
         let tasks = self.tasks();
         let threads = rayon::current_num_threads();
         let mut first_pass = true;
+        let mut scratch = Scratch::default();
         let mut powers: Vec<Vec<[f64; POWER_LANES]>> = self
             .plan
             .partitions
@@ -607,21 +723,20 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
                 let blocks = self.plan.partitions[task.partition].kernel.points.len().div_ceil(LANES);
                 vec![vec![[T::zero(); 2 * LANES]; self.plan.shape.cells()]; blocks]
             };
-            let mut work: Vec<(Task, usize, Vec<Vec<Cell<T>>>)> = chunk
+            let mut work: Vec<Work<T>> = chunk
                 .iter()
                 .flat_map(|task| (0..copies).map(move |copy| (*task, copy)))
-                .map(|(task, copy)| (task, copy, blank(&task)))
+                .map(|(task, copy)| Work { task, copy, grids: blank(&task) })
                 .collect();
             source.rewind()?;
             while let Some(block) = source.next_block()? {
                 let prepared = self.prepare(&block);
                 let mut tables: Vec<Option<Table<T>>> = self.plan.partitions.iter().map(|_| None).collect();
                 for task in chunk {
-                    let partition = &self.plan.partitions[task.partition];
-                    tables[task.partition].get_or_insert_with(|| self.kernel_table(&prepared, partition));
+                    tables[task.partition].get_or_insert_with(|| self.kernel_table(&prepared, task.partition));
                 }
                 let rows = block.rows();
-                work.par_iter_mut().for_each(|(task, copy, grids)| {
+                work.par_iter_mut().for_each(|Work { task, copy, grids }| {
                     let part = *copy * rows / copies..(*copy + 1) * rows / copies;
                     if let Some(table) = &tables[task.partition] {
                         self.spread_rows(*task, &block, &prepared, table, part, grids);
@@ -629,24 +744,26 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
                 });
                 if first_pass {
                     powers.par_iter_mut().enumerate().for_each(|(index, out)| {
-                        let table = self.power_table(&prepared, &self.plan.partitions[index]);
+                        let table = self.power_table(&prepared, index);
                         self.add_powers(index, &block, &prepared, &table, 0..rows, out);
                     });
                 }
             }
-            for group in work.chunks_mut(copies) {
-                let (lead, others) = group.split_at_mut(1);
-                let (task, _, grids) = &mut lead[0];
-                for (_, _, more) in others {
-                    for (grid, more) in grids.iter_mut().zip(more.iter()) {
-                        grid.par_iter_mut().zip(more.par_iter()).for_each(|(cell, add)| {
-                            for (c, &a) in cell.iter_mut().zip(add) {
-                                *c = *c + a;
-                            }
-                        });
+            let mut ready: Vec<(Task, Vec<Vec<Cell<T>>>)> = Vec::with_capacity(chunk.len());
+            for Work { task, copy, grids } in work {
+                match ready.last_mut() {
+                    Some((_, whole)) if copy > 0 => {
+                        for (whole, part) in whole.iter_mut().zip(&grids) {
+                            whole.par_iter_mut().zip(part).for_each(|(cell, add)| {
+                                cell.iter_mut().zip(add).for_each(|(c, &a)| *c = *c + a);
+                            });
+                        }
                     }
+                    _ => ready.push((task, grids)),
                 }
-                self.finish(*task, grids, &mut sums.numerator);
+            }
+            for tasks in ready.chunk_by(|a, b| a.0.partition == b.0.partition) {
+                self.finish(tasks, &mut scratch, &mut sums.numerator);
             }
             first_pass = false;
             start = end;
@@ -670,7 +787,7 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
         let prepared: Vec<Prepared> = blocks.iter().map(|block| self.prepare(block)).collect();
         for task in self.tasks() {
             let partition = &self.plan.partitions[task.partition];
-            let tables: Vec<Table<T>> = prepared.iter().map(|p| self.kernel_table(p, partition)).collect();
+            let tables: Vec<Table<T>> = prepared.iter().map(|p| self.kernel_table(p, task.partition)).collect();
             let bends = Self::term_bends(partition);
             for (power, model) in spectra.images.iter().enumerate() {
                 let grids = self.model_grids(task, model);
@@ -684,10 +801,17 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
                         let rows = chunk * ROWS..((chunk + 1) * ROWS).min(block.rows());
                         let mut batch = Vec::new();
                         let mut places = Vec::new();
-                        self.samples(task, block, prepared, table, rows.clone(), false, |sample, place, turns| {
-                            batch.push(sample);
-                            places.push((place, turns));
-                        });
+                        self.samples(
+                            task,
+                            block,
+                            (prepared, table),
+                            rows.clone(),
+                            false,
+                            |sample, place, turns| {
+                                batch.push(sample);
+                                places.push((place, turns));
+                            },
+                        );
                         let mut got = vec![[0.0; 2]; batch.len()];
                         for (lane, grid) in lanes.iter().zip(&grids) {
                             gather(self.instructions, &batch, lane, grid, &mut got);
@@ -820,6 +944,73 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
             }
         }
         Ok(Spectra { images, middle_hz })
+    }
+}
+
+/// The step in wavelengths per metre between channels, if it is the same for all of several.
+fn uniform_step(hz: &[f64]) -> Option<f64> {
+    let step = (*hz.last()? - hz.first()?) / (hz.len() - 1).max(1) as f64;
+    let even = hz.windows(2).all(|pair| (pair[1] - pair[0] - step).abs() <= 1e-9 * step.abs());
+    (hz.len() > 2 && even).then(|| wavelengths_per_metre(step))
+}
+
+impl<T: GridReal> Nodes<T> {
+    /// The fewest Chebyshev points in frequency through which every station's voltages at the terms' directions are
+    /// interpolated to within `error`, measured at all channels and a few times; every channel where that is no fewer.
+    fn choose(
+        beams: &StationBeams,
+        feeds: &[usize],
+        terms: &Terms,
+        angles: &[Vec<f64>],
+        hz: &[f64],
+        error: f64,
+    ) -> Self {
+        let every = Nodes { hz: hz.to_vec(), weights: None };
+        let (low, high) = hz.iter().fold((f64::INFINITY, 0.0f64), |(low, high), &f| (low.min(f), high.max(f)));
+        let lm: Vec<[f64; 2]> = terms.points.iter().map(|p| p.aim_lm).collect();
+        let voltages = |frequencies: &[f64]| -> Vec<Vec<Complex64>> {
+            frequencies
+                .par_iter()
+                .map(|&hz| {
+                    let mut all = Vec::new();
+                    for angles in angles {
+                        for (station, &angle) in angles.iter().enumerate() {
+                            for &feed in feeds {
+                                let mut out = vec![Complex64::ZERO; lm.len()];
+                                beams.voltages(station, angle, hz, feed, &lm, &mut out);
+                                all.append(&mut out);
+                            }
+                        }
+                    }
+                    all
+                })
+                .collect()
+        };
+        if hz.len() < 6 {
+            return every;
+        }
+        let probes: Vec<f64> = hz.iter().copied().step_by(hz.len().div_ceil(12)).collect();
+        let truth = voltages(&probes);
+        for count in (3..).take_while(|&count| 3 * count <= 2 * hz.len() && count <= 24) {
+            let nodes = chebyshev_points(low, high, count);
+            let known = voltages(&nodes);
+            let matrix = interpolation(&nodes, &probes);
+            let worst = truth
+                .iter()
+                .enumerate()
+                .flat_map(|(probe, truth)| truth.iter().enumerate().map(move |(at, value)| (probe, at, *value)))
+                .map(|(probe, at, value)| {
+                    let sum: Complex64 = (0..count).map(|n| known[n][at] * matrix[[probe, n]]).sum();
+                    (sum - value).norm()
+                })
+                .fold(0.0, f64::max);
+            if worst <= error {
+                let matrix = interpolation(&nodes, hz);
+                let weights = matrix.outer_iter().map(|row| row.iter().map(|&w| real(w)).collect()).collect();
+                return Nodes { hz: nodes, weights: Some(weights) };
+            }
+        }
+        every
     }
 }
 

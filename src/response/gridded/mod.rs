@@ -1,10 +1,12 @@
 //! The fast response: windows, terms and layers, to a promised relative error.
 //!
 //! A visibility's gridding kernel is the transform of its screen A_pq*(l,m) exp(2πi w κ(l,m)). Instead of one table per
-//! baseline, time, channel and w, a partition's screens are expanded in a few common screens θ_j, its *terms* ([`terms`]),
+//! baseline, time, channel and w, a partition's screens are expanded in a few common screens θ_j, its *terms*,
 //! with coefficients that are the screen's own values in K directions:
 //!
-//!   N(l,m) = Re Σ_layers exp(2πi w_layer κ) Σ_j θ_j(l,m) · F[ Σ_k c_kj ω_k V_k ⊛ window ](l,m) / taper(l,m)
+//! ```text
+//! N(l,m) = Re Σ_layers exp(2πi w_layer κ) Σ_j θ_j(l,m) · F[ Σ_k c_kj ω_k V_k ⊛ window ](l,m) / taper(l,m)
+//! ```
 //!
 //! F is a Fourier transform of a grid filled with a plain separable window at each visibility's exact position. The terms
 //! of a partition lie interleaved in memory, so that one visibility is a run of fused multiply-adds on whole vectors.

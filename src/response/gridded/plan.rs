@@ -90,6 +90,8 @@ pub(crate) struct Plan {
     /// Index of the first partition of a pair's class; its channel groups follow.
     pub class_of_pair: HashMap<(u32, u32), usize>,
     pub channel_groups: Vec<Range<usize>>,
+    /// A few times of the observation, to test what depends on time.
+    pub probe_times: Vec<f64>,
     pub double: bool,
     pub report: KernelReport,
 }
@@ -272,6 +274,10 @@ impl Plan {
             partitions,
             class_of_pair,
             channel_groups,
+            probe_times: [0, survey.times.len() / 2, survey.times.len().saturating_sub(1)]
+                .iter()
+                .filter_map(|&at| survey.times.get(at).copied())
+                .collect(),
             double,
             report,
         })
@@ -332,7 +338,8 @@ fn products_rms(family: &Family) -> (f64, f64) {
 /// Station pairs by the patterns of their two stations.
 fn pair_classes(beams: &StationBeams, pairs: &[(u32, u32)]) -> Vec<Vec<(u32, u32)>> {
     let names: Vec<String> = (0..beams.len()).map(|s| beams.beam(s).pattern.describe()).collect();
-    let mut classes: Vec<((&str, &str), Vec<(u32, u32)>)> = Vec::new();
+    type Class<'a> = ((&'a str, &'a str), Vec<(u32, u32)>);
+    let mut classes: Vec<Class> = Vec::new();
     for &(p, q) in pairs {
         let (a, b) = (names[p as usize].as_str(), names[q as usize].as_str());
         let key = if a <= b { (a, b) } else { (b, a) };

@@ -74,8 +74,8 @@ mod x86 {
                 #[inline(always)]
                 fn load(cell: &Cell<$t>) -> Self {
                     let mut out = [unsafe { $load(cell.as_ptr()) }; $count];
-                    for i in 1..$count {
-                        out[i] = unsafe { $load(cell.as_ptr().add(i * $width)) };
+                    for (i, out) in out.iter_mut().enumerate().skip(1) {
+                        *out = unsafe { $load(cell.as_ptr().add(i * $width)) };
                     }
                     $name(out)
                 }

@@ -26,7 +26,7 @@ pub(crate) fn interpolation(nodes: &[f64], targets: &[f64]) -> Array2<f64> {
             continue;
         }
         let weight = |j: usize| {
-            let sign = if j % 2 == 0 { 1.0 } else { -1.0 };
+            let sign = if j.is_multiple_of(2) { 1.0 } else { -1.0 };
             let end = if j == 0 || j == last { 0.5 } else { 1.0 };
             sign * end / (x - nodes[j])
         };

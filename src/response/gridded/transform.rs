@@ -47,13 +47,13 @@ impl GridShape {
 fn good_length(n: usize) -> usize {
     let smooth = |mut m: usize| {
         for p in [2, 3, 5] {
-            while m % p == 0 {
+            while m.is_multiple_of(p) {
                 m /= p;
             }
         }
         m == 1
     };
-    (n..).find(|&m| m % 2 == 0 && smooth(m)).unwrap_or(n)
+    (n..).find(|&m| m.is_multiple_of(2) && smooth(m)).unwrap_or(n)
 }
 
 /// Transforms for one grid shape and patch size.
@@ -64,6 +64,14 @@ pub(crate) struct Transform<T: GridReal> {
     to_grid: (Arc<dyn Fft<T>>, Arc<dyn Fft<T>>),
     /// Index in the transform of every stored column and row, and of every pixel column and row.
     at: Places,
+}
+
+/// Memory that transforms use again and again.
+#[derive(Debug, Default)]
+pub(crate) struct Scratch<T> {
+    rows: Vec<Complex<T>>,
+    /// What the last call made.
+    pub images: Vec<Vec<Complex<T>>>,
 }
 
 struct Places {
@@ -102,12 +110,16 @@ impl<T: GridReal> Transform<T> {
         }
     }
 
-    /// The patch images of the first `terms` terms of a grid, `[term][y][x]`; not yet divided by the window's transform.
-    pub(crate) fn to_patch(&self, grid: &[Cell<T>], terms: usize) -> Vec<Vec<Complex<T>>> {
+    /// The patch images of the first `terms` terms of a grid, `[term][y][x]`, into `scratch.images`; not yet divided by the
+    /// window's transform.
+    pub(crate) fn to_patch(&self, grid: &[Cell<T>], terms: usize, scratch: &mut Scratch<T>) {
         let (nx, ny) = self.size;
         let (gx, gy) = self.shape.fft;
         let zero = Complex::new(T::zero(), T::zero());
-        let mut rows = vec![zero; self.shape.height * terms * nx];
+        let Scratch { rows, images } = scratch;
+        // every entry is overwritten: no need to clear what an earlier call left
+        rows.resize(self.shape.height * terms * nx, zero);
+        images.resize_with(images.len().max(terms), Vec::new);
         rows.par_chunks_mut(terms * nx).zip(grid.par_chunks(self.shape.width)).for_each_init(
             || (vec![zero; gx * terms], vec![zero; self.to_sky.0.get_inplace_scratch_len()]),
             |(buffer, scratch), (out, cells)| {
@@ -126,12 +138,11 @@ impl<T: GridReal> Transform<T> {
                 }
             },
         );
-        (0..terms)
-            .into_par_iter()
-            .map(|term| {
-                let mut image = vec![zero; nx * ny];
-                let mut buffer = vec![zero; gy * STRIP];
-                let mut scratch = vec![zero; self.to_sky.1.get_inplace_scratch_len()];
+        let rows = &*rows;
+        images[..terms].par_iter_mut().enumerate().for_each_init(
+            || (vec![zero; gy * STRIP], vec![zero; self.to_sky.1.get_inplace_scratch_len()]),
+            |(buffer, scratch), (term, image)| {
+                image.resize(nx * ny, zero);
                 for start in (0..nx).step_by(STRIP) {
                     let count = STRIP.min(nx - start);
                     buffer.fill(zero);
@@ -142,16 +153,15 @@ impl<T: GridReal> Transform<T> {
                             *entry = *entry + value;
                         }
                     }
-                    self.to_sky.1.process_with_scratch(&mut buffer[..count * gy], &mut scratch);
+                    self.to_sky.1.process_with_scratch(&mut buffer[..count * gy], scratch);
                     for (line, &at) in image.chunks_exact_mut(nx).zip(&self.at.ys) {
                         for (c, out) in line[start..start + count].iter_mut().enumerate() {
                             *out = buffer[c * gy + at];
                         }
                     }
                 }
-                image
-            })
-            .collect()
+            },
+        );
     }
 
     /// The exact transpose of [`Transform::to_patch`] with conjugate phases: patch images into a grid.

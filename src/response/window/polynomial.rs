@@ -59,8 +59,10 @@ real!(f64);
 #[inline(always)]
 pub fn locate(position: f64, support: usize) -> (i64, f64) {
     let start = position - 0.5 * support as f64;
-    let first = start.ceil();
-    (first as i64, first - start)
+    // the smallest whole number not below, without the library call that `ceil` is on plain x86-64
+    let cut = start as i64;
+    let first = if (cut as f64) < start { cut + 1 } else { cut };
+    (first, first as f64 - start)
 }
 
 /// A window as one polynomial a tap.
