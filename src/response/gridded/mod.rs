@@ -25,6 +25,7 @@ mod register;
 mod smooth;
 mod survey;
 mod terms;
+mod tiles;
 mod transform;
 mod vector;
 

@@ -59,6 +59,8 @@ pub(crate) struct Layers {
     pub first: f64,
     /// Distance between layers, wavelengths.
     pub step: f64,
+    /// Its inverse.
+    pub per_step: f64,
     pub count: usize,
 }
 
@@ -69,7 +71,8 @@ impl Layers {
         if self.count == 1 {
             return 0;
         }
-        (((w - self.first) / self.step).round().max(0.0) as usize).min(self.count - 1)
+        // the conversion saturates: below the first layer is the first
+        (((w - self.first) * self.per_step + 0.5) as usize).min(self.count - 1)
     }
 
     /// w of a layer.
@@ -353,8 +356,8 @@ fn pair_classes(beams: &StationBeams, pairs: &[(u32, u32)]) -> Vec<Vec<(u32, u32
 
 fn make_layers(bends: bool, (low, high): (f64, f64), count: usize) -> Layers {
     if !bends {
-        return Layers { bends, first: 0.0, step: 0.0, count: 1 };
+        return Layers { bends, first: 0.0, step: 0.0, per_step: 0.0, count: 1 };
     }
     let step = (high - low) / count as f64;
-    Layers { bends, first: low + 0.5 * step, step, count }
+    Layers { bends, first: low + 0.5 * step, step, per_step: step.recip(), count }
 }

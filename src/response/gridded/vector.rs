@@ -182,7 +182,8 @@ fn window_taps<T: GridReal, const FUSED: bool>(window: &PolynomialWindow<T>, f: 
     } else {
         window.taps(f, &mut taps);
     }
-    taps
+    // kept in memory: a tap is then broadcast by the load, instead of shuffled out of a register
+    std::hint::black_box(taps)
 }
 
 #[inline(always)]
