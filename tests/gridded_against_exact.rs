@@ -61,3 +61,34 @@ fn long_w() {
     let setting = Setting { radius_m: 6_000.0, aim: Direction::from_deg(152.3, 5.0), ..Setting::default() };
     errors(&setting, 0.05, (40, 48), Direction::from_deg(152.9, 4.5), &ALL);
 }
+
+/// Random arrays: any declination from pole to pole, w up to 50 000 wavelengths, fields from 0.5 to 8 λ/D, pointing offsets
+/// up to a third of the beam's width. Fixed seeds.
+#[test]
+fn random_arrays() {
+    use rand::{Rng, SeedableRng};
+    let mut rng = rand_chacha::ChaCha8Rng::seed_from_u64(2024);
+    let lambda_over_d = 0.22 / 13.0;
+    for case in 0..10u64 {
+        let declination = [-90.0, 90.0, 0.0, 53.0][case as usize % 4] + if case > 3 { 9.0 } else { 0.0 };
+        let declination = if declination > 90.0 { 80.0 } else { declination };
+        let widths = [0.5, 8.0, 2.0, 4.0, 1.0][case as usize % 5];
+        let field = widths * lambda_over_d;
+        // w in wavelengths is at most the longest baseline; half of it is common
+        let longest_w = if widths < 3.0 { 50_000.0 } else { 4_000.0 };
+        let setting = Setting {
+            stations: 5,
+            times: 4,
+            channels: 3,
+            radius_m: longest_w * 0.22 / 2.0,
+            aim: Direction::from_deg(360.0 * rng.random::<f64>(), declination),
+            offset: lambda_over_d / 3.0,
+            beam: [Beam::Mixed, Beam::Gaussian][case as usize % 2],
+            seed: case,
+            interval: 0.08,
+            ..Setting::default()
+        };
+        println!("case {case}: declination {declination}, field {widths} λ/D, w to {longest_w}");
+        errors(&setting, field, (32, 36), setting.aim, &[1e-2, 1e-4, 1e-6]);
+    }
+}

@@ -798,6 +798,32 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
         sky: &[Component],
         blocks: &mut [Block],
     ) -> Result<(), ResponseError> {
+        let groups = self.intensity.groups().len();
+        let sums = self.predicted(geometry, sky, blocks)?;
+        for (block, sums) in blocks.iter_mut().zip(&sums) {
+            block.data.fill(Complex32::ZERO);
+            for row in 0..block.rows() {
+                for channel in 0..block.channels {
+                    let at = block.index(row, channel);
+                    for (group, (_, hands)) in self.intensity.groups().iter().enumerate() {
+                        let [re, im] = sums[(row * block.channels + channel) * groups + group];
+                        for &hand in hands {
+                            block.data[at + hand] = Complex32::new(re as f32, im as f32);
+                        }
+                    }
+                }
+            }
+        }
+        Ok(())
+    }
+
+    /// Visibilities of `sky`, real and imaginary, `[block][(row, channel, group of hands)]`, before they are rounded to f32.
+    pub(super) fn predicted(
+        &self,
+        geometry: &ImageGeometry,
+        sky: &[Component],
+        blocks: &[Block],
+    ) -> Result<Vec<Vec<[f64; 2]>>, ResponseError> {
         let spectra = self.model_images(geometry, sky)?;
         let groups = self.intensity.groups().len();
         let mut sums: Vec<Vec<[f64; 2]>> =
@@ -850,21 +876,13 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
                 }
             }
         }
-        for (block, sums) in blocks.iter_mut().zip(&sums) {
-            block.data.fill(Complex32::ZERO);
-            for row in 0..block.rows() {
-                for channel in 0..block.channels {
-                    let at = block.index(row, channel);
-                    for (group, (_, hands)) in self.intensity.groups().iter().enumerate() {
-                        let [re, im] = sums[(row * block.channels + channel) * groups + group];
-                        for &hand in hands {
-                            block.data[at + hand] = Complex32::new(re as f32, im as f32);
-                        }
-                    }
-                }
-            }
-        }
-        Ok(())
+        Ok(sums)
+    }
+
+    /// The plan this engine follows.
+    #[cfg(test)]
+    pub(super) fn plan(&self) -> &Plan {
+        &self.plan
     }
 
     /// The grids a task predicts from: the model times conjugate screens and layer phase, tapered and transformed.

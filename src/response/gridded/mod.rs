@@ -29,6 +29,9 @@ mod tiles;
 mod transform;
 mod vector;
 
+#[cfg(test)]
+mod tests;
+
 pub use plan::{KernelReport, LARGEST_TOLERANCE, SMALLEST_TOLERANCE};
 pub use transform::GridShape;
 pub use vector::Instructions;
