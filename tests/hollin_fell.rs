@@ -17,6 +17,8 @@ use std::path::Path;
 
 const RUN: &str = r#"
 station_table = "fell-stations.csv"
+[[pointing]]
+visibilities = "fell-1-clean.uvfits"
 [image]
 centre_deg = [152.678, 41.863]
 size_px = [800, 800]
