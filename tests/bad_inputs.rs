@@ -422,7 +422,6 @@ fn disk_full() {
                 "disk_full: ran on {tried} memory disks that filled up ({}), and with a failing writer",
                 way.join(" ")
             ));
-            return;
         }
         Err(reason) => say(&format!("disk_full: NO MOUNT ({reason}); ran with a failing writer only")),
     }

@@ -235,7 +235,7 @@ fn a_source_off_the_image_is_refused_by_name() {
         Options::default(),
     )
     .unwrap();
-    let error = coarse.predict(&[away.clone()], &mut [scene.block.clone()]).unwrap_err().to_string();
+    let error = coarse.predict(std::slice::from_ref(&away), &mut [scene.block.clone()]).unwrap_err().to_string();
     assert!(error.contains("\"c\"") && error.contains("too coarse"), "{error}");
     let mut block = scene.block.clone();
     block.data.fill(Complex32::ZERO);
