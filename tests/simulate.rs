@@ -116,7 +116,7 @@ pointing_arcmin = [2.0, -3.5]
     /// Runs, and reads back what was written: one source a pointing.
     fn observed(&self) -> Vec<MemorySource> {
         self.simulate(&["--quiet"], 0);
-        let sources = open(&self.path("seen.fits"), &Selection::All).expect("a readable file");
+        let sources = open(self.path("seen.fits"), &Selection::All).expect("a readable file");
         sources.into_iter().map(|mut s| MemorySource::read(s.as_mut()).expect("readable rows")).collect()
     }
 }
