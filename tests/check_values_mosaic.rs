@@ -180,7 +180,7 @@ fn d3_two_unequal_fields() {
 #[test]
 fn d5_noise_between_fields() {
     let mut pair = [field(-0.5, 0.0, 0.0, 1.0), field(0.5, 0.0, 0.0, 1.0)];
-    close("midway", 1.0 / sums_at(&mut pair, 0.0, 0.0).1.sqrt(), 1.4142136, 1e-7);
+    close("midway", 1.0 / sums_at(&mut pair, 0.0, 0.0).1.sqrt(), std::f64::consts::SQRT_2, 1e-7);
     let mut single = [field(0.0, 0.5, 0.0, 1.0)];
     close("half power", 1.0 / sums_at(&mut single, 0.0, 0.0).1.sqrt(), 2.0, 1e-7);
 }
