@@ -468,7 +468,7 @@ fn the_run_file_can_say_where_the_stations_looked() {
 #[test]
 fn a_pointing_that_misses_the_image_is_told() {
     let invented = Invented { times: 2, ..Invented::default() };
-    let both = [("HERE", 99.6), ("ELSEWHERE", 140.0)]
+    let both = [("HERE", 99.6), ("ELSEWHERE", 250.0)]
         .map(|(name, ra)| invented.pointing(name, Direction::from_deg(ra, 20.0)));
     let folder = Folder::new();
     write_pointings(&folder.path("data.idifits"), &both);
