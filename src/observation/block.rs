@@ -34,4 +34,25 @@ impl Block {
     pub fn index(&self, row: usize, channel: usize) -> usize {
         (row * self.channels + channel) * self.hands
     }
+
+    /// Empties the block, for rows of `channels` and `hands`, and keeps its memory.
+    pub(super) fn clear(&mut self, channels: usize, hands: usize) {
+        self.mjd_utc.clear();
+        self.uvw_m.clear();
+        self.first.clear();
+        self.second.clear();
+        self.data.clear();
+        self.weight.clear();
+        (self.channels, self.hands) = (channels, hands);
+    }
+
+    /// Moves the rows of `other` to the end of this block; both have the same channels and hands.
+    pub(super) fn append(&mut self, other: &mut Block) {
+        self.mjd_utc.append(&mut other.mjd_utc);
+        self.uvw_m.append(&mut other.uvw_m);
+        self.first.append(&mut other.first);
+        self.second.append(&mut other.second);
+        self.data.append(&mut other.data);
+        self.weight.append(&mut other.weight);
+    }
 }

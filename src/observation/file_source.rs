@@ -6,10 +6,11 @@ use super::open::content;
 use super::station_table::StationTables;
 use super::{Block, BlockSource, Observation, ObservationError, SPEED_OF_LIGHT};
 use crate::fits::FitsFile;
+use rayon::prelude::*;
 use std::sync::Arc;
 
-/// Bytes of the file read at a time: small enough to stay in the processor's cache until they are converted.
-const CHUNK: usize = 256 << 10;
+/// Bytes of the file that one thread reads and converts at a time: few enough to stay in its cache, enough to be worth its wake-up.
+const CHUNK: usize = 1 << 20;
 /// Dates outside (1941 to 2132) are taken for damage or for another kind of date.
 const PLAUSIBLE_MJD: std::ops::RangeInclusive<f64> = 30_000.0..=100_000.0;
 
@@ -91,12 +92,31 @@ pub(super) struct FileSource {
     pub block_rows: usize,
     /// Position: range, row.
     next: (usize, u64),
-    raw: Vec<u8>,
-    scratch: Box<Scratch>,
+    decoders: Vec<Decoder>,
     /// Source number of the first row, where the file has no source table to tell several apart.
     lone_source: Option<i64>,
     skipped: Skipped,
     counted: bool,
+}
+
+/// What it takes to decode a run of rows, and what was found there; several work side by side.
+#[derive(Debug, Default)]
+struct Decoder {
+    raw: Vec<u8>,
+    scratch: Box<Scratch>,
+    part: Block,
+    skipped: Skipped,
+    failed: Option<ObservationError>,
+}
+
+/// What decoding looks up and does not change.
+#[derive(Clone, Copy)]
+struct Lookup<'a> {
+    shared: &'a Shared,
+    segment: &'a Segment,
+    key: Key,
+    uvw_scale: f64,
+    lone_source: Option<i64>,
 }
 
 /// Rows that are not handed out.
@@ -127,8 +147,7 @@ impl FileSource {
             uvw_scale: 1.0,
             block_rows,
             next,
-            raw: Vec::new(),
-            scratch: Box::default(),
+            decoders: Vec::new(),
             lone_source: None,
             skipped: Skipped::default(),
             counted: false,
@@ -158,7 +177,7 @@ impl FileSource {
     }
 
     /// Appends rows of the file to `block` until it is full or the rows have ended.
-    fn fill(&mut self, block: &mut Block, raw: &mut Vec<u8>) -> Result<(), ObservationError> {
+    fn fill(&mut self, block: &mut Block) -> Result<(), ObservationError> {
         let shared = Arc::clone(&self.shared);
         while block.rows() < self.block_rows {
             let Some(range) = self.ranges.get(self.next.0) else { return Ok(()) };
@@ -169,35 +188,102 @@ impl FileSource {
             }
             let segment = &shared.segments[range.segment];
             let per_chunk = (CHUNK / segment.row_bytes).max(1) as u64;
-            let rows = per_chunk.min(range.end - self.next.1).min((self.block_rows - block.rows()) as u64);
-            raw.resize(rows as usize * segment.row_bytes, 0);
-            shared.file.read_at(segment.start + self.next.1 * segment.row_bytes as u64, raw)?;
-            for (n, bytes) in raw.chunks_exact(segment.row_bytes).enumerate() {
-                self.take_row(&shared, segment, self.next.1 + n as u64, bytes, block)?;
+            let rows = (range.end - self.next.1).min((self.block_rows - block.rows()) as u64);
+            let chunks = rows.div_ceil(per_chunk).min(rayon::current_num_threads() as u64).max(1);
+            let (first, rows) = (self.next.1, rows.min(chunks * per_chunk));
+            let lone_source = self.lone_source(&shared, segment, first)?;
+            let lookup = Lookup { shared: &shared, segment, key: self.key, uvw_scale: self.uvw_scale, lone_source };
+            self.decoders.resize_with(self.decoders.len().max(chunks as usize), Decoder::default);
+            let decoders = &mut self.decoders[..chunks as usize];
+            decoders.par_iter_mut().enumerate().for_each(|(chunk, decoder)| {
+                let from = first + chunk as u64 * per_chunk;
+                decoder.decode(lookup, (from, (from + per_chunk).min(first + rows)), block.channels, block.hands);
+            });
+            for decoder in decoders {
+                if let Some(error) = decoder.failed.take() {
+                    return Err(error);
+                }
+                block.append(&mut decoder.part);
+                self.skipped.add(std::mem::take(&mut decoder.skipped));
             }
             self.next.1 += rows;
         }
         Ok(())
     }
 
-    fn take_row(
+    /// The source that all rows must name where nothing tells several apart: that of the first row read.
+    fn lone_source(
         &mut self,
         shared: &Shared,
         segment: &Segment,
         row: u64,
+    ) -> Result<Option<i64>, ObservationError> {
+        let Some(source) = segment.source.as_ref().filter(|_| self.key.source.is_none()) else { return Ok(None) };
+        if self.lone_source.is_none() {
+            let mut bytes = vec![0; segment.row_bytes];
+            shared.file.read_at(segment.start + row * segment.row_bytes as u64, &mut bytes)?;
+            self.lone_source = Some(source.value(&bytes).round() as i64);
+        }
+        Ok(self.lone_source)
+    }
+
+    /// Adds what a whole pass has counted to the notes, once.
+    fn note_skipped(&mut self) {
+        if std::mem::replace(&mut self.counted, true) {
+            return;
+        }
+        let Skipped { autocorrelations, without_coordinates, reversed } = self.skipped;
+        let notes = &mut self.observation.notes;
+        if autocorrelations > 0 {
+            notes.push(format!("{autocorrelations} rows are autocorrelations: skipped"));
+        }
+        if without_coordinates > 0 {
+            notes.push(format!("{without_coordinates} rows have neither usable data nor coordinates: skipped"));
+        }
+        if reversed > 0 {
+            let can = self.shared.segments.iter().all(|s| s.matrix.can_swap());
+            let what = if can { "turned" } else { "left, since a crossed hand is missing" };
+            notes.push(format!("{reversed} rows name the later station of the table first: {what}"));
+        }
+    }
+}
+
+impl Decoder {
+    /// Decodes rows `first..end` into `part`, up to the first that is wrong.
+    fn decode(&mut self, lookup: Lookup, (first, end): (u64, u64), channels: usize, hands: usize) {
+        let row_bytes = lookup.segment.row_bytes;
+        let rows = (end - first) as usize;
+        let mut part = std::mem::take(&mut self.part);
+        part.clear(channels, hands);
+        let mut raw = std::mem::take(&mut self.raw);
+        raw.resize(rows * row_bytes, 0);
+        let start = lookup.segment.start + first * row_bytes as u64;
+        let decoded = lookup.shared.file.read_at(start, &mut raw).map_err(Into::into).and_then(|()| {
+            let mut numbered = raw.chunks_exact(row_bytes).zip(first..);
+            numbered.try_for_each(|(bytes, row)| self.take_row(lookup, row, bytes, &mut part))
+        });
+        self.failed = decoded.err();
+        self.raw = raw;
+        self.part = part;
+    }
+
+    fn take_row(
+        &mut self,
+        lookup: Lookup,
+        row: u64,
         bytes: &[u8],
         block: &mut Block,
     ) -> Result<(), ObservationError> {
+        let Lookup { shared, segment, key, uvw_scale, lone_source } = lookup;
         let complain = |problem: String, expected: &str| {
             content(shared.file.path(), format!("{}: {problem}", segment.row_label(row)), expected)
         };
-        let (by_source, by_set_up) = (self.key.source.is_some(), self.key.set_up.is_some());
-        if (by_source || by_set_up) && Key::of(segment, bytes, by_source, by_set_up) != self.key {
+        let (by_source, by_set_up) = (key.source.is_some(), key.set_up.is_some());
+        if (by_source || by_set_up) && Key::of(segment, bytes, by_source, by_set_up) != key {
             return Ok(());
         }
-        if !by_source && let Some(source) = &segment.source {
+        if let (Some(first), Some(source)) = (lone_source, &segment.source) {
             let source = source.value(bytes).round() as i64;
-            let first = *self.lone_source.get_or_insert(source);
             if source != first {
                 let problem = format!("SOURCE is {source}, in the rows before it was {first}");
                 return Err(complain(problem, "a source table (SU or SOURCE) when there are several sources"));
@@ -217,7 +303,7 @@ impl FileSource {
         let start = block.weight.len();
         segment.matrix.append(bytes, &mut self.scratch, &mut block.data, &mut block.weight);
         // Stored for first minus second station, in light travel time: ours is r_second − r_first, in metres.
-        let mut uvw = [0, 1, 2].map(|i| -SPEED_OF_LIGHT * self.uvw_scale * segment.uvw[i].value(bytes));
+        let mut uvw = [0, 1, 2].map(|i| -SPEED_OF_LIGHT * uvw_scale * segment.uvw[i].value(bytes));
         let mjd = segment.mjd.value(bytes);
         let located = uvw.iter().all(|x| x.is_finite());
         if !located || !PLAUSIBLE_MJD.contains(&mjd) {
@@ -247,25 +333,13 @@ impl FileSource {
         block.second.push(second);
         Ok(())
     }
+}
 
-    /// Adds what a whole pass has counted to the notes, once.
-    fn note_skipped(&mut self) {
-        if std::mem::replace(&mut self.counted, true) {
-            return;
-        }
-        let Skipped { autocorrelations, without_coordinates, reversed } = self.skipped;
-        let notes = &mut self.observation.notes;
-        if autocorrelations > 0 {
-            notes.push(format!("{autocorrelations} rows are autocorrelations: skipped"));
-        }
-        if without_coordinates > 0 {
-            notes.push(format!("{without_coordinates} rows have neither usable data nor coordinates: skipped"));
-        }
-        if reversed > 0 {
-            let can = self.shared.segments.iter().all(|s| s.matrix.can_swap());
-            let what = if can { "turned" } else { "left, since a crossed hand is missing" };
-            notes.push(format!("{reversed} rows name the later station of the table first: {what}"));
-        }
+impl Skipped {
+    fn add(&mut self, other: Skipped) {
+        self.autocorrelations += other.autocorrelations;
+        self.without_coordinates += other.without_coordinates;
+        self.reversed += other.reversed;
     }
 }
 
@@ -303,10 +377,7 @@ impl BlockSource for FileSource {
 
     fn next_block(&mut self) -> Result<Option<Block>, ObservationError> {
         let mut block = self.empty_block();
-        let mut raw = std::mem::take(&mut self.raw);
-        let filled = self.fill(&mut block, &mut raw);
-        self.raw = raw;
-        filled?;
+        self.fill(&mut block)?;
         if block.rows() == 0 {
             self.note_skipped();
             return Ok(None);
