@@ -175,16 +175,17 @@ fn coefficients<T: GridReal, const FUSED: bool>(sample: &Sample<T>, lane: &Lane<
 }
 
 #[inline(always)]
-fn window_taps<T: GridReal, const FUSED: bool>(window: &PolynomialWindow<T>, f: T) -> [T; MAX_TAPS] {
-    let mut taps = [T::default(); MAX_TAPS];
+fn window_taps<T: GridReal, const FUSED: bool>(window: &PolynomialWindow<T>, f: T, taps: &mut [T; MAX_TAPS]) {
     if FUSED {
-        window.taps_fused(f, &mut taps);
+        window.taps_fused(f, taps);
     } else {
-        window.taps(f, &mut taps);
+        window.taps(f, taps);
     }
-    // kept in memory: a tap is then broadcast by the load, instead of shuffled out of a register
-    std::hint::black_box(taps)
 }
+
+/// Samples whose coefficients and taps are computed together, before any of them meets the grid. The two loops then each
+/// run at the processor's pace; sample by sample, every sum on the grid waits for its coefficients.
+const TOGETHER: usize = 32;
 
 #[inline(always)]
 fn spread_body<T: GridReal, R: Register<T>, const W: usize, const FUSED: bool>(
@@ -194,23 +195,31 @@ fn spread_body<T: GridReal, R: Register<T>, const W: usize, const FUSED: bool>(
 ) {
     // a support of 0 stands for any
     let support = if W == 0 { lane.window.support() } else { W };
-    for sample in samples {
-        let m = coefficients::<T, FUSED>(sample, lane);
-        let mut value = [T::default(); 2 * LANES];
-        for j in 0..LANES {
-            value[j] = m[j] * sample.re - m[j + LANES] * sample.im;
-            value[j + LANES] = fma::<T, FUSED>(m[j], sample.im, m[j + LANES] * sample.re);
-        }
-        let value = R::load(&value);
-        let across = window_taps::<T, FUSED>(lane.window, sample.fx);
-        let down = window_taps::<T, FUSED>(lane.window, sample.fy);
-        let mut start = sample.cell as usize;
-        for &tap in &down[..support] {
-            let line = value.times(tap);
-            for (cell, &tap) in grid[start..start + support].iter_mut().zip(&across[..support]) {
-                line.times_plus(tap, R::load(cell)).store(cell);
+    let mut values = [[T::default(); 2 * LANES]; TOGETHER];
+    let mut across = [[T::default(); MAX_TAPS]; TOGETHER];
+    let mut down = [[T::default(); MAX_TAPS]; TOGETHER];
+    for samples in samples.chunks(TOGETHER) {
+        for (i, sample) in samples.iter().enumerate() {
+            let m = coefficients::<T, FUSED>(sample, lane);
+            for j in 0..LANES {
+                values[i][j] = m[j] * sample.re - m[j + LANES] * sample.im;
+                values[i][j + LANES] = fma::<T, FUSED>(m[j], sample.im, m[j + LANES] * sample.re);
             }
-            start += lane.width;
+            window_taps::<T, FUSED>(lane.window, sample.fx, &mut across[i]);
+            window_taps::<T, FUSED>(lane.window, sample.fy, &mut down[i]);
+        }
+        // kept in memory: a tap is then broadcast by the load, instead of shuffled out of a register
+        let (values, across, down) = std::hint::black_box((&values, &across, &down));
+        for (i, sample) in samples.iter().enumerate() {
+            let value = R::load(&values[i]);
+            let mut start = sample.cell as usize;
+            for &tap in &down[i][..support] {
+                let line = value.times(tap);
+                for (cell, &tap) in grid[start..start + support].iter_mut().zip(&across[i][..support]) {
+                    line.times_plus(tap, R::load(cell)).store(cell);
+                }
+                start += lane.width;
+            }
         }
     }
 }
@@ -223,32 +232,42 @@ fn gather_body<T: GridReal, R: Register<T>, const W: usize, const FUSED: bool>(
     out: &mut [[f64; 2]],
 ) {
     let support = if W == 0 { lane.window.support() } else { W };
-    for (sample, out) in samples.iter().zip(out) {
-        let across = window_taps::<T, FUSED>(lane.window, sample.fx);
-        let down = window_taps::<T, FUSED>(lane.window, sample.fy);
-        let zero = [T::default(); 2 * LANES];
-        let mut sum = R::load(&zero);
-        let mut start = sample.cell as usize;
-        for &tap in &down[..support] {
-            let mut line = R::load(&zero);
-            for (cell, &tap) in grid[start..start + support].iter().zip(&across[..support]) {
-                line = R::load(cell).times_plus(tap, line);
+    let zero = [T::default(); 2 * LANES];
+    let mut values = [zero; TOGETHER];
+    let mut across = [[T::default(); MAX_TAPS]; TOGETHER];
+    let mut down = [[T::default(); MAX_TAPS]; TOGETHER];
+    for (samples, out) in samples.chunks(TOGETHER).zip(out.chunks_mut(TOGETHER)) {
+        for (i, sample) in samples.iter().enumerate() {
+            window_taps::<T, FUSED>(lane.window, sample.fx, &mut across[i]);
+            window_taps::<T, FUSED>(lane.window, sample.fy, &mut down[i]);
+        }
+        let (across, down) = std::hint::black_box((&across, &down));
+        for (i, sample) in samples.iter().enumerate() {
+            let mut sum = R::load(&zero);
+            let mut start = sample.cell as usize;
+            for &tap in &down[i][..support] {
+                let mut line = R::load(&zero);
+                for (cell, &tap) in grid[start..start + support].iter().zip(&across[i][..support]) {
+                    line = R::load(cell).times_plus(tap, line);
+                }
+                sum = line.times_plus(tap, sum);
+                start += lane.width;
             }
-            sum = line.times_plus(tap, sum);
-            start += lane.width;
+            sum.store(&mut values[i]);
         }
-        let mut value = zero;
-        sum.store(&mut value);
-        let m = coefficients::<T, FUSED>(sample, lane);
-        // Σ conj(m) · value
-        let (mut re, mut im) = (0.0, 0.0);
-        for j in 0..LANES {
-            let (mr, mi, vr, vi) = (double(m[j]), double(m[j + LANES]), double(value[j]), double(value[j + LANES]));
-            re += mr * vr + mi * vi;
-            im += mr * vi - mi * vr;
+        for ((sample, value), out) in samples.iter().zip(&values).zip(out) {
+            let m = coefficients::<T, FUSED>(sample, lane);
+            // Σ conj(m) · value
+            let (mut re, mut im) = (0.0, 0.0);
+            for j in 0..LANES {
+                let (mr, mi, vr, vi) =
+                    (double(m[j]), double(m[j + LANES]), double(value[j]), double(value[j + LANES]));
+                re += mr * vr + mi * vi;
+                im += mr * vi - mi * vr;
+            }
+            out[0] += re;
+            out[1] += im;
         }
-        out[0] += re;
-        out[1] += im;
     }
 }
 
