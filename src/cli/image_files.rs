@@ -69,7 +69,7 @@ impl Images {
                 unit: "(Jy/beam)^{−2}",
                 quantity: "Weight: inverse variance of the flat sky",
                 what: "inverse variance of the dirty image",
-                caption: "One over the square of this number's root is the thermal noise at a pixel, as the weights of the \
+                caption: "One over the square root of this number is the thermal noise at a pixel, as the weights of the \
                           visibilities state it.",
                 with_beam: false,
             },
