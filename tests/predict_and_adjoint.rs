@@ -34,7 +34,7 @@ fn sky(geometry: &ImageGeometry, count: usize, on_pixels: bool, seed: u64) -> Ve
 
 fn relative(got: &Block, want: &Block) -> f64 {
     let mut sums = (0.0, 0.0);
-    for (g, w) in got.data.iter().zip(&want.data) {
+    for ((g, w), _) in got.data.iter().zip(&want.data).zip(&got.weight).filter(|(_, weight)| **weight > 0.0) {
         sums.0 += f64::from((g - w).norm_sqr());
         sums.1 += f64::from(w.norm_sqr());
     }

@@ -37,6 +37,7 @@ fn divided(sums: &Sums, lowest_response: f64, by: impl Fn(f64, f64) -> f64) -> A
 #[cfg(test)]
 mod tests {
     use super::*;
+    use approx::assert_abs_diff_eq;
     use ndarray::array;
 
     /// Check value D6 (definitions of the linear mosaic): 1 Jy at A = 0.5 in one field of weight 1 gives N = A²S = 0.25,
@@ -44,14 +45,14 @@ mod tests {
     #[test]
     fn one_source_in_one_field_and_in_two() {
         let sums = Sums { numerator: array![[0.25, 0.0]], normaliser: array![[0.25, 1.0]] };
-        assert!((flat_sky(&sums, 0.1)[[0, 0]] - 1.0).abs() < 1e-15);
-        assert!((flat_noise(&sums, 0.1)[[0, 0]] - 0.5).abs() < 1e-15);
+        assert_abs_diff_eq!(flat_sky(&sums, 0.1)[[0, 0]], 1.0, epsilon = 1e-15);
+        assert_abs_diff_eq!(flat_noise(&sums, 0.1)[[0, 0]], 0.5, epsilon = 1e-15);
         assert!(flat_sky(&sums, 0.6)[[0, 0]].is_nan(), "response 0.5 is below 0.6");
         let n = 0.9 * 0.95 + 0.4 * 0.35 / 4.0;
         let w = 0.81 + 0.16 / 4.0;
         let two = Sums { numerator: array![[n]], normaliser: array![[w]] };
-        assert!((flat_sky(&two, 0.1)[[0, 0]] - 1.0470588).abs() < 1e-7);
-        assert!((1.0 / two.normaliser[[0, 0]].sqrt() - 1.0846523).abs() < 1e-7);
+        assert_abs_diff_eq!(flat_sky(&two, 0.1)[[0, 0]], 1.0470588, epsilon = 1e-7);
+        assert_abs_diff_eq!(1.0 / two.normaliser[[0, 0]].sqrt(), 1.0846523, epsilon = 1e-7);
     }
 
     #[test]

@@ -7,6 +7,7 @@
 
 use crate::fits::{FitsError, Header, write_image_f32};
 use crate::imaging::beam_fit::FittedBeam;
+use crate::run::fits_date;
 use crate::sky::ImageGeometry;
 use ndarray::ArrayView2;
 use std::path::Path;
@@ -110,7 +111,7 @@ fn product_header(path: &Path, geometry: &ImageGeometry, about: &ProductHeader) 
     let start = match about.start_mjd_utc {
         None => None,
         Some(mjd) => {
-            let date = iso_date(mjd);
+            let date = fits_date(mjd);
             let expected = "a Modified Julian Date between the years 1858 and 9999";
             Some((mjd, date.ok_or_else(|| bad("MJD-OBS", mjd.to_string(), expected))?))
         }
@@ -171,28 +172,6 @@ fn product_header(path: &Path, geometry: &ImageGeometry, about: &ProductHeader) 
         }
     }
     Ok(header)
-}
-
-/// `YYYY-MM-DDThh:mm:ss.sss` of a Modified Julian Date (FITS Standard 4.0 §9.1.1), or `None` outside 1858 to 9999.
-///
-/// The Gregorian date follows Fliegel & Van Flandern (1968, Comm. ACM 11, 657), in whole numbers.
-fn iso_date(mjd: f64) -> Option<String> {
-    if !(0.0..2_973_483.0).contains(&mjd) {
-        return None;
-    }
-    let milliseconds = (mjd * 86_400_000.0).round() as i64;
-    let (day, within) = (milliseconds.div_euclid(86_400_000), milliseconds.rem_euclid(86_400_000));
-    let mut l = day + 2_400_001 + 68_569;
-    let n = 4 * l / 146_097;
-    l -= (146_097 * n + 3) / 4;
-    let i = 4000 * (l + 1) / 1_461_001;
-    l = l - 1461 * i / 4 + 31;
-    let j = 80 * l / 2447;
-    let (month_day, century_month) = (l - 2447 * j / 80, j / 11);
-    let (month, year) = (j + 2 - 12 * century_month, 100 * (n - 49) + i + century_month);
-    let (seconds, fraction) = (within / 1000, within % 1000);
-    let (hour, minute, second) = (seconds / 3600, seconds / 60 % 60, seconds % 60);
-    Some(format!("{year:04}-{month:02}-{month_day:02}T{hour:02}:{minute:02}:{second:02}.{fraction:03}"))
 }
 
 /// The text in the printable ASCII that a FITS header may hold, at most `longest` letters. Signs with a plain spelling
@@ -281,10 +260,10 @@ mod tests {
     #[test]
     fn dates() {
         for (mjd, want) in MJD_TABLE {
-            assert_eq!(iso_date(*mjd).as_deref(), Some(*want));
+            assert_eq!(fits_date(*mjd).as_deref(), Some(*want));
         }
         for bad in [-1.0, f64::NAN, f64::INFINITY, 3e6] {
-            assert_eq!(iso_date(bad), None, "{bad}");
+            assert_eq!(fits_date(bad), None, "{bad}");
         }
     }
 

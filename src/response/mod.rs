@@ -47,7 +47,7 @@ pub trait Response: Send + Sync {
     fn geometry(&self) -> &ImageGeometry;
 
     /// Overwrites the data of `blocks` (parallel hands and Stokes I; other hands become 0) with the model of `sky`.
-    /// Weights stay as they are.
+    /// Weights stay as they are. Visibilities that are not used (weight 0) may be left 0.
     ///
     /// # Errors
     /// When the sky cannot be predicted to the promised tolerance.
@@ -75,6 +75,15 @@ pub enum ResponseError {
         reachable: f64,
         /// Why.
         reason: String,
+    },
+    /// Visibilities that a plan does not reach.
+    #[error(
+        "row {row} of a block (counted from 0) has u, v, w beyond those the response was planned for; plan it with the \
+         visibilities it is applied to"
+    )]
+    Unplanned {
+        /// The row.
+        row: usize,
     },
     /// A component lies where the gridded prediction cannot reach.
     #[error(

@@ -13,11 +13,24 @@ pub fn mjd_of_day(year: i32, month: i32, day: i32) -> f64 {
 /// A Modified Julian Date (UTC) as ISO 8601 to the nearest second, `2026-03-01T20:15:00Z`; `None` when it is not a date
 /// of the years 1858 to 9999. Leap seconds do not show: a day has 86 400 seconds here.
 pub fn iso_utc(mjd: f64) -> Option<String> {
+    let (date, _) = date_and_time(mjd, 1)?;
+    Some(format!("{date}Z"))
+}
+
+/// As [`iso_utc`] to the nearest millisecond and as FITS writes it, without the Z (FITS Standard 4.0, §9.1.1).
+pub fn fits_date(mjd: f64) -> Option<String> {
+    let (date, milliseconds) = date_and_time(mjd, 1000)?;
+    Some(format!("{date}.{milliseconds:03}"))
+}
+
+/// Date and time to the second, and what remains in parts of a second, `parts` to the second.
+fn date_and_time(mjd: f64, parts: i64) -> Option<(String, i64)> {
     if !(0.0..=2_973_483.0).contains(&mjd) {
         return None;
     }
-    let total_seconds = (mjd * 86_400.0).round() as i64;
-    let (day_number, second) = (total_seconds.div_euclid(86_400), total_seconds.rem_euclid(86_400));
+    let total = (mjd * 86_400.0 * parts as f64).round() as i64;
+    let (day_number, within) = (total.div_euclid(86_400 * parts), total.rem_euclid(86_400 * parts));
+    let (second, part) = (within / parts, within % parts);
     let mut l = day_number + 2_400_001 + 68_569;
     let n = 4 * l / 146_097;
     l -= (146_097 * n + 3) / 4;
@@ -28,7 +41,7 @@ pub fn iso_utc(mjd: f64) -> Option<String> {
     l = j / 11;
     let (month, year) = (j + 2 - 12 * l, 100 * (n - 49) + i + l);
     let (hour, minute, second) = (second / 3600, second / 60 % 60, second % 60);
-    Some(format!("{year:04}-{month:02}-{day:02}T{hour:02}:{minute:02}:{second:02}Z"))
+    Some((format!("{year:04}-{month:02}-{day:02}T{hour:02}:{minute:02}:{second:02}"), part))
 }
 
 #[cfg(test)]

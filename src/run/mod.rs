@@ -40,7 +40,7 @@ mod simulate;
 mod tables;
 
 pub use beams::{Beam, SHAPES, Shape, StationRule, StationSettings};
-pub use calendar::{iso_utc, mjd_of_day};
+pub use calendar::{fits_date, iso_utc, mjd_of_day};
 pub use document::At;
 pub use error::{Complaint, Problem, RunError};
 pub use image::{Image, MOST_PIXELS, Pointing, Sources, TOLERANCES, Weighting};

@@ -94,13 +94,14 @@ impl TangentFrame {
 #[cfg(test)]
 mod tests {
     use super::*;
+    use approx::assert_abs_diff_eq;
 
     /// Outside value: astropy.wcs SIN, (31°, 46°) about (30°, 45°), to its ten printed digits.
     #[test]
     fn direction_cosines_of_a_known_pair() {
         let [l, m, n] = Direction::from_deg(30.0, 45.0).frame().lmn(Direction::from_deg(31.0, 46.0));
         for (got, want) in [(l, 0.0121234602), (m, 0.0175272182), (n, 0.9997728834)] {
-            assert!((got - want).abs() < 1e-10, "{got} against {want}");
+            assert_abs_diff_eq!(got, want, epsilon = 1e-10);
         }
     }
 
@@ -110,7 +111,8 @@ mod tests {
             let frame = Direction::from_deg(ra, dec).frame();
             let there = frame.direction(0.01, -0.02).unwrap();
             let [l, m, _] = frame.lmn(there);
-            assert!((l - 0.01).abs() < 1e-15 && (m + 0.02).abs() < 1e-15);
+            assert_abs_diff_eq!(l, 0.01, epsilon = 1e-15);
+            assert_abs_diff_eq!(m, -0.02, epsilon = 1e-15);
         }
     }
 }

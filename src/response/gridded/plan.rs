@@ -35,9 +35,9 @@ mod share {
 /// Below this tolerance grids and tables are kept in double precision.
 const SINGLE_PRECISION_DOWN_TO: f64 = 8e-6;
 /// Smallest tolerance kept: f64 grids and the windows allow less, but fields of hundreds of terms do not.
-pub const SMALLEST_TOLERANCE: f64 = 1e-7;
+pub const SMALLEST_TOLERANCE: f64 = crate::run::TOLERANCES.0;
 /// Largest tolerance that is still an image.
-pub const LARGEST_TOLERANCE: f64 = 0.1;
+pub const LARGEST_TOLERANCE: f64 = crate::run::TOLERANCES.1;
 
 /// Visibilities that share terms: some station pairs, a run of channels.
 #[derive(Debug, Clone)]
@@ -93,6 +93,9 @@ pub(crate) struct Plan {
     /// Index of the first partition of a pair's class; its channel groups follow.
     pub class_of_pair: HashMap<(u32, u32), usize>,
     pub channel_groups: Vec<Range<usize>>,
+    /// Largest |u′| and |v′|, and the range of w, that grids and layers were made for, metres.
+    pub reach_m: (f64, f64),
+    pub w_m: (f64, f64),
     /// A few times of the observation, to test what depends on time.
     pub probe_times: Vec<f64>,
     pub double: bool,
@@ -277,6 +280,8 @@ impl Plan {
             partitions,
             class_of_pair,
             channel_groups,
+            reach_m: (survey.u_m, survey.v_m),
+            w_m: survey.w_m,
             probe_times: [0, survey.times.len() / 2, survey.times.len().saturating_sub(1)]
                 .iter()
                 .filter_map(|&at| survey.times.get(at).copied())
@@ -308,7 +313,7 @@ fn bend_range(patch: &Patch) -> (f64, f64) {
     (0.5 * (least + most), 0.5 * (most - least))
 }
 
-fn kernel_feeds(intensity: &Intensity) -> Vec<usize> {
+pub(super) fn kernel_feeds(intensity: &Intensity) -> Vec<usize> {
     let mut feeds: Vec<usize> = Vec::new();
     for (seen, _) in intensity.groups() {
         match seen {

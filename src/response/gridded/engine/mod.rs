@@ -8,7 +8,7 @@ mod tables;
 use tables::{Nodes, Table, uniform_step};
 
 use super::patch::Patch;
-use super::plan::{Partition, Plan};
+use super::plan::{Partition, Plan, kernel_feeds};
 use super::tiles::tile_order;
 use super::transform::{Scratch, Transform};
 use super::vector::{Cell, GridReal, Instructions, LANES, Lane, Sample, Share, accumulate, real, spread};
@@ -100,6 +100,12 @@ struct Prepared {
     angles: Vec<Vec<f64>>,
 }
 
+/// 1 with weight 1 where any of `hands` is usable, nothing elsewhere: what prediction goes through.
+fn used(block: &Block, at: usize, hands: &[usize]) -> (Complex64, f64) {
+    let any = hands.iter().any(|hand| block.weight[at + hand] > 0.0);
+    (Complex64::ONE, if any { 1.0 } else { 0.0 })
+}
+
 impl<T: GridReal + LinalgScalar> Engine<T> {
     pub(super) fn new(
         plan: Plan,
@@ -142,22 +148,15 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
         } else {
             Vec::new()
         };
-        let mut feeds: Vec<usize> = Vec::new();
-        let mut powers: Vec<Power> = Vec::new();
-        for (seen, _) in intensity.groups() {
-            match seen {
-                Seen::Feed(feed) => {
-                    feeds.push(*feed);
-                    powers.push(Power::Feed(*feed));
-                }
-                Seen::Mean => {
-                    feeds.extend([0, 1]);
-                    powers.extend([Power::Feed(0), Power::Feed(1), Power::CrossRe, Power::CrossIm]);
-                }
-            }
-        }
-        feeds.sort_unstable();
-        feeds.dedup();
+        let feeds = kernel_feeds(&intensity);
+        let powers: Vec<Power> = intensity
+            .groups()
+            .iter()
+            .flat_map(|(seen, _)| match seen {
+                Seen::Feed(feed) => vec![Power::Feed(*feed)],
+                Seen::Mean => vec![Power::Feed(0), Power::Feed(1), Power::CrossRe, Power::CrossIm],
+            })
+            .collect();
         let available = Instructions::available();
         let instructions =
             if available.contains(&options.instructions) { options.instructions } else { Instructions::Plain };
@@ -200,6 +199,22 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
             grid_memory: options.grid_memory,
             plan,
         })
+    }
+
+    /// Refuses rows with usable visibilities that lie beyond what grids and layers were made for.
+    fn check_reach(&self, block: &Block, prepared: &Prepared) -> Result<(), ResponseError> {
+        let Plan { reach_m, w_m, .. } = &self.plan;
+        // rounding of rotations of baselines of some thousand kilometres
+        let within = |value: f64, low: f64, high: f64| value >= low - 1e-6 && value <= high + 1e-6;
+        for (row, &[u, v, _, w]) in prepared.rows.iter().enumerate() {
+            let fits =
+                within(u, -reach_m.0, reach_m.0) && within(v, -reach_m.1, reach_m.1) && within(w, w_m.0, w_m.1);
+            let cells = block.index(row, 0)..block.index(row + 1, 0);
+            if !fits && block.weight[cells].iter().any(|weight| *weight > 0.0) {
+                return Err(ResponseError::Unplanned { row });
+            }
+        }
+        Ok(())
     }
 
     fn grid_bytes(&self, partition: &Partition) -> usize {
@@ -248,7 +263,7 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
     }
 
     /// Calls `each` with the samples of `rows` that belong to `task`; `weights` decides what they carry: for spreading the
-    /// weighted visibilities (unweighted ones are skipped), for predicting 1 for every one.
+    /// weighted visibilities (unweighted ones are skipped), for predicting 1 for every one that is used.
     ///
     /// `each` gets the sample, (row, channel, group) and the turns from the image's phase to the patch's.
     #[inline(always)]
@@ -313,7 +328,7 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
                 let at = block.index(row, channel);
                 for (group, (seen, hands)) in self.intensity.groups().iter().enumerate() {
                     let (value, weight) =
-                        if spreading { Intensity::weighted(block, at, hands) } else { (Complex64::ONE, 1.0) };
+                        if spreading { Intensity::weighted(block, at, hands) } else { used(block, at, hands) };
                     if weight == 0.0 {
                         continue;
                     }
@@ -508,6 +523,7 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
             source.rewind()?;
             while let Some(block) = source.next_block()? {
                 let prepared = self.prepare(&block);
+                self.check_reach(&block, &prepared)?;
                 let mut tables: Vec<Option<Table<T>>> = self.plan.partitions.iter().map(|_| None).collect();
                 for task in chunk {
                     tables[task.partition].get_or_insert_with(|| self.kernel_table(&prepared, task.partition));

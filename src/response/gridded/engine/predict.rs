@@ -52,6 +52,7 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
         let mut sums: Vec<Vec<[f64; 2]>> =
             blocks.iter().map(|b| vec![[0.0; 2]; b.rows() * b.channels * groups]).collect();
         let prepared: Vec<Prepared> = blocks.iter().map(|block| self.prepare(block)).collect();
+        blocks.iter().zip(&prepared).try_for_each(|(block, prepared)| self.check_reach(block, prepared))?;
         for task in self.tasks() {
             let partition = &self.plan.partitions[task.partition];
             let tables: Vec<Table<T>> = prepared.iter().map(|p| self.kernel_table(p, task.partition)).collect();
