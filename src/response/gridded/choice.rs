@@ -1,8 +1,9 @@
 //! Which way of gridding costs least: how visibilities are parted, how far apart the layers in w lie, how wide the window.
 
+use super::bands::Costs;
 use super::family::Family;
 use super::survey::Survey;
-use super::terms::Terms;
+use super::terms::{MOST_ESTIMATED, Terms};
 use super::transform::GridShape;
 use super::vector::LANES;
 use crate::response::window::{Choice, choose};
@@ -10,15 +11,20 @@ use std::collections::BTreeMap;
 use std::ops::Range;
 use std::sync::Mutex;
 
-/// Rough costs, in nanoseconds of one thread (measured with `cargo bench --bench gridding`; only ratios matter).
+/// Rough costs, in nanoseconds of one thread (measured with `cargo bench --bench gridding`; only ratios matter); what a
+/// visibility costs is told by [`Costs`].
 mod cost {
-    /// A visibility in one block of terms: fixed, and per cell of the window.
-    pub const SAMPLE: f64 = 25.0;
-    pub const CELL: f64 = 0.7;
-    /// A cell of a transform, per term, all passes included.
-    pub const TRANSFORM: f64 = 10.0;
+    /// A cell of a transform, per term, both passes.
+    pub const TRANSFORM: f64 = 6.5;
     /// A pixel multiplied by its screen, per term.
-    pub const PIXEL: f64 = 8.0;
+    pub const PIXEL: f64 = 6.0;
+    /// Of both, where two terms share a transform.
+    pub const PAIRED: f64 = 0.55;
+    /// Elimination, per direction, and components, per direction cubed.
+    pub const DIRECTION: f64 = 4e6;
+    pub const COMPONENTS: f64 = 30.0;
+    /// Estimates that ended at the most directions they can see are not to be trusted.
+    pub const UNKNOWN: f64 = 20.0;
 }
 
 /// Half ranges of the phase of w within a layer that are tried, turns. Wide layers are few, and want more terms.
@@ -27,6 +33,10 @@ const HALF_TURNS: [f64; 7] = [4.0, 2.0, 1.0, 0.5, 0.24, 0.1, 0.04];
 const GROUPS: [usize; 5] = [1, 2, 4, 8, 16];
 /// Chebyshev nodes a side that estimates are made on.
 const NODES: (usize, usize) = (14, 14);
+/// Nodes that a band of channels is reckoned to need.
+const BAND_NODES: usize = 4;
+/// How far w of a band's ends may lie outside its layer, in half layers.
+pub(super) const SLACK: f64 = 0.15;
 
 /// A way of gridding.
 #[derive(Debug, Clone, Copy)]
@@ -38,9 +48,21 @@ pub(super) struct Candidate {
     /// Padding.
     pub oversampling: f64,
     pub window: Choice,
-    /// Layers in w.
-    pub layers: usize,
+    pub layering: Layering,
     total: f64,
+}
+
+/// How w is parted.
+#[derive(Debug, Clone, Copy)]
+pub(super) struct Layering {
+    /// Layers.
+    pub count: usize,
+    /// One layer at w = 0: terms are transformed in pairs, for the price of twice the range.
+    pub centred: bool,
+    /// Half range of the phase of w that terms must stand for, turns.
+    pub turns: f64,
+    /// Bands of channels at least in every channel group, so that w of a row stays near its layer throughout.
+    pub bands: usize,
 }
 
 /// What the choice is made from.
@@ -54,11 +76,47 @@ pub(super) struct Question<'a> {
     pub window_error: f64,
     /// |u|, |v| at the longest baseline times the pixel.
     pub reach: (f64, f64),
+    /// The mean of √(u² + v²) times the pixel.
+    pub mean_reach: f64,
     pub patch_size: (usize, usize),
-    /// Half range of the phase of w over all visibilities and the patch, turns; 0 where w does not matter.
-    pub turns: f64,
+    /// Phase of the smallest and of the largest w at the edge of the patch, turns; 0 where w does not matter.
+    pub turns: (f64, f64),
     /// Half range of the curvature over the patch.
     pub half_bend: f64,
+}
+
+impl Question<'_> {
+    /// Ways to part w, from few layers to many.
+    fn layerings(&self) -> Vec<Layering> {
+        let (low, high) = self.turns;
+        let mut all = vec![Layering { count: 1, centred: true, turns: high, bands: 1 }];
+        if high == 0.0 {
+            return all;
+        }
+        let half_range = 0.5 * (high - low);
+        let mut tried = 0;
+        for half_turns in HALF_TURNS {
+            let count = ((half_range / half_turns - 1e-9).ceil() as usize).max(1);
+            if count == tried {
+                continue;
+            }
+            tried = count;
+            let turns = half_range / count as f64;
+            if count == 1 {
+                all.push(Layering { count, centred: false, turns, bands: 1 });
+                continue;
+            }
+            let (low_hz, high_hz) = range(self.frequencies_hz);
+            let strays = high * 0.5 * (high_hz - low_hz) / high_hz;
+            let bands = (strays / (SLACK * turns)).ceil() as usize;
+            all.push(Layering { count, centred: false, turns: (1.0 + SLACK) * turns, bands: bands.max(1) });
+        }
+        all
+    }
+}
+
+fn range(hz: &[f64]) -> (f64, f64) {
+    hz.iter().fold((f64::INFINITY, 0.0f64), |(low, high), &f| (low.min(f), high.max(f)))
 }
 
 /// The cheapest way; `None` when no window is good enough. `family` is used as scratch.
@@ -66,15 +124,12 @@ pub(super) fn cheapest(question: &Question, family: &mut Family) -> Option<Candi
     let windows: Vec<(f64, Choice)> =
         [1.5, 2.0].into_iter().filter_map(|s| Some((s, window(question.window_error, s)?))).collect();
     let mut best: Option<Candidate> = None;
-    let mut tried: Vec<usize> = Vec::new();
-    for half_turns in HALF_TURNS {
-        let layers = layer_count(question.turns, half_turns);
-        if tried.contains(&layers) {
-            continue;
-        }
-        tried.push(layers);
-        let turns = question.turns / layers as f64;
-        family.half_w = if question.half_bend > 0.0 { turns / question.half_bend } else { 0.0 };
+    let (low_hz, high_hz) = range(question.frequencies_hz);
+    let width = (high_hz - low_hz) / (0.5 * (high_hz + low_hz));
+    // one centred layer pays for small ranges of w only
+    let layerings = question.layerings().into_iter().filter(|way| !way.centred || way.turns < 2.0 * HALF_TURNS[0]);
+    for layering in layerings {
+        family.half_w = if question.half_bend > 0.0 { layering.turns / question.half_bend } else { 0.0 };
         let mut worth_more_layers = false;
         for by_class in [false, true] {
             if by_class && (question.classes.len() == 1 || !worth_more_layers) {
@@ -84,52 +139,87 @@ pub(super) fn cheapest(question: &Question, family: &mut Family) -> Option<Candi
                 if groups > question.frequencies_hz.len() {
                     break;
                 }
-                let (per_sample, terms) = estimate(question, family, by_class, groups);
+                let parts = estimate(question, family, by_class, groups);
+                let terms: f64 = parts.iter().map(|part| part.terms as f64).sum();
                 let mut worth_parting = false;
                 for &(oversampling, window) in &windows {
                     let shape = GridShape::new(question.patch_size, oversampling, question.reach, window.support);
-                    let cells = (window.support * window.support) as f64;
-                    let spread = question.survey.samples as f64 * per_sample * (cost::SAMPLE + cost::CELL * cells);
+                    let bands = groups * layering.bands.div_ceil(groups).max(1);
+                    let channels = question.frequencies_hz.len() as f64 / bands as f64;
+                    let nodes = BAND_NODES.min(channels.ceil() as usize).max(1);
+                    let per_sample: f64 = parts
+                        .iter()
+                        .map(|part| {
+                            let costs = Costs {
+                                support: window.support,
+                                distance: question.mean_reach * shape.fft.0 as f64,
+                                blocks: part.terms.div_ceil(LANES),
+                                directions: part.directions,
+                            };
+                            part.fraction * costs.of(channels, width / bands as f64, nodes)
+                        })
+                        .sum();
+                    let spread = question.survey.samples as f64 * per_sample;
                     let pixels = (question.patch_size.0 * question.patch_size.1) as f64;
                     let length = (shape.fft.0 * shape.fft.1.min(2 * shape.height)) as f64;
-                    let transforms =
-                        terms * (groups * layers) as f64 * (cost::TRANSFORM * length + cost::PIXEL * pixels);
-                    worth_parting |= spread > transforms;
-                    let total = spread + transforms;
+                    let paired = if layering.centred { cost::PAIRED } else { 1.0 };
+                    let transforms = paired
+                        * terms
+                        * (groups * layering.count) as f64
+                        * (cost::TRANSFORM * length + cost::PIXEL * pixels);
+                    let build: f64 = parts.iter().map(|part| part.build(groups)).sum();
+                    let known = parts.iter().all(|part| part.directions < MOST_ESTIMATED);
+                    worth_parting |= spread > transforms + build || !known;
+                    worth_more_layers |= spread + build > transforms || !known;
+                    let total = (spread + transforms + build) * if known { 1.0 } else { cost::UNKNOWN };
                     if best.is_none_or(|best| total < best.total) {
-                        best = Some(Candidate { by_class, groups, oversampling, window, layers, total });
+                        best = Some(Candidate { by_class, groups, oversampling, window, layering, total });
                     }
                 }
-                worth_more_layers |= worth_parting;
                 // parting further saves some spreading and doubles the transforms
                 if !worth_parting {
                     break;
                 }
             }
         }
-        if !worth_more_layers {
+        if !worth_more_layers && !layering.centred {
             break;
         }
     }
     best
 }
 
-/// Blocks of terms per visibility, and terms of all classes in one channel group.
-fn estimate(question: &Question, family: &mut Family, by_class: bool, groups: usize) -> (f64, f64) {
+/// A class of station pairs in one channel group.
+struct Part {
+    terms: usize,
+    directions: usize,
+    /// Of all pairs.
+    fraction: f64,
+}
+
+impl Part {
+    /// What making its terms costs in all channel groups.
+    fn build(&self, groups: usize) -> f64 {
+        let directions = self.directions as f64;
+        groups as f64 * (cost::DIRECTION * directions + cost::COMPONENTS * directions.powi(3))
+    }
+}
+
+fn estimate(question: &Question, family: &mut Family, by_class: bool, groups: usize) -> Vec<Part> {
     // the widest group is the first: its channels span the largest ratio
     let channels = channel_groups(question.frequencies_hz.len(), groups)[0].clone();
     family.frequencies_hz = question.frequencies_hz[channels].to_vec();
     let everything = [question.survey.pairs.clone()];
     let classes: &[Vec<(u32, u32)>] = if by_class { question.classes } else { &everything };
-    let (mut per_sample, mut terms) = (0.0, 0.0);
-    for pairs in classes {
-        family.pairs.clone_from(pairs);
-        let count = Terms::estimate(family, NODES, question.bound);
-        let fraction = pairs.len() as f64 / question.survey.pairs.len().max(1) as f64;
-        per_sample += fraction * count.div_ceil(LANES) as f64;
-        terms += count as f64;
-    }
-    (per_sample, terms)
+    let all = question.survey.pairs.len().max(1) as f64;
+    classes
+        .iter()
+        .map(|pairs| {
+            family.pairs.clone_from(pairs);
+            let (terms, directions) = Terms::estimate(family, NODES, question.bound);
+            Part { terms, directions, fraction: pairs.len() as f64 / all }
+        })
+        .collect()
 }
 
 /// The window for an error and a padding; pointings ask for the same ones again and again.
@@ -143,8 +233,4 @@ fn window(error: f64, oversampling: f64) -> Option<Choice> {
 /// Runs of channels, as even as they go.
 pub(super) fn channel_groups(channels: usize, groups: usize) -> Vec<Range<usize>> {
     (0..groups).map(|g| g * channels / groups..(g + 1) * channels / groups).collect()
-}
-
-fn layer_count(turns: f64, half_turns: f64) -> usize {
-    if turns == 0.0 { 1 } else { (turns / half_turns - 1e-9).ceil().max(1.0) as usize }
 }

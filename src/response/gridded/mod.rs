@@ -15,6 +15,7 @@
 //! Files, in the order of a run: `patch` (which pixels), `survey` (how far u, v, w reach), `plan` (shares of the tolerance,
 //! partitions), `family`, `smooth` and `terms` (kernels), `engine` (gridding), `vector` (inner loops), `transform`.
 
+mod bands;
 mod choice;
 mod engine;
 mod family;
@@ -25,7 +26,6 @@ mod register;
 mod smooth;
 mod survey;
 mod terms;
-mod tiles;
 mod transform;
 mod vector;
 

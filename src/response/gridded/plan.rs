@@ -3,7 +3,7 @@
 //! A plan is made before any gridding, from the beams, the patch, a survey of the visibilities and the tolerance asked
 //! for; the same inputs give the same plan.
 
-use super::choice::{Question, channel_groups, cheapest};
+use super::choice::{Layering, Question, channel_groups, cheapest};
 use super::family::{Family, MEAN};
 use super::patch::Patch;
 use super::survey::Survey;
@@ -22,10 +22,12 @@ use std::time::Instant;
 /// Shares of the tolerance. Errors of different origin add, so the shares sum to at most 1.
 mod share {
     /// Aliasing of the window (largest over the field, both axes).
-    pub const WINDOW: f64 = 0.3;
+    pub const WINDOW: f64 = 0.25;
     /// Difference between kernels and their terms, w included, relative to the products' root mean square: root mean
     /// square over the field and over all members; no member alone passes [`super::terms::WORST_MEMBER`] times it.
-    pub const TERMS: f64 = 0.6;
+    pub const TERMS: f64 = 0.55;
+    /// Interpolation of products in frequency, within a band of channels: root mean square as for the terms.
+    pub const BANDS: f64 = 0.1;
     /// Beam products beyond a patch's edge.
     pub const EDGE: f64 = 0.05;
     /// Curvature left out where w is ignored.
@@ -55,6 +57,8 @@ pub(crate) struct Partition {
 pub(crate) struct Layers {
     /// Whether w matters at all.
     pub bends: bool,
+    /// One layer, at w = 0: its terms' images need real parts only.
+    pub centred: bool,
     /// w of the first layer, wavelengths.
     pub first: f64,
     /// Distance between layers, wavelengths.
@@ -88,12 +92,21 @@ pub(crate) struct Plan {
     pub shape: GridShape,
     pub window: Choice,
     pub layers: Layers,
+    /// Largest distance in w from a layer that terms stand for, wavelengths.
+    pub half_w: f64,
+    /// Bands of channels in every partition, at least.
+    pub fewest_bands: usize,
+    /// Mean of √(u² + v²) times the pixel.
+    pub mean_reach: f64,
+    /// Errors allowed in interpolating products, and their powers, within a band.
+    pub error: f64,
+    pub power_error: f64,
     pub middle_bend: f64,
     pub partitions: Vec<Partition>,
     /// Index of the first partition of a pair's class; its channel groups follow.
     pub class_of_pair: HashMap<(u32, u32), usize>,
     pub channel_groups: Vec<Range<usize>>,
-    /// Largest |u′| and |v′|, and the range of w, that grids and layers were made for, metres.
+    /// Largest |u′| and |v′|, and the range of |w|, that grids and layers were made for, metres.
     pub reach_m: (f64, f64),
     pub w_m: (f64, f64),
     /// A few times of the observation, to test what depends on time.
@@ -164,11 +177,10 @@ impl Plan {
         let (lowest, highest) =
             frequencies_hz.iter().fold((f64::INFINITY, 0.0f64), |(low, high), &hz| (low.min(hz), high.max(hz)));
         let (k_low, k_high) = (wavelengths_per_metre(lowest), wavelengths_per_metre(highest));
-        let w_range =
-            ((survey.w_m.0 * k_low).min(survey.w_m.0 * k_high), (survey.w_m.1 * k_low).max(survey.w_m.1 * k_high));
-        let furthest_w = w_range.0.abs().max(w_range.1.abs());
-        let bends = TAU * furthest_w * half_bend > share::FLAT * tolerance;
-        let turns_total = if bends { 0.5 * (w_range.1 - w_range.0) * half_bend } else { 0.0 };
+        // rows of negative w are taken as the conjugates of opposite baselines
+        let w_range = (survey.w_m.0 * k_low, survey.w_m.1 * k_high);
+        let bends = TAU * w_range.1 * half_bend > share::FLAT * tolerance;
+        let turns = if bends { (w_range.0 * half_bend, w_range.1 * half_bend) } else { (0.0, 0.0) };
 
         let mut family = Family {
             beams,
@@ -195,7 +207,8 @@ impl Plan {
             window_error: 0.5 * share::WINDOW * tolerance,
             reach,
             patch_size: patch.size,
-            turns: turns_total,
+            mean_reach: survey.mean_uv_m * k_high * patch.pixel(),
+            turns,
             half_bend,
         };
         let chosen = cheapest(&question, &mut family);
@@ -206,12 +219,14 @@ impl Plan {
         })?;
         let window = chosen.window;
         let shape = GridShape::new(patch.size, chosen.oversampling, reach, window.support);
-        let layers = make_layers(bends, w_range, chosen.layers);
-        family.half_w = if bends { 0.5 * layers.step } else { 0.0 };
+        let layering = chosen.layering;
+        let layers = make_layers(bends, w_range, layering);
+        family.half_w = if bends { layering.turns / half_bend } else { 0.0 };
 
         // build the terms of every partition
         let channel_groups = channel_groups(frequencies_hz.len(), chosen.groups);
         let of_class = if chosen.by_class { classes } else { vec![survey.pairs.clone()] };
+        let patch_pixel = patch.pixel();
         let mut partitions = Vec::new();
         let mut class_of_pair = HashMap::new();
         let mut report = KernelReport {
@@ -256,13 +271,14 @@ impl Plan {
                 family.feeds = kernel_feeds(intensity);
                 family.half_w = half_w;
                 family.power = false;
-                report.terms.push(kernel.points.len());
-                report.power_terms.push(power.points.len());
+                report.terms.push(kernel.screens.len());
+                report.power_terms.push(power.screens.len());
                 report.measured_members += kernel.measured_members;
                 report.largest_difference = report.largest_difference.max(kernel.largest);
                 partitions.push(Partition { channels: channels.clone(), pairs: pairs.clone(), kernel, power });
             }
         }
+        let half_w = family.half_w;
         let double = tolerance < SINGLE_PRECISION_DOWN_TO;
         report.distinct_kernels = report.terms.iter().sum::<usize>() * layers.count;
         report.patch_px = patch.size;
@@ -276,7 +292,12 @@ impl Plan {
             shape,
             window,
             layers,
+            half_w,
+            fewest_bands: layering.bands.div_ceil(chosen.groups),
             middle_bend,
+            mean_reach: survey.mean_uv_m * k_high * patch_pixel,
+            error: share::BANDS * tolerance * rms,
+            power_error: share::BANDS * tolerance * power_rms,
             partitions,
             class_of_pair,
             channel_groups,
@@ -359,10 +380,11 @@ fn pair_classes(beams: &StationBeams, pairs: &[(u32, u32)]) -> Vec<Vec<(u32, u32
     classes.into_iter().map(|(_, list)| list).collect()
 }
 
-fn make_layers(bends: bool, (low, high): (f64, f64), count: usize) -> Layers {
-    if !bends {
-        return Layers { bends, first: 0.0, step: 0.0, per_step: 0.0, count: 1 };
+fn make_layers(bends: bool, (low, high): (f64, f64), layering: Layering) -> Layers {
+    let Layering { count, centred, .. } = layering;
+    if !bends || centred {
+        return Layers { bends, centred: true, first: 0.0, step: 0.0, per_step: 0.0, count: 1 };
     }
     let step = (high - low) / count as f64;
-    Layers { bends, first: low + 0.5 * step, step, per_step: step.recip(), count }
+    Layers { bends, centred: false, first: low + 0.5 * step, step, per_step: step.recip(), count }
 }

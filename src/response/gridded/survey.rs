@@ -15,8 +15,12 @@ pub(crate) struct Survey {
     pub u_m: f64,
     /// See `u_m`.
     pub v_m: f64,
-    /// Smallest and largest w, metres.
+    /// Smallest and largest |w|, metres.
     pub w_m: (f64, f64),
+    /// Mean of √(u′² + v′²) over the rows with usable data, metres.
+    pub mean_uv_m: f64,
+    /// Rows with usable data.
+    pub rows: u64,
     /// Distinct times, MJD, ascending (thinned).
     pub times: Vec<f64>,
     /// Station pairs with usable data, first and second as in the rows.
@@ -85,10 +89,12 @@ impl Builder {
             }
             let turned = self.recentre.turn(block.uvw_m[row]);
             let (u, v, _) = patch.effective(turned.uvw_m);
-            let w = turned.uvw_m[2];
+            let w = turned.uvw_m[2].abs();
             let s = &mut self.survey;
             s.u_m = s.u_m.max(u.abs());
             s.v_m = s.v_m.max(v.abs());
+            s.mean_uv_m += u.hypot(v);
+            s.rows += 1;
             s.w_m = (s.w_m.0.min(w), s.w_m.1.max(w));
             self.times.insert(block.mjd_utc[row].to_bits());
             self.pairs.insert((block.first[row], block.second[row]));
@@ -101,6 +107,7 @@ impl Builder {
         self.survey.times = all.iter().copied().step_by(step).chain(all.last().copied()).collect();
         self.survey.times.dedup();
         self.survey.pairs = self.pairs.into_iter().collect();
+        self.survey.mean_uv_m /= self.survey.rows.max(1) as f64;
         if self.survey.used == 0 {
             self.survey.w_m = (0.0, 0.0);
         }

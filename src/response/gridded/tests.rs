@@ -74,7 +74,7 @@ fn every_kernel_keeps_its_bound_on_the_whole_field() {
         let angles: Vec<Vec<f64>> = times.iter().map(|&t| beams.angles_at(t)).collect();
         let mut members = 0;
         for partition in &plan.partitions {
-            let half_w = if plan.layers.bends { 0.5 * plan.layers.step } else { 0.0 };
+            let half_w = plan.half_w;
             let family = Family {
                 beams: &beams,
                 patch: &plan.patch,

@@ -4,7 +4,7 @@
 //! known to be zero or unwanted. Cells beyond half the transform's size fold back, as pixels at whole numbers demand.
 
 use super::patch::Patch;
-use super::vector::{Cell, GridReal, LANES};
+use super::vector::{Cell, GridReal, LANES, real};
 use num_complex::Complex;
 use rayon::prelude::*;
 use rustfft::{Fft, FftPlanner};
@@ -66,6 +66,17 @@ pub(crate) struct Transform<T: GridReal> {
     at: Places,
 }
 
+/// Which terms of a grid: one block of all that lie interleaved in its cells.
+#[derive(Debug, Clone, Copy)]
+pub(crate) struct Lanes {
+    /// The block.
+    pub block: usize,
+    /// Blocks of the grid.
+    pub blocks: usize,
+    /// Terms in the block.
+    pub terms: usize,
+}
+
 /// Memory that transforms use again and again.
 #[derive(Debug, Default)]
 pub(crate) struct Scratch<T> {
@@ -110,24 +121,45 @@ impl<T: GridReal> Transform<T> {
         }
     }
 
-    /// The patch images of the first `terms` terms of a grid, `[term][y][x]`, into `scratch.images`; not yet divided by the
-    /// window's transform.
-    pub(crate) fn to_patch(&self, grid: &[Cell<T>], terms: usize, scratch: &mut Scratch<T>) {
+    /// The patch images of some terms of a grid, `[term][y][x]`, into `scratch.images`; not yet divided by the window's
+    /// transform.
+    ///
+    /// Paired, only the real parts of the images are made, two terms in one transform: the real part of a term's image is
+    /// the transform of the Hermitian part of its grid, and one becomes the real, the other the imaginary part.
+    pub(crate) fn to_patch(&self, grid: &[Cell<T>], of: Lanes, paired: bool, scratch: &mut Scratch<T>) {
         let (nx, ny) = self.size;
         let (gx, gy) = self.shape.fft;
+        let (width, height) = (self.shape.width, self.shape.height);
         let zero = Complex::new(T::zero(), T::zero());
+        let half: T = real(0.5);
         let Scratch { rows, images } = scratch;
+        let count = if paired { of.terms.div_ceil(2) } else { of.terms };
         // every entry is overwritten: no need to clear what an earlier call left
-        rows.resize(self.shape.height * terms * nx, zero);
-        images.resize_with(images.len().max(terms), Vec::new);
-        rows.par_chunks_mut(terms * nx).zip(grid.par_chunks(self.shape.width)).for_each_init(
-            || (vec![zero; gx * terms], vec![zero; self.to_sky.0.get_inplace_scratch_len()]),
-            |(buffer, scratch), (out, cells)| {
+        rows.resize(height * count * nx, zero);
+        images.resize_with(images.len().max(count), Vec::new);
+        let cell = |line: usize, column: usize| &grid[(line * width + column) * of.blocks + of.block];
+        rows.par_chunks_mut(count * nx).enumerate().for_each_init(
+            || (vec![zero; gx * count], vec![zero; self.to_sky.0.get_inplace_scratch_len()]),
+            |(buffer, scratch), (line, out)| {
                 buffer.fill(zero);
-                for (cell, &at) in cells.iter().zip(&self.at.columns) {
-                    for term in 0..terms {
-                        let entry = &mut buffer[term * gx + at];
-                        *entry = *entry + Complex::new(cell[term], cell[term + LANES]);
+                for (column, &at) in self.at.columns.iter().enumerate() {
+                    let here = cell(line, column);
+                    if paired {
+                        // the cell of opposite u, v
+                        let there = cell(height - 1 - line, width - 1 - column);
+                        for pair in 0..count {
+                            let (a, b) = (2 * pair, 2 * pair + 1);
+                            // Ha + i Hb with H(u) = (G(u) + G*(−u))/2
+                            let a = (here[a] + there[a], here[a + LANES] - there[a + LANES]);
+                            let b = (here[b] + there[b], here[b + LANES] - there[b + LANES]);
+                            let entry = &mut buffer[pair * gx + at];
+                            *entry = *entry + Complex::new(half * (a.0 - b.1), half * (a.1 + b.0));
+                        }
+                    } else {
+                        for term in 0..count {
+                            let entry = &mut buffer[term * gx + at];
+                            *entry = *entry + Complex::new(here[term], here[term + LANES]);
+                        }
                     }
                 }
                 self.to_sky.0.process_with_scratch(buffer, scratch);
@@ -139,23 +171,23 @@ impl<T: GridReal> Transform<T> {
             },
         );
         let rows = &*rows;
-        images[..terms].par_iter_mut().enumerate().for_each_init(
+        images[..count].par_iter_mut().enumerate().for_each_init(
             || (vec![zero; gy * STRIP], vec![zero; self.to_sky.1.get_inplace_scratch_len()]),
             |(buffer, scratch), (term, image)| {
                 image.resize(nx * ny, zero);
                 for start in (0..nx).step_by(STRIP) {
-                    let count = STRIP.min(nx - start);
+                    let strip = STRIP.min(nx - start);
                     buffer.fill(zero);
                     for (row, &at) in self.at.rows.iter().enumerate() {
-                        let line = &rows[(row * terms + term) * nx + start..][..count];
+                        let line = &rows[(row * count + term) * nx + start..][..strip];
                         for (c, &value) in line.iter().enumerate() {
                             let entry = &mut buffer[c * gy + at];
                             *entry = *entry + value;
                         }
                     }
-                    self.to_sky.1.process_with_scratch(&mut buffer[..count * gy], scratch);
+                    self.to_sky.1.process_with_scratch(&mut buffer[..strip * gy], scratch);
                     for (line, &at) in image.chunks_exact_mut(nx).zip(&self.at.ys) {
-                        for (c, out) in line[start..start + count].iter_mut().enumerate() {
+                        for (c, out) in line[start..start + strip].iter_mut().enumerate() {
                             *out = buffer[c * gy + at];
                         }
                     }
@@ -164,16 +196,18 @@ impl<T: GridReal> Transform<T> {
         );
     }
 
-    /// The exact transpose of [`Transform::to_patch`] with conjugate phases: patch images into a grid.
-    pub(crate) fn to_grid(&self, images: &[Vec<Complex<T>>], grid: &mut [Cell<T>]) {
+    /// The exact transpose of [`Transform::to_patch`] with conjugate phases: patch images into the cells of a grid. Paired,
+    /// images hold two real ones, as there.
+    pub(crate) fn to_grid(&self, images: &[Vec<Complex<T>>], of: Lanes, paired: bool, grid: &mut [Cell<T>]) {
         let (nx, _) = self.size;
         let (gx, gy) = self.shape.fft;
-        let terms = images.len();
+        let (width, height) = (self.shape.width, self.shape.height);
         let zero = Complex::new(T::zero(), T::zero());
+        let half: T = real(0.5);
         let columns: Vec<Vec<Complex<T>>> = images
             .par_iter()
             .map(|image| {
-                let mut out = vec![zero; self.shape.height * nx];
+                let mut out = vec![zero; height * nx];
                 let mut buffer = vec![zero; gy * STRIP];
                 let mut scratch = vec![zero; self.to_grid.1.get_inplace_scratch_len()];
                 for start in (0..nx).step_by(STRIP) {
@@ -194,24 +228,56 @@ impl<T: GridReal> Transform<T> {
                 out
             })
             .collect();
-        grid.par_chunks_mut(self.shape.width).enumerate().for_each_init(
-            || (vec![zero; gx * terms], vec![zero; self.to_grid.0.get_inplace_scratch_len()]),
-            |(buffer, scratch), (row, cells)| {
-                buffer.fill(zero);
-                for (line, columns) in buffer.chunks_exact_mut(gx).zip(&columns) {
-                    for (&value, &at) in columns[row * nx..(row + 1) * nx].iter().zip(&self.at.xs) {
-                        line[at] = value;
+        let row_of = |line: usize, buffer: &mut [Complex<T>], scratch: &mut [Complex<T>]| {
+            buffer.fill(zero);
+            for (row, columns) in buffer.chunks_exact_mut(gx).zip(&columns) {
+                for (&value, &at) in columns[line * nx..(line + 1) * nx].iter().zip(&self.at.xs) {
+                    row[at] = value;
+                }
+            }
+            self.to_grid.0.process_with_scratch(buffer, scratch);
+        };
+        let write = |line: &[Complex<T>], opposite: &[Complex<T>], cells: &mut [Cell<T>]| {
+            let cells = cells.chunks_exact_mut(of.blocks);
+            for (column, (cells, &at)) in cells.zip(&self.at.columns).enumerate() {
+                let cell = &mut cells[of.block];
+                *cell = [T::zero(); 2 * LANES];
+                for image in 0..images.len() {
+                    let here = line[image * gx + at];
+                    if paired {
+                        // F = Ga + i Gb with both Hermitian
+                        let there = opposite[image * gx + self.at.columns[width - 1 - column]];
+                        let (a, b) = (2 * image, 2 * image + 1);
+                        cell[a] = half * (here.re + there.re);
+                        cell[a + LANES] = half * (here.im - there.im);
+                        cell[b] = half * (here.im + there.im);
+                        cell[b + LANES] = half * (there.re - here.re);
+                    } else {
+                        cell[image] = here.re;
+                        cell[image + LANES] = here.im;
                     }
                 }
-                self.to_grid.0.process_with_scratch(buffer, scratch);
-                for (cell, &at) in cells.iter_mut().zip(&self.at.columns) {
-                    *cell = [T::zero(); 2 * LANES];
-                    for term in 0..terms {
-                        let value = buffer[term * gx + at];
-                        cell[term] = value.re;
-                        cell[term + LANES] = value.im;
-                    }
-                }
+            }
+        };
+        // a row and its opposite go together
+        let per_row = width * of.blocks;
+        let half_height = height / 2;
+        let (top, rest) = grid.split_at_mut(half_height * per_row);
+        let (middle, bottom) = rest.split_at_mut(per_row);
+        let memory = || {
+            let line = || vec![zero; gx * images.len()];
+            (line(), line(), vec![zero; self.to_grid.0.get_inplace_scratch_len()])
+        };
+        let (mut line, _, mut scratch) = memory();
+        row_of(half_height, &mut line, &mut scratch);
+        write(&line, &line, middle);
+        top.par_chunks_mut(per_row).zip(bottom.par_chunks_mut(per_row).rev()).enumerate().for_each_init(
+            memory,
+            |(buffer, opposite, scratch), (line, (above, below))| {
+                row_of(line, buffer, scratch);
+                row_of(height - 1 - line, opposite, scratch);
+                write(buffer, opposite, above);
+                write(opposite, buffer, below);
             },
         );
     }

@@ -1,6 +1,6 @@
-//! The inner loops: spreading visibilities onto interleaved term grids, and reading them back.
+//! The inner loops: visibilities onto scraps, scraps onto the grid of all terms, and back.
 //!
-//! A cell holds eight terms, eight real parts then eight imaginary parts: 64 bytes in single precision, one vector
+//! A cell holds eight terms (or nodes, on a scrap): eight real parts then eight imaginary parts: 64 bytes in single precision, one vector
 //! register of AVX-512 or two of AVX2. The same body is compiled for each instruction set and chosen at run time, since
 //! released binaries are built for plain x86-64, where a fused multiply-add is a library call.
 //!
@@ -89,41 +89,63 @@ impl GridReal for f64 {
     const WHOLE: f64 = 6_755_399_441_055_744.0;
 }
 
-/// One visibility on its way to or from the grids.
+/// One visibility on its way to or from a scrap.
 #[derive(Debug, Clone, Copy)]
 pub(crate) struct Sample<T> {
-    /// First cell (row · width + column) of its footprint.
+    /// First cell (row · width + column) of its footprint on the scrap.
     pub cell: u32,
-    /// Where its station voltages start in the table, first and second station, in cells.
-    pub p: u32,
-    /// See `p`.
-    pub q: u32,
+    /// Which of the profiles it has.
+    pub profile: u32,
     /// Fractions, as [`crate::response::window::locate`].
     pub fx: T,
     /// See `fx`.
     pub fy: T,
-    /// w less that of the layer, wavelengths.
-    pub dw: T,
     /// Weighted visibility, turned to the patch's centre (spreading only).
     pub re: T,
     /// See `re`.
     pub im: T,
 }
 
-/// What one block of eight terms needs.
-pub(crate) struct Lane<'a, T> {
-    /// Station voltages at the terms' directions.
-    pub table: &'a [Cell<T>],
-    /// Which cell after `p`, `q` this block is.
-    pub offset: u32,
-    /// Bend of each term's direction, turns per wavelength of w.
-    pub bend: &'a [T; LANES],
-    /// Whether w matters at all.
-    pub bends: bool,
-    /// Columns of the grid.
+/// A small part of the grid with at most eight numbers a cell, one a node: visibilities that are close in u, v meet here,
+/// and only what they sum to meets the many terms of the grid.
+pub(crate) struct Scrap<'a, T> {
+    /// How much of a visibility each node gets: the interpolation weights, twice.
+    pub profiles: &'a [Cell<T>],
+    /// Columns.
     pub width: usize,
     /// The window.
     pub window: &'a PolynomialWindow<T>,
+}
+
+/// A run of cells that lie side by side on a scrap and on the grid.
+#[derive(Debug, Clone, Copy)]
+pub(crate) struct Piece {
+    /// First cell on the scrap.
+    pub from: usize,
+    /// First cell of the grid.
+    pub to: usize,
+    /// Cells.
+    pub length: usize,
+}
+
+/// Two station voltages at the terms' directions, and w, of one node of a run.
+pub(crate) struct Look<'a, T> {
+    /// Station voltages, first and second station, one cell for eight directions.
+    pub p: &'a [Cell<T>],
+    /// See `p`.
+    pub q: &'a [Cell<T>],
+    /// w less that of the layer, wavelengths; `None` where w does not matter.
+    pub dw: Option<T>,
+}
+
+/// What makes kernel coefficients of looks.
+pub(crate) struct Mixing<'a, T> {
+    /// Bend of each direction, turns per wavelength of w.
+    pub bends: &'a [[T; LANES]],
+    /// `[direction][block of terms]`: what each direction's value adds to each term, twice over.
+    pub mix: &'a [Cell<T>],
+    /// Blocks of terms.
+    pub blocks: usize,
 }
 
 #[inline(always)]
@@ -143,22 +165,25 @@ fn polynomial<T: Real, const FUSED: bool>(coefficients: &[f64], x: &[T; LANES]) 
     sum
 }
 
-/// The kernel coefficients conj(g_p) g_q exp(2πi δw κ) at the terms' directions.
+/// conj(g_p) g_q exp(2πi δw κ) in eight directions.
 #[inline(always)]
-fn coefficients<T: GridReal, const FUSED: bool>(sample: &Sample<T>, lane: &Lane<T>) -> Cell<T> {
-    let gp = &lane.table[(sample.p + lane.offset) as usize];
-    let gq = &lane.table[(sample.q + lane.offset) as usize];
+fn kernel_values<T: GridReal, const FUSED: bool>(
+    gp: &Cell<T>,
+    gq: &Cell<T>,
+    dw: Option<T>,
+    bend: &[T; LANES],
+) -> Cell<T> {
     let mut out = [T::default(); 2 * LANES];
     for j in 0..LANES {
         let (pr, pi, qr, qi) = (gp[j], gp[j + LANES], gq[j], gq[j + LANES]);
         out[j] = fma::<T, FUSED>(pr, qr, pi * qi);
         out[j + LANES] = pr * qi - pi * qr;
     }
-    if lane.bends {
+    if let Some(dw) = dw {
         let mut t = [T::default(); LANES];
         let mut t2 = [T::default(); LANES];
         for j in 0..LANES {
-            let turns = sample.dw * lane.bend[j];
+            let turns = dw * bend[j];
             t[j] = turns - ((turns + T::WHOLE) - T::WHOLE);
             t2[j] = t[j] * t[j];
         }
@@ -174,6 +199,67 @@ fn coefficients<T: GridReal, const FUSED: bool>(sample: &Sample<T>, lane: &Lane<
     out
 }
 
+/// Directions whose values are computed together before they are mixed into terms.
+const DIRECTIONS: usize = 8 * LANES;
+
+/// The coefficients of all terms for each look, `[look][block]`.
+#[inline(always)]
+fn coefficients_body<T: GridReal, R: Register<T>, const FUSED: bool>(
+    looks: &[Look<T>],
+    mixing: &Mixing<T>,
+    out: &mut [Cell<T>],
+) {
+    let zero = [T::default(); 2 * LANES];
+    let mut values = [zero; DIRECTIONS];
+    for (look, out) in looks.iter().zip(out.chunks_exact_mut(mixing.blocks)) {
+        out.fill(zero);
+        let chunks = look.p.chunks(DIRECTIONS / LANES).zip(look.q.chunks(DIRECTIONS / LANES));
+        let bends = mixing.bends.chunks(DIRECTIONS / LANES);
+        let mix = mixing.mix.chunks(DIRECTIONS * mixing.blocks);
+        for (((p, q), bends), mix) in chunks.zip(bends).zip(mix) {
+            for (block, ((gp, gq), bend)) in p.iter().zip(q).zip(bends).enumerate() {
+                let eight = kernel_values::<T, FUSED>(gp, gq, look.dw, bend);
+                for (lane, value) in values[block * LANES..(block + 1) * LANES].iter_mut().enumerate() {
+                    value[..LANES].fill(eight[lane]);
+                    value[LANES..].fill(eight[lane + LANES]);
+                }
+            }
+            let mut first = 0;
+            while first + 4 <= mixing.blocks {
+                mix_blocks::<T, R, 4>(&values, mix, mixing.blocks, first, out);
+                first += 4;
+            }
+            match mixing.blocks - first {
+                3 => mix_blocks::<T, R, 3>(&values, mix, mixing.blocks, first, out),
+                2 => mix_blocks::<T, R, 2>(&values, mix, mixing.blocks, first, out),
+                1 => mix_blocks::<T, R, 1>(&values, mix, mixing.blocks, first, out),
+                _ => {}
+            }
+        }
+    }
+}
+
+#[inline(always)]
+fn mix_blocks<T: GridReal, R: Register<T>, const N: usize>(
+    values: &[Cell<T>],
+    mix: &[Cell<T>],
+    blocks: usize,
+    first: usize,
+    out: &mut [Cell<T>],
+) {
+    let out = &mut out[first..first + N];
+    let mut sums: [R; N] = std::array::from_fn(|n| R::load(&out[n]));
+    for (value, row) in values.iter().zip(mix.chunks_exact(blocks)) {
+        let value = R::load(value);
+        for (sum, mix) in sums.iter_mut().zip(&row[first..first + N]) {
+            *sum = value.product_plus(R::load(mix), *sum);
+        }
+    }
+    for (sum, out) in sums.iter().zip(out) {
+        sum.store(out);
+    }
+}
+
 #[inline(always)]
 fn window_taps<T: GridReal, const FUSED: bool>(window: &PolynomialWindow<T>, f: T, taps: &mut [T; MAX_TAPS]) {
     if FUSED {
@@ -183,30 +269,30 @@ fn window_taps<T: GridReal, const FUSED: bool>(window: &PolynomialWindow<T>, f: 
     }
 }
 
-/// Samples whose coefficients and taps are computed together, before any of them meets the grid. The two loops then each
-/// run at the processor's pace; sample by sample, every sum on the grid waits for its coefficients.
+/// Samples whose taps are computed together, before any of them meets the scrap: the two loops then each run at the
+/// processor's pace.
 const TOGETHER: usize = 32;
 
 #[inline(always)]
 fn spread_body<T: GridReal, R: Register<T>, const W: usize, const FUSED: bool>(
     samples: &[Sample<T>],
-    lane: &Lane<T>,
-    grid: &mut [Cell<T>],
+    with: &Scrap<T>,
+    cells: &mut [Cell<T>],
 ) {
     // a support of 0 stands for any
-    let support = if W == 0 { lane.window.support() } else { W };
+    let support = if W == 0 { with.window.support() } else { W };
     let mut values = [[T::default(); 2 * LANES]; TOGETHER];
     let mut across = [[T::default(); MAX_TAPS]; TOGETHER];
     let mut down = [[T::default(); MAX_TAPS]; TOGETHER];
     for samples in samples.chunks(TOGETHER) {
         for (i, sample) in samples.iter().enumerate() {
-            let m = coefficients::<T, FUSED>(sample, lane);
+            let profile = &with.profiles[sample.profile as usize];
             for j in 0..LANES {
-                values[i][j] = m[j] * sample.re - m[j + LANES] * sample.im;
-                values[i][j + LANES] = fma::<T, FUSED>(m[j], sample.im, m[j + LANES] * sample.re);
+                values[i][j] = profile[j] * sample.re;
+                values[i][j + LANES] = profile[j] * sample.im;
             }
-            window_taps::<T, FUSED>(lane.window, sample.fx, &mut across[i]);
-            window_taps::<T, FUSED>(lane.window, sample.fy, &mut down[i]);
+            window_taps::<T, FUSED>(with.window, sample.fx, &mut across[i]);
+            window_taps::<T, FUSED>(with.window, sample.fy, &mut down[i]);
         }
         // kept in memory: a tap is then broadcast by the load, instead of shuffled out of a register
         let (values, across, down) = std::hint::black_box((&values, &across, &down));
@@ -215,10 +301,10 @@ fn spread_body<T: GridReal, R: Register<T>, const W: usize, const FUSED: bool>(
             let mut start = sample.cell as usize;
             for &tap in &down[i][..support] {
                 let line = value.times(tap);
-                for (cell, &tap) in grid[start..start + support].iter_mut().zip(&across[i][..support]) {
+                for (cell, &tap) in cells[start..start + support].iter_mut().zip(&across[i][..support]) {
                     line.times_plus(tap, R::load(cell)).store(cell);
                 }
-                start += lane.width;
+                start += with.width;
             }
         }
     }
@@ -227,19 +313,19 @@ fn spread_body<T: GridReal, R: Register<T>, const W: usize, const FUSED: bool>(
 #[inline(always)]
 fn gather_body<T: GridReal, R: Register<T>, const W: usize, const FUSED: bool>(
     samples: &[Sample<T>],
-    lane: &Lane<T>,
-    grid: &[Cell<T>],
+    with: &Scrap<T>,
+    cells: &[Cell<T>],
     out: &mut [[f64; 2]],
 ) {
-    let support = if W == 0 { lane.window.support() } else { W };
+    let support = if W == 0 { with.window.support() } else { W };
     let zero = [T::default(); 2 * LANES];
     let mut values = [zero; TOGETHER];
     let mut across = [[T::default(); MAX_TAPS]; TOGETHER];
     let mut down = [[T::default(); MAX_TAPS]; TOGETHER];
     for (samples, out) in samples.chunks(TOGETHER).zip(out.chunks_mut(TOGETHER)) {
         for (i, sample) in samples.iter().enumerate() {
-            window_taps::<T, FUSED>(lane.window, sample.fx, &mut across[i]);
-            window_taps::<T, FUSED>(lane.window, sample.fy, &mut down[i]);
+            window_taps::<T, FUSED>(with.window, sample.fx, &mut across[i]);
+            window_taps::<T, FUSED>(with.window, sample.fy, &mut down[i]);
         }
         let (across, down) = std::hint::black_box((&across, &down));
         for (i, sample) in samples.iter().enumerate() {
@@ -247,26 +333,118 @@ fn gather_body<T: GridReal, R: Register<T>, const W: usize, const FUSED: bool>(
             let mut start = sample.cell as usize;
             for &tap in &down[i][..support] {
                 let mut line = R::load(&zero);
-                for (cell, &tap) in grid[start..start + support].iter().zip(&across[i][..support]) {
+                for (cell, &tap) in cells[start..start + support].iter().zip(&across[i][..support]) {
                     line = R::load(cell).times_plus(tap, line);
                 }
                 sum = line.times_plus(tap, sum);
-                start += lane.width;
+                start += with.width;
             }
-            sum.store(&mut values[i]);
+            R::load(&with.profiles[sample.profile as usize])
+                .product_plus(sum, R::load(&zero))
+                .store(&mut values[i]);
         }
-        for ((sample, value), out) in samples.iter().zip(&values).zip(out) {
-            let m = coefficients::<T, FUSED>(sample, lane);
-            // Σ conj(m) · value
-            let (mut re, mut im) = (0.0, 0.0);
+        for (value, out) in values.iter().zip(out) {
+            let (mut re, mut im) = (T::default(), T::default());
             for j in 0..LANES {
-                let (mr, mi, vr, vi) =
-                    (double(m[j]), double(m[j + LANES]), double(value[j]), double(value[j + LANES]));
-                re += mr * vr + mi * vi;
-                im += mr * vi - mi * vr;
+                re = re + value[j];
+                im = im + value[j + LANES];
             }
-            out[0] += re;
-            out[1] += im;
+            *out = [double(re), double(im)];
+        }
+    }
+}
+
+/// Adds a scrap to the grid: at each cell the sum over nodes of what they hold times their coefficients.
+#[inline(always)]
+fn expand_body<T: GridReal, R: Register<T>>(
+    scrap: &[Cell<T>],
+    pieces: &[Piece],
+    coefficients: &Expansion<T>,
+    grid: &mut [Cell<T>],
+) {
+    let blocks = coefficients.blocks;
+    for piece in pieces {
+        let from = &scrap[piece.from..piece.from + piece.length];
+        let to = &mut grid[piece.to * blocks..(piece.to + piece.length) * blocks];
+        for (cell, out) in from.iter().zip(to.chunks_exact_mut(blocks)) {
+            // cells of the scrap that no visibility touched
+            if cell.iter().all(|&value| value == T::zero()) {
+                continue;
+            }
+            let mut first = 0;
+            while first + 4 <= blocks {
+                expand_blocks::<T, R, 4>(cell, coefficients, first, out);
+                first += 4;
+            }
+            match blocks - first {
+                3 => expand_blocks::<T, R, 3>(cell, coefficients, first, out),
+                2 => expand_blocks::<T, R, 2>(cell, coefficients, first, out),
+                1 => expand_blocks::<T, R, 1>(cell, coefficients, first, out),
+                _ => {}
+            }
+        }
+    }
+}
+
+#[inline(always)]
+fn expand_blocks<T: GridReal, R: Register<T>, const N: usize>(
+    cell: &Cell<T>,
+    coefficients: &Expansion<T>,
+    first: usize,
+    out: &mut [Cell<T>],
+) {
+    let out = &mut out[first..first + N];
+    let mut sums: [R; N] = std::array::from_fn(|n| R::load(&out[n]));
+    for (j, node) in coefficients.cells.chunks_exact(coefficients.blocks).enumerate() {
+        let (re, im) = (cell[j], cell[j + LANES]);
+        for (sum, pair) in sums.iter_mut().zip(&node[first..first + N]) {
+            *sum = R::load(&pair[1]).times_plus(im, R::load(&pair[0]).times_plus(re, *sum));
+        }
+    }
+    for (sum, out) in sums.iter().zip(out) {
+        sum.store(out);
+    }
+}
+
+/// Coefficients c of a run ready for [`expand`]: `[node][block]`, (c, i c).
+pub(crate) struct Expansion<T> {
+    /// See the type.
+    pub cells: Vec<[Cell<T>; 2]>,
+    /// Blocks of terms.
+    pub blocks: usize,
+}
+
+/// Coefficients c of a run ready for [`collect`]: `[term]`, (conj c, i conj c), a lane a node.
+pub(crate) struct Collection<T> {
+    /// See the type.
+    pub cells: Vec<[Cell<T>; 2]>,
+}
+
+/// Makes a scrap of the grid: at each cell and node the sum over terms of the grid times conjugate coefficients.
+#[inline(always)]
+fn collect_body<T: GridReal, R: Register<T>>(
+    grid: &[Cell<T>],
+    pieces: &[Piece],
+    coefficients: &Collection<T>,
+    scrap: &mut [Cell<T>],
+) {
+    let blocks = coefficients.cells.len() / LANES;
+    let zero = R::load(&[T::default(); 2 * LANES]);
+    for piece in pieces {
+        let from = &grid[piece.to * blocks..(piece.to + piece.length) * blocks];
+        let to = &mut scrap[piece.from..piece.from + piece.length];
+        for (terms, out) in from.chunks_exact(blocks).zip(to) {
+            // several sums side by side: each alone would wait for itself
+            let mut sums = [zero; 4];
+            for (cell, coefficients) in terms.iter().zip(coefficients.cells.chunks_exact(LANES)) {
+                for (lane, pair) in coefficients.iter().enumerate() {
+                    let sum = &mut sums[lane % 4];
+                    *sum = R::load(&pair[1])
+                        .times_plus(cell[lane + LANES], R::load(&pair[0]).times_plus(cell[lane], *sum));
+                }
+            }
+            let one = <T as Real>::from_f64(1.0);
+            sums[0].times_plus(one, sums[1]).times_plus(one, sums[2].times_plus(one, sums[3])).store(out);
         }
     }
 }
@@ -374,110 +552,107 @@ macro_rules! by_support {
 mod compiled {
     use super::*;
 
-    #[target_feature(enable = "avx2,fma")]
-    pub(super) fn spread_avx2<T: GridReal>(samples: &[Sample<T>], lane: &Lane<T>, grid: &mut [Cell<T>]) {
-        by_support!(spread_body, T::Avx2, lane.window, (samples, lane, grid))
+    macro_rules! for_both {
+        ($avx2:ident, $avx512:ident, ($($arg:ident: $type:ty),*), |$register:ident| $body:expr) => {
+            #[target_feature(enable = "avx2,fma")]
+            pub(super) fn $avx2<T: GridReal>($($arg: $type),*) {
+                type $register<T> = <T as GridReal>::Avx2;
+                $body
+            }
+
+            #[target_feature(enable = "avx512f,avx512vl,avx512dq,avx2,fma")]
+            pub(super) fn $avx512<T: GridReal>($($arg: $type),*) {
+                type $register<T> = <T as GridReal>::Avx512;
+                $body
+            }
+        };
     }
 
-    #[target_feature(enable = "avx512f,avx512vl,avx512dq,avx2,fma")]
-    pub(super) fn spread_avx512<T: GridReal>(samples: &[Sample<T>], lane: &Lane<T>, grid: &mut [Cell<T>]) {
-        by_support!(spread_body, T::Avx512, lane.window, (samples, lane, grid))
-    }
-
-    #[target_feature(enable = "avx2,fma")]
-    pub(super) fn accumulate_avx2<T: GridReal>(
-        shares: &[Share<T>],
-        table: &[Cell<T>],
-        offset: u32,
-        out: &mut [f64; 16],
-    ) {
-        accumulate_body::<T, T::Avx2>(shares, table, offset, out);
-    }
-
-    #[target_feature(enable = "avx512f,avx512vl,avx512dq,avx2,fma")]
-    pub(super) fn accumulate_avx512<T: GridReal>(
-        shares: &[Share<T>],
-        table: &[Cell<T>],
-        offset: u32,
-        out: &mut [f64; 16],
-    ) {
-        accumulate_body::<T, T::Avx512>(shares, table, offset, out);
-    }
-
-    #[target_feature(enable = "avx2,fma")]
-    pub(super) fn gather_avx2<T: GridReal>(
-        samples: &[Sample<T>],
-        lane: &Lane<T>,
-        grid: &[Cell<T>],
-        out: &mut [[f64; 2]],
-    ) {
-        by_support!(gather_body, T::Avx2, lane.window, (samples, lane, grid, out))
-    }
-
-    #[target_feature(enable = "avx512f,avx512vl,avx512dq,avx2,fma")]
-    pub(super) fn gather_avx512<T: GridReal>(
-        samples: &[Sample<T>],
-        lane: &Lane<T>,
-        grid: &[Cell<T>],
-        out: &mut [[f64; 2]],
-    ) {
-        by_support!(gather_body, T::Avx512, lane.window, (samples, lane, grid, out))
-    }
+    for_both!(
+        spread_avx2, spread_avx512,
+        (samples: &[Sample<T>], with: &Scrap<T>, cells: &mut [Cell<T>]),
+        |R| by_support!(spread_body, R<T>, with.window, (samples, with, cells))
+    );
+    for_both!(
+        gather_avx2, gather_avx512,
+        (samples: &[Sample<T>], with: &Scrap<T>, cells: &[Cell<T>], out: &mut [[f64; 2]]),
+        |R| by_support!(gather_body, R<T>, with.window, (samples, with, cells, out))
+    );
+    for_both!(
+        expand_avx2, expand_avx512,
+        (scrap: &[Cell<T>], pieces: &[Piece], coefficients: &Expansion<T>, grid: &mut [Cell<T>]),
+        |R| expand_body::<T, R<T>>(scrap, pieces, coefficients, grid)
+    );
+    for_both!(
+        collect_avx2, collect_avx512,
+        (grid: &[Cell<T>], pieces: &[Piece], coefficients: &Collection<T>, scrap: &mut [Cell<T>]),
+        |R| collect_body::<T, R<T>>(grid, pieces, coefficients, scrap)
+    );
+    for_both!(
+        coefficients_avx2, coefficients_avx512,
+        (looks: &[Look<T>], mixing: &Mixing<T>, out: &mut [Cell<T>]),
+        |R| coefficients_body::<T, R<T>, true>(looks, mixing, out)
+    );
+    for_both!(
+        accumulate_avx2, accumulate_avx512,
+        (shares: &[Share<T>], table: &[Cell<T>], offset: u32, out: &mut [f64; 16]),
+        |R| accumulate_body::<T, R<T>>(shares, table, offset, out)
+    );
 }
 
-/// Adds `samples` times their kernel coefficients to the grid of one block of terms.
-pub(crate) fn spread<T: GridReal>(with: Instructions, samples: &[Sample<T>], lane: &Lane<T>, grid: &mut [Cell<T>]) {
-    match with {
-        Instructions::Plain => spread_body::<T, Plain<T>, 0, false>(samples, lane, grid),
-        #[cfg(target_arch = "x86_64")]
-        // SAFETY: `Instructions` other than Plain come from `detect`, which checked these features.
-        Instructions::Avx2 => unsafe { compiled::spread_avx2(samples, lane, grid) },
-        #[cfg(target_arch = "x86_64")]
-        // SAFETY: as above.
-        Instructions::Avx512 => unsafe { compiled::spread_avx512(samples, lane, grid) },
-        #[cfg(not(target_arch = "x86_64"))]
-        _ => spread_body::<T, Plain<T>, 0, false>(samples, lane, grid),
-    }
+/// Defines a function that runs the body compiled for the processor at hand.
+macro_rules! dispatched {
+    ($(#[$doc:meta])* $name:ident, $avx2:ident, $avx512:ident, ($($arg:ident: $type:ty),*), $plain:expr) => {
+        $(#[$doc])*
+        pub(crate) fn $name<T: GridReal>(instructions: Instructions, $($arg: $type),*) {
+            match instructions {
+                Instructions::Plain => $plain,
+                #[cfg(target_arch = "x86_64")]
+                // SAFETY: `Instructions` other than Plain come from `detect`, which checked these features.
+                Instructions::Avx2 => unsafe { compiled::$avx2($($arg),*) },
+                #[cfg(target_arch = "x86_64")]
+                // SAFETY: as above.
+                Instructions::Avx512 => unsafe { compiled::$avx512($($arg),*) },
+                #[cfg(not(target_arch = "x86_64"))]
+                _ => $plain,
+            }
+        }
+    };
 }
 
-/// Adds to `out` the sum over one block of terms of the grid at each sample times its conjugate kernel coefficients.
-pub(crate) fn gather<T: GridReal>(
-    with: Instructions,
-    samples: &[Sample<T>],
-    lane: &Lane<T>,
-    grid: &[Cell<T>],
-    out: &mut [[f64; 2]],
-) {
-    match with {
-        Instructions::Plain => gather_body::<T, Plain<T>, 0, false>(samples, lane, grid, out),
-        #[cfg(target_arch = "x86_64")]
-        // SAFETY: `Instructions` other than Plain come from `detect`, which checked these features.
-        Instructions::Avx2 => unsafe { compiled::gather_avx2(samples, lane, grid, out) },
-        #[cfg(target_arch = "x86_64")]
-        // SAFETY: as above.
-        Instructions::Avx512 => unsafe { compiled::gather_avx512(samples, lane, grid, out) },
-        #[cfg(not(target_arch = "x86_64"))]
-        _ => gather_body::<T, Plain<T>, 0, false>(samples, lane, grid, out),
-    }
-}
-
-/// Adds to `out` the sums over `shares` of weight times the product of both stations' sixteen powers.
-pub(crate) fn accumulate<T: GridReal>(
-    with: Instructions,
-    shares: &[Share<T>],
-    table: &[Cell<T>],
-    offset: u32,
-    out: &mut [f64; 2 * LANES],
-) {
-    match with {
-        Instructions::Plain => accumulate_body::<T, Plain<T>>(shares, table, offset, out),
-        #[cfg(target_arch = "x86_64")]
-        // SAFETY: `Instructions` other than Plain come from `detect`, which checked these features.
-        Instructions::Avx2 => unsafe { compiled::accumulate_avx2(shares, table, offset, out) },
-        #[cfg(target_arch = "x86_64")]
-        // SAFETY: as above.
-        Instructions::Avx512 => unsafe { compiled::accumulate_avx512(shares, table, offset, out) },
-        #[cfg(not(target_arch = "x86_64"))]
-        _ => accumulate_body::<T, Plain<T>>(shares, table, offset, out),
-    }
-}
+dispatched!(
+    /// Adds `samples` to a scrap.
+    spread, spread_avx2, spread_avx512,
+    (samples: &[Sample<T>], with: &Scrap<T>, cells: &mut [Cell<T>]),
+    spread_body::<T, Plain<T>, 0, false>(samples, with, cells)
+);
+dispatched!(
+    /// Reads a scrap at each sample, the transpose of [`spread`]; overwrites `out`.
+    gather, gather_avx2, gather_avx512,
+    (samples: &[Sample<T>], with: &Scrap<T>, cells: &[Cell<T>], out: &mut [[f64; 2]]),
+    gather_body::<T, Plain<T>, 0, false>(samples, with, cells, out)
+);
+dispatched!(
+    /// Adds a scrap to the grid: at each cell the sum over nodes of what they hold times their coefficients.
+    expand, expand_avx2, expand_avx512,
+    (scrap: &[Cell<T>], pieces: &[Piece], coefficients: &Expansion<T>, grid: &mut [Cell<T>]),
+    expand_body::<T, Plain<T>>(scrap, pieces, coefficients, grid)
+);
+dispatched!(
+    /// Fills a scrap from the grid, the transpose of [`expand`].
+    collect, collect_avx2, collect_avx512,
+    (grid: &[Cell<T>], pieces: &[Piece], coefficients: &Collection<T>, scrap: &mut [Cell<T>]),
+    collect_body::<T, Plain<T>>(grid, pieces, coefficients, scrap)
+);
+dispatched!(
+    /// The coefficients of all terms for each look, `[look][block]`.
+    coefficients, coefficients_avx2, coefficients_avx512,
+    (looks: &[Look<T>], mixing: &Mixing<T>, out: &mut [Cell<T>]),
+    coefficients_body::<T, Plain<T>, false>(looks, mixing, out)
+);
+dispatched!(
+    /// Adds to `out` the sums over `shares` of weight times the product of both stations' sixteen powers.
+    accumulate, accumulate_avx2, accumulate_avx512,
+    (shares: &[Share<T>], table: &[Cell<T>], offset: u32, out: &mut [f64; 2 * LANES]),
+    accumulate_body::<T, Plain<T>>(shares, table, offset, out)
+);

@@ -1,14 +1,16 @@
 //! From a sky to visibilities: the transpose of gridding, step by step.
 
-use super::{BATCH, Engine, Prepared, Table, Task};
+use super::prepare::Prepared;
+use super::runs::{Scratch as RunScratch, View};
+use super::tables::Table;
+use super::{BATCH, Engine, Task};
 use crate::observation::Block;
 use crate::response::ResponseError;
 use crate::response::gridded::offgrid::{Spread, half_width};
 #[cfg(test)]
 use crate::response::gridded::plan::Plan;
-use crate::response::gridded::tiles::tile_order;
-use crate::response::gridded::vector::{Cell, GridReal, LANES, Sample, gather, real};
-use crate::response::rows::{Seen, cis_turns};
+use crate::response::gridded::vector::{Cell, GridReal, LANES, real};
+use crate::response::rows::cis_turns;
 use crate::sky::{Component, ImageGeometry};
 use ndarray::LinalgScalar;
 use num_complex::{Complex, Complex32, Complex64};
@@ -49,58 +51,48 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
     ) -> Result<Vec<Vec<[f64; 2]>>, ResponseError> {
         let spectra = self.model_images(geometry, sky)?;
         let groups = self.intensity.groups().len();
-        let mut sums: Vec<Vec<[f64; 2]>> =
-            blocks.iter().map(|b| vec![[0.0; 2]; b.rows() * b.channels * groups]).collect();
         let prepared: Vec<Prepared> = blocks.iter().map(|block| self.prepare(block)).collect();
         blocks.iter().zip(&prepared).try_for_each(|(block, prepared)| self.check_reach(block, prepared))?;
+        // in the order that runs go through: neighbours there are written by one thread
+        let mut ordered: Vec<Vec<[f64; 2]>> =
+            blocks.iter().map(|b| vec![[0.0; 2]; b.rows() * b.channels * groups]).collect();
         for task in self.tasks() {
-            let partition = &self.plan.partitions[task.partition];
             let tables: Vec<Table<T>> = prepared.iter().map(|p| self.kernel_table(p, task.partition)).collect();
-            let bends = Self::term_bends(partition);
             for (power, model) in spectra.images.iter().enumerate() {
-                let grids = self.model_grids(task, model);
+                let grid = self.model_grid(task, model);
                 for ((block, prepared), (table, sums)) in
-                    blocks.iter().zip(&prepared).zip(tables.iter().zip(&mut sums))
+                    blocks.iter().zip(&prepared).zip(tables.iter().zip(&mut ordered))
                 {
-                    let lanes = self.lanes(table, &bends);
                     let per_row = block.channels * groups;
+                    let view = View { task, block, prepared, table };
+                    let factors: Vec<f64> =
+                        self.frequencies_hz.iter().map(|&hz| spectra.factor(power, hz)).collect();
                     let rows_at_once = (BATCH / per_row.max(1)).clamp(16, 4096);
-                    sums.par_chunks_mut(rows_at_once * per_row).enumerate().for_each(|(chunk, sums)| {
-                        let rows = chunk * rows_at_once..((chunk + 1) * rows_at_once).min(block.rows());
-                        let mut batch = Vec::new();
-                        let mut places = Vec::new();
-                        self.samples(
-                            task,
-                            block,
-                            (prepared, table),
-                            rows.clone(),
-                            false,
-                            |sample, place, turns| {
-                                batch.push(sample);
-                                places.push((place, turns));
-                            },
-                        );
-                        let order = tile_order(&batch, self.plan.shape.width, self.plan.shape.height);
-                        let sorted: Vec<Sample<T>> = order.iter().map(|&index| batch[index as usize]).collect();
-                        let mut got = vec![[0.0; 2]; sorted.len()];
-                        for (lane, grid) in lanes.iter().zip(&grids) {
-                            gather(self.instructions, &sorted, lane, grid, &mut got);
-                        }
-                        for (&index, got) in order.iter().zip(&got) {
-                            let ((row, channel, group), turns) = &places[index as usize];
-                            let factor = spectra.factor(power, self.frequencies_hz[*channel]);
-                            let mean = matches!(self.intensity.groups()[*group].0, Seen::Mean);
-                            let share = if mean { 0.5 * factor } else { factor };
-                            let value = Complex64::new(got[0], got[1]) * cis_turns(-turns) * share;
-                            let sum = &mut sums[(row - rows.start) * per_row + channel * groups + group];
-                            sum[0] += value.re;
-                            sum[1] += value.im;
-                        }
-                    });
+                    sums.par_chunks_mut(rows_at_once * per_row).enumerate().for_each_init(
+                        RunScratch::new,
+                        |scratch, (chunk, sums)| {
+                            let rows = chunk * rows_at_once..((chunk + 1) * rows_at_once).min(block.rows());
+                            self.gather_rows(&view, rows.clone(), scratch, &grid, |place, share, value| {
+                                let value = value * (factors[place.channel] * share.part);
+                                let at = (place.ordered - rows.start) * per_row + place.channel * groups;
+                                let sum = &mut sums[at + share.group];
+                                sum[0] += value.re;
+                                sum[1] += value.im;
+                            });
+                        },
+                    );
                 }
             }
         }
-        Ok(sums)
+        let sums = blocks.iter().zip(&prepared).zip(&ordered).map(|((block, prepared), ordered)| {
+            let per_row = (block.channels * groups).max(1);
+            let mut sums = vec![[0.0; 2]; ordered.len()];
+            for (from, &row) in ordered.chunks_exact(per_row).zip(&prepared.order) {
+                sums[row as usize * per_row..][..per_row].copy_from_slice(from);
+            }
+            sums
+        });
+        Ok(sums.collect())
     }
 
     /// The plan this engine follows.
@@ -109,45 +101,51 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
         &self.plan
     }
 
-    /// The grids a task predicts from: the model times conjugate screens and layer phase, tapered and transformed.
-    fn model_grids(&self, task: Task, model: &[f64]) -> Vec<Vec<Cell<T>>> {
+    /// The grid a task predicts from: the model times screens and conjugate layer phase, tapered and transformed.
+    fn model_grid(&self, task: Task, model: &[f64]) -> Vec<Cell<T>> {
         let (nx, _) = self.plan.patch.size;
         let terms = &self.plan.partitions[task.partition].kernel;
         let matrices = self.pixels(terms);
+        let paired = self.plan.layers.centred;
         let w = self.plan.layers.w(task.layer);
         let tapered: Vec<Complex<T>> = model
             .par_iter()
             .enumerate()
             .map(|(at, &flux)| {
                 let value = flux * self.taper.0[at % nx] * self.taper.1[at / nx];
-                let phase = if self.plan.layers.bends { cis_turns(-w * self.bend[at]) } else { Complex64::ONE };
+                let phase = if paired { Complex64::ONE } else { cis_turns(-w * self.bend[at]) };
                 Complex::new(real(value * phase.re), real(value * phase.im))
             })
             .collect();
-        let count = terms.points.len();
-        (0..count.div_ceil(LANES))
-            .map(|block| {
-                let indices: Vec<usize> = (block * LANES..((block + 1) * LANES).min(count)).collect();
-                let images: Vec<Vec<Complex<T>>> = indices
-                    .par_iter()
-                    .map(|&index| {
-                        let (re, im) = Self::screen(terms, index, &matrices);
-                        match im {
-                            None => tapered.iter().zip(&re).map(|(z, &re)| z.scale(re)).collect(),
-                            Some(im) => tapered
-                                .iter()
-                                .zip(&re)
-                                .zip(&im)
-                                .map(|((z, &re), &im)| *z * Complex::new(re, T::zero() - im))
-                                .collect(),
+        let blocks = terms.screens.len().div_ceil(LANES);
+        let mut grid = vec![[T::zero(); 2 * LANES]; self.plan.shape.cells() * blocks];
+        for block in 0..blocks {
+            let of = self.lanes(task.partition, block);
+            let indices: Vec<usize> = (block * LANES..block * LANES + of.terms).collect();
+            let images: Vec<Vec<Complex<T>>> = if paired {
+                let pair = |pair: &[usize]| {
+                    let a = Self::screen(terms, pair[0], &matrices);
+                    let b = pair.get(1).map(|&b| Self::screen(terms, b, &matrices));
+                    match b {
+                        Some(b) => {
+                            let screens = a.iter().zip(&b);
+                            let both = |(z, (&a, &b)): (&Complex<T>, (&T, &T))| Complex::new(z.re * a, z.re * b);
+                            tapered.iter().zip(screens).map(both).collect()
                         }
-                    })
-                    .collect();
-                let mut grid = vec![[T::zero(); 2 * LANES]; self.plan.shape.cells()];
-                self.transform.to_grid(&images, &mut grid);
-                grid
-            })
-            .collect()
+                        None => tapered.iter().zip(&a).map(|(z, &a)| Complex::new(z.re * a, T::zero())).collect(),
+                    }
+                };
+                indices.par_chunks(2).map(pair).collect()
+            } else {
+                let one = |&index: &usize| {
+                    let screen = Self::screen(terms, index, &matrices);
+                    tapered.iter().zip(&screen).map(|(z, &screen)| z.scale(screen)).collect()
+                };
+                indices.par_iter().map(one).collect()
+            };
+            self.transform.to_grid(&images, of, paired, &mut grid);
+        }
+        grid
     }
 
     /// Model images of a sky on the patch's pixels, one a power of ln ν.

@@ -1,0 +1,387 @@
+//! Runs: rows of one station pair, close in time, in one band of channels. Their visibilities meet on scraps of grid, and
+//! what a scrap holds meets the terms once.
+
+use super::prepare::{Prepared, Row};
+use super::tables::Table;
+use super::{Engine, Task};
+use crate::observation::Block;
+use crate::response::gridded::bands::Band;
+use crate::response::gridded::vector::{
+    Cell, Collection, Expansion, GridReal, LANES, Look, Piece, Sample, Scrap, coefficients, collect, expand,
+    gather, real, spread,
+};
+use crate::response::rows::{Intensity, Seen, cis_turns};
+use crate::response::window::locate;
+use ndarray::LinalgScalar;
+use num_complex::Complex64;
+use std::ops::Range;
+
+/// Channels between phases computed from scratch.
+const ANCHOR: usize = 16;
+/// How far apart in cells visibilities of a scrap may lie: it fits the first cache then.
+const SPAN: f64 = 8.0;
+/// How far apart in cells rows of a run may lie.
+const NEAR: f64 = 3.0;
+
+/// Which kernels a group of hands sees, and how much of each.
+#[derive(Debug, Clone, Copy)]
+pub(super) struct Share {
+    pub group: usize,
+    /// Index among the engine's feeds.
+    pub slot: usize,
+    pub part: f64,
+}
+
+/// Where a sample belongs: index in the order of rows, channel, and its phase.
+#[derive(Debug, Clone, Copy)]
+pub(super) struct Place {
+    pub ordered: usize,
+    pub channel: usize,
+    pub phase: Complex64,
+}
+
+/// What a task looks at in a block.
+pub(super) struct View<'a, T> {
+    pub task: Task,
+    pub block: &'a Block,
+    pub prepared: &'a Prepared,
+    pub table: &'a Table<T>,
+}
+
+/// Rows (positions in the order) and a band.
+struct Run<'a, T> {
+    rows: Range<usize>,
+    band: usize,
+    of: &'a Band<T>,
+    share: Share,
+}
+
+/// Memory that runs use again and again.
+pub(super) struct Scratch<T> {
+    samples: Vec<Sample<T>>,
+    places: Vec<Place>,
+    cells: Vec<Cell<T>>,
+    width: usize,
+    pieces: Vec<Piece>,
+    coefficients: Vec<Cell<T>>,
+    got: Vec<[f64; 2]>,
+}
+
+impl<T: GridReal> Scratch<T> {
+    pub(super) fn new() -> Self {
+        Scratch {
+            samples: Vec::new(),
+            places: Vec::new(),
+            cells: Vec::new(),
+            width: 0,
+            pieces: Vec::new(),
+            coefficients: Vec::new(),
+            got: Vec::new(),
+        }
+    }
+}
+
+impl<T: GridReal + LinalgScalar> Engine<T> {
+    /// What each group of hands sees.
+    fn shares(&self) -> Vec<Share> {
+        let slot_of = |feed: usize| self.feeds.iter().position(|&f| f == feed).unwrap_or(0);
+        let groups = self.intensity.groups().iter().enumerate();
+        groups
+            .flat_map(|(group, (seen, _))| match seen {
+                Seen::Feed(feed) => vec![Share { group, slot: slot_of(*feed), part: 1.0 }],
+                Seen::Mean => (0..2).map(|feed| Share { group, slot: slot_of(feed), part: 0.5 }).collect(),
+            })
+            .collect()
+    }
+
+    /// Calls `each` with every run of the view's task among `rows` (positions in the order).
+    fn runs(&self, view: &View<T>, rows: Range<usize>, mut each: impl FnMut(&Run<T>)) {
+        let plan = &self.plan;
+        let class = view.task.partition - view.task.partition % plan.channel_groups.len();
+        let (scale_x, scale_y) = self.cells_per_wavelength();
+        let shares = self.shares();
+        let row_at = |ordered: usize| &view.prepared.rows[view.prepared.order[ordered] as usize];
+        for (index, band) in self.bands[view.task.partition].kernel.iter().enumerate() {
+            let layer_of = |row: &Row| plan.layers.of(row.w * band.middle_k);
+            let mine = |row: &Row| {
+                row.planned
+                    && self.class[row.pair.0 as usize * self.stations + row.pair.1 as usize] as usize == class
+                    && layer_of(row) == view.task.layer
+            };
+            let reach = (band.ends_k.1 * scale_x.abs() / NEAR, band.ends_k.1 * scale_y.abs() / NEAR);
+            for &share in &shares {
+                let mut start = rows.start;
+                while start < rows.end {
+                    let first = row_at(start);
+                    if !mine(first) {
+                        start += 1;
+                        continue;
+                    }
+                    let near = |row: &Row| {
+                        row.pair == first.pair
+                            && mine(row)
+                            && (row.uv[0] - first.uv[0]).abs() * reach.0 <= 1.0
+                            && (row.uv[1] - first.uv[1]).abs() * reach.1 <= 1.0
+                    };
+                    let most = rows.end.min(start + band.rows);
+                    let end = (start + 1..most).find(|&next| !near(row_at(next))).unwrap_or(most);
+                    each(&Run { rows: start..end, band: index, of: band, share });
+                    start = end;
+                }
+            }
+        }
+    }
+
+    /// Cells of the grid per wavelength of u and v; u grows against the columns.
+    fn cells_per_wavelength(&self) -> (f64, f64) {
+        let (pixel, shape) = (self.plan.patch.pixel(), &self.plan.shape);
+        (-pixel * shape.fft.0 as f64, pixel * shape.fft.1 as f64)
+    }
+
+    /// The coefficients of a run's nodes, `[row and node][block]`, into `scratch`.
+    fn run_coefficients(&self, view: &View<T>, run: &Run<T>, scratch: &mut Scratch<T>) {
+        let layer_w = self.plan.layers.w(view.task.layer);
+        let looks: Vec<Look<T>> = run
+            .rows
+            .clone()
+            .flat_map(|ordered| {
+                let row = &view.prepared.rows[view.prepared.order[ordered] as usize];
+                run.of.k.iter().enumerate().map(move |(node, k)| {
+                    let at = |station: u32| view.table.at(row.time, (run.band, node), run.share.slot, station);
+                    let dw = self.plan.layers.bends.then(|| real(row.w * k - layer_w));
+                    Look { p: at(row.pair.0), q: at(row.pair.1), dw }
+                })
+            })
+            .collect();
+        let mixing = self.bands[view.task.partition].mixing();
+        scratch.coefficients.resize(looks.len() * mixing.blocks, [T::zero(); 2 * LANES]);
+        coefficients(self.instructions, &looks, &mixing, &mut scratch.coefficients);
+    }
+
+    /// Calls `each` with every scrap of a run that has samples: they, their places and the scrap's cells are in `scratch`.
+    fn scraps(
+        &self,
+        view: &View<T>,
+        run: &Run<T>,
+        spreading: bool,
+        scratch: &mut Scratch<T>,
+        mut each: impl FnMut(&mut Scratch<T>),
+    ) {
+        let band = run.of;
+        let (scale_x, scale_y) = self.cells_per_wavelength();
+        let row_at = |ordered: usize| &view.prepared.rows[view.prepared.order[ordered] as usize];
+        let channels = band.channels.len();
+        let farthest = run
+            .rows
+            .clone()
+            .map(row_at)
+            .fold(0.0, |far: f64, row| far.max((row.uv[0] * scale_x).abs()).max((row.uv[1] * scale_y).abs()));
+        let length = farthest * (band.ends_k.1 - band.ends_k.0);
+        let parts = ((length / SPAN).ceil() as usize).clamp(1, channels);
+        for part in 0..parts {
+            let local = part * channels / parts..(part + 1) * channels / parts;
+            let ends = local.clone().map(|c| self.wavelengths_per_metre[band.channels.start + c]);
+            let ends = ends.fold((f64::INFINITY, 0.0f64), |(low, high), k| (low.min(k), high.max(k)));
+            let (mut x, mut y) = ((f64::INFINITY, f64::NEG_INFINITY), (f64::INFINITY, f64::NEG_INFINITY));
+            for row in run.rows.clone().map(row_at) {
+                // the very products that samples are placed by: rounding must not put one outside
+                let (x_per_k, y_per_k) = (row.uv[0] * scale_x, row.uv[1] * scale_y);
+                for k in [ends.0, ends.1] {
+                    let (px, py) = (x_per_k * k, y_per_k * k);
+                    x = (x.0.min(px), x.1.max(px));
+                    y = (y.0.min(py), y.1.max(py));
+                }
+            }
+            let corner = self.lay_out(x, y, scratch);
+            scratch.samples.clear();
+            scratch.places.clear();
+            for (lane, ordered) in run.rows.clone().enumerate() {
+                let index = view.prepared.order[ordered] as usize;
+                self.row_samples(view, run, (lane, ordered, index), (local.clone(), corner), spreading, scratch);
+            }
+            if !scratch.samples.is_empty() {
+                each(scratch);
+            }
+        }
+    }
+
+    /// Lays a scrap over positions from `x.0` to `x.1` and `y.0` to `y.1` cells; gives its corner.
+    fn lay_out(&self, x: (f64, f64), y: (f64, f64), scratch: &mut Scratch<T>) -> (i64, i64) {
+        let shape = &self.plan.shape;
+        let support = self.plan.window.support;
+        let corner = (locate(x.0, support).0, locate(y.0, support).0);
+        let width = (locate(x.1, support).0 - corner.0) as usize + support;
+        let height = (locate(y.1, support).0 - corner.1) as usize + support;
+        scratch.width = width;
+        scratch.cells.clear();
+        scratch.cells.resize(width * height, [T::zero(); 2 * LANES]);
+        scratch.pieces.clear();
+        // positions beyond half the transform fold back by whole lengths of it
+        let fold = |middle: f64, n: usize| (middle / n as f64).round() as i64 * n as i64;
+        let column = corner.0 - fold(0.5 * (x.0 + x.1), shape.fft.0) + shape.origin.0 as i64;
+        let line = corner.1 - fold(0.5 * (y.0 + y.1), shape.fft.1) + shape.origin.1 as i64;
+        let place = |at: i64, stored: usize, n: usize| -> usize {
+            let n = n as i64;
+            (if at < 0 {
+                at + n
+            } else if at >= stored as i64 {
+                at - n
+            } else {
+                at
+            }) as usize
+        };
+        for row in 0..height {
+            let start = place(line + row as i64, shape.height, shape.fft.1) * shape.width;
+            let mut from = 0;
+            while from < width {
+                let at = place(column + from as i64, shape.width, shape.fft.0);
+                // up to where the stored columns end
+                let next = column + from as i64;
+                let length = match next {
+                    next if next < 0 => (width - from).min(next.unsigned_abs() as usize),
+                    next if next >= shape.width as i64 => width - from,
+                    _ => (width - from).min(shape.width - next as usize),
+                };
+                scratch.pieces.push(Piece { from: row * width + from, to: start + at, length });
+                from += length;
+            }
+        }
+        corner
+    }
+
+    /// Adds the samples of one row to a scrap's. For spreading they carry the weighted visibilities, and those without
+    /// weight are left out; for prediction all that are used are there.
+    #[inline(always)]
+    fn row_samples(
+        &self,
+        view: &View<T>,
+        run: &Run<T>,
+        (lane, ordered, index): (usize, usize, usize),
+        (local, corner): (Range<usize>, (i64, i64)),
+        spreading: bool,
+        scratch: &mut Scratch<T>,
+    ) {
+        let band = run.of;
+        let row = &view.prepared.rows[index];
+        let support = self.plan.window.support;
+        let (scale_x, scale_y) = self.cells_per_wavelength();
+        let (x_per_k, y_per_k) = (row.uv[0] * scale_x, row.uv[1] * scale_y);
+        let hands = &self.intensity.groups()[run.share.group].1;
+        // turns of the phase per wavenumber; from channel to channel the phase turns by the same step, and is computed anew
+        // often enough that rounding stays below 1e-15
+        let path = row.path + if self.plan.layers.bends { row.w * self.plan.middle_bend } else { 0.0 };
+        let step = self.bands[view.task.partition].step.map(|step| cis_turns(path * step));
+        let mut phase = Complex64::ONE;
+        for (count, at) in local.enumerate() {
+            let channel = band.channels.start + at;
+            let k = self.wavelengths_per_metre[channel];
+            phase = match step {
+                Some(step) if count % ANCHOR != 0 => phase * step,
+                _ => cis_turns(path * k),
+            };
+            let from = view.block.index(index, channel);
+            let value = if spreading {
+                let (value, weight) = Intensity::weighted(view.block, from, hands);
+                if weight == 0.0 {
+                    continue;
+                }
+                let value = if row.flipped { value.conj() } else { value };
+                value * phase * run.share.part
+            } else {
+                if !hands.iter().any(|hand| view.block.weight[from + hand] > 0.0) {
+                    continue;
+                }
+                scratch.places.push(Place { ordered, channel, phase });
+                Complex64::ONE
+            };
+            let (first_x, fx) = locate(x_per_k * k, support);
+            let (first_y, fy) = locate(y_per_k * k, support);
+            scratch.samples.push(Sample {
+                cell: ((first_y - corner.1) as usize * scratch.width + (first_x - corner.0) as usize) as u32,
+                profile: (lane * band.channels.len() + at) as u32,
+                fx: real(fx),
+                fy: real(fy),
+                re: real(value.re),
+                im: real(value.im),
+            });
+        }
+    }
+
+    fn scrap<'a>(&'a self, run: &Run<'a, T>, width: usize) -> Scrap<'a, T> {
+        Scrap { profiles: &run.of.profiles, width, window: &self.window }
+    }
+
+    /// Spreads the rows of a view (positions in the order) onto the task's grid.
+    pub(super) fn spread_rows(
+        &self,
+        view: &View<T>,
+        rows: Range<usize>,
+        scratch: &mut Scratch<T>,
+        grid: &mut [Cell<T>],
+    ) {
+        let blocks = self.bands[view.task.partition].mixing().blocks;
+        let mut expansion = Expansion { cells: Vec::new(), blocks };
+        self.runs(view, rows, |run| {
+            let mut ready = false;
+            self.scraps(view, run, true, scratch, |scratch| {
+                if !ready {
+                    self.run_coefficients(view, run, scratch);
+                    expansion.cells.clear();
+                    expansion.cells.extend(scratch.coefficients.iter().map(|c| {
+                        let mut turned = [T::zero(); 2 * LANES];
+                        for lane in 0..LANES {
+                            turned[lane] = -c[lane + LANES];
+                            turned[lane + LANES] = c[lane];
+                        }
+                        [*c, turned]
+                    }));
+                    ready = true;
+                }
+                let with = self.scrap(run, scratch.width);
+                spread(self.instructions, &scratch.samples, &with, &mut scratch.cells);
+                expand(self.instructions, &scratch.cells, &scratch.pieces, &expansion, grid);
+            });
+        });
+    }
+
+    /// Reads the grid of a task at the rows of a view (positions in the order): `each` gets a sample's place, the share it
+    /// is, and its value turned back to the image's centre.
+    pub(super) fn gather_rows(
+        &self,
+        view: &View<T>,
+        rows: Range<usize>,
+        scratch: &mut Scratch<T>,
+        grid: &[Cell<T>],
+        mut each: impl FnMut(&Place, Share, Complex64),
+    ) {
+        let blocks = self.bands[view.task.partition].mixing().blocks;
+        let mut collection = Collection { cells: Vec::new() };
+        self.runs(view, rows, |run| {
+            let mut ready = false;
+            self.scraps(view, run, false, scratch, |scratch| {
+                if !ready {
+                    self.run_coefficients(view, run, scratch);
+                    collection.cells.clear();
+                    collection.cells.resize(blocks * LANES, [[T::zero(); 2 * LANES]; 2]);
+                    for (node, coefficients) in scratch.coefficients.chunks_exact(blocks).enumerate() {
+                        let terms = coefficients.iter().flat_map(|c| (0..LANES).map(move |j| (c[j], c[j + LANES])));
+                        for ((re, im), [plain, turned]) in terms.zip(&mut collection.cells) {
+                            (plain[node], plain[node + LANES]) = (re, -im);
+                            (turned[node], turned[node + LANES]) = (im, re);
+                        }
+                    }
+                    ready = true;
+                }
+                collect(self.instructions, grid, &scratch.pieces, &collection, &mut scratch.cells);
+                scratch.got.resize(scratch.samples.len(), [0.0; 2]);
+                let with = self.scrap(run, scratch.width);
+                gather(self.instructions, &scratch.samples, &with, &scratch.cells, &mut scratch.got);
+                for (place, got) in scratch.places.iter().zip(&scratch.got) {
+                    let value = Complex64::new(got[0], got[1]) * place.phase.conj();
+                    let flipped = view.prepared.rows[view.prepared.order[place.ordered] as usize].flipped;
+                    each(place, run.share, if flipped { value.conj() } else { value });
+                }
+            });
+        });
+    }
+}
