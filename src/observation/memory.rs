@@ -55,4 +55,9 @@ impl BlockSource for MemorySource {
         self.next += 1;
         Ok(block)
     }
+
+    fn lend_block<'a>(&'a mut self, _kept: &'a mut Option<Block>) -> Result<Option<&'a Block>, ObservationError> {
+        self.next += 1;
+        Ok(self.blocks.get(self.next - 1))
+    }
 }

@@ -56,6 +56,15 @@ pub trait BlockSource: Send {
     /// # Errors
     /// When the file is damaged or cannot be read.
     fn next_block(&mut self) -> Result<Option<Block>, ObservationError>;
+
+    /// The next block to look at, kept in `kept` by sources that make their blocks as they go.
+    ///
+    /// # Errors
+    /// As [`BlockSource::next_block`].
+    fn lend_block<'a>(&'a mut self, kept: &'a mut Option<Block>) -> Result<Option<&'a Block>, ObservationError> {
+        *kept = self.next_block()?;
+        Ok(kept.as_ref())
+    }
 }
 
 /// Why visibilities could not be had.

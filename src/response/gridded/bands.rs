@@ -1,70 +1,155 @@
-//! Bands: runs of channels through which kernel coefficients are interpolated.
+//! Bands and spans: runs of channels and stretches of time through which kernel coefficients are interpolated.
 //!
-//! Along a row the coefficients c_k(ν) are smooth: a few nodes in frequency make those of every channel,
-//! c_k(ν) = Σ_j L_j(ν) c_k(ν_j). A visibility then has to meet the nodes only, and their sums meet the many terms
-//! (see [`super::vector::Scrap`]). How many nodes a band needs is measured, on station pairs drawn at random, at several
-//! times, at the ends of the range of w.
+//! For one station pair the coefficients c_k(ν, t) are smooth: a few nodes in frequency and time make all of them,
+//! c_k(ν, t) = Σ_j L_j(ν, t) c_k(ν_j, t_j). A visibility then has to meet the nodes only, and their sums meet the many terms
+//! (see [`super::vector::Scrap`]). The polynomials are T_a(ν) T_b(t) with a < n_b, n_0 ≥ n_1 ≥ … (a lower set, on which
+//! interpolation through as many nodes of a grid is always possible), chosen so that most error goes for least cost: by the
+//! Chebyshev coefficients of products of station pairs drawn from the visibilities, and then measured again.
 
-use super::smooth::{chebyshev_points, interpolation};
+use super::smooth::chebyshev_points;
+use super::survey::SampleRow;
 use super::vector::{Cell, GridReal, LANES, real};
 use crate::beam::StationBeams;
 use crate::response::rows::wavelengths_per_metre;
+use nalgebra::DMatrix;
 use num_complex::Complex64;
-use rand::{Rng, SeedableRng};
-use rand_chacha::ChaCha8Rng;
 use rayon::prelude::*;
-use std::f64::consts::TAU;
+use std::f64::consts::{PI, TAU};
 use std::ops::Range;
 
-/// Station pairs that errors are measured on.
-const PAIRS: usize = 40;
-/// Frequencies between nodes that errors are measured at.
-const PROBES: usize = 5;
-/// How far the worst product may pass what all keep in the root mean square.
-const WORST: f64 = 5.0;
+/// Points in frequency and in time at which products are looked at.
+const LOOKS: (usize, usize) = (9, 7);
+/// Numbers of rows of a pair in one span that are tried.
+const ROWS: [usize; 10] = [1, 2, 3, 4, 6, 8, 12, 16, 24, 32];
+/// Polynomials in time at most.
+pub(super) const MOST_DEGREES: usize = 6;
+/// Interpolation through nodes errs more than the coefficients left out say.
+const ALIASED: f64 = 1.5;
+/// Earth's rotation, radians per day of UTC: 2π · 1.00273781191 (Capitaine et al. 2003, the rate of the Earth rotation angle).
+pub(super) const EARTH: f64 = TAU * 1.002_737_811_911_354_5;
 
-/// A run of channels and its nodes.
+/// A run of channels, and its nodes in frequency and time.
 #[derive(Debug, Clone)]
 pub(super) struct Band<T> {
     /// Channels, counted over the whole observation.
     pub channels: Range<usize>,
-    /// Frequencies of the nodes.
+    /// Frequencies of the nodes, and wavelengths per metre there.
     pub hz: Vec<f64>,
-    /// Wavelengths per metre at the nodes, and in the middle.
     pub k: Vec<f64>,
+    /// Places of the nodes in a span, −1 to 1.
+    pub times: Vec<f64>,
+    /// The nodes: index of the frequency, index of the time.
+    pub nodes: Vec<(usize, usize)>,
+    /// Wavelengths per metre in the middle, and smallest and largest of the channels.
     pub middle_k: f64,
-    /// Smallest and largest wavelengths per metre of the channels.
     pub ends_k: (f64, f64),
-    /// `[channel][node]`.
+    /// `[channel][power of time]`: what T_b(t) adds to each node's weight.
     pub weights: Vec<Vec<f64>>,
-    /// Rows that share a scrap, at most.
-    pub rows: usize,
-    /// `[row of the scrap][channel]`: the weights on that row's lanes, twice.
+    /// The same in cells, each weight twice; empty where there are more nodes than a cell has lanes.
     pub profiles: Vec<Cell<T>>,
 }
 
+/// Stretches of time, each from one time of the observation to another.
+#[derive(Debug, Clone, Default)]
+pub(super) struct Lattice {
+    /// Ascending.
+    spans: Vec<Span>,
+}
+
+/// A stretch of time.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub(super) struct Span {
+    pub middle: f64,
+    pub half: f64,
+}
+
+impl Span {
+    /// Where a time lies in it, −1 to 1.
+    pub(super) fn place(&self, mjd: f64) -> f64 {
+        if self.half == 0.0 { 0.0 } else { ((mjd - self.middle) / self.half).clamp(-1.0, 1.0) }
+    }
+}
+
+impl Lattice {
+    /// Parts `times` (MJD, ascending) into spans no longer than `length` days, in which parallactic angles change by no more
+    /// than `most_turn` radians.
+    pub(super) fn new(times: &[f64], length: f64, most_turn: f64, beams: &StationBeams) -> Lattice {
+        let mut parts: Vec<&[f64]> = Vec::new();
+        let mut left = times;
+        while let Some(&start) = left.first() {
+            // times are told to some microseconds
+            let count = left.partition_point(|&mjd| mjd <= start + length + 1e-9).max(1);
+            let (part, rest) = left.split_at(count);
+            parts.push(part);
+            left = rest;
+        }
+        let divided = |part: &[f64]| -> Vec<Span> {
+            let mut spans = Vec::new();
+            let mut waiting = vec![part];
+            while let Some(part) = waiting.pop() {
+                let (first, last) = (part[0], part[part.len() - 1]);
+                if part.len() > 1 && turn(beams, first, last) > most_turn {
+                    let (before, after) = part.split_at(part.len() / 2);
+                    waiting.extend([after, before]);
+                } else {
+                    spans.push(Span { middle: 0.5 * (first + last), half: 0.5 * (last - first) });
+                }
+            }
+            spans
+        };
+        Lattice { spans: parts.into_par_iter().map(divided).flatten().collect() }
+    }
+
+    /// The span that a time belongs to; one of its own where it lies in none.
+    pub(super) fn span(&self, mjd: f64) -> Span {
+        let next = self.spans.partition_point(|span| span.middle - span.half <= mjd);
+        match next.checked_sub(1).map(|index| self.spans[index]) {
+            Some(span) if mjd <= span.middle + span.half + 1e-9 && span.half > 0.0 => span,
+            _ => Span { middle: mjd, half: 0.0 },
+        }
+    }
+}
+
+/// By how much parallactic angles of stations that turn change between two times, radians, at most.
+pub(super) fn turn(beams: &StationBeams, from: f64, to: f64) -> f64 {
+    let (a, b) = (beams.angles_at(from), beams.angles_at(to));
+    (0..a.len())
+        .filter(|&station| beams.turns(station))
+        .map(|station| {
+            let turned = (b[station] - a[station]).rem_euclid(TAU);
+            turned.min(TAU - turned)
+        })
+        .fold(0.0, f64::max)
+}
+
 /// What a partition's bands must be good for.
+#[derive(Clone, Copy)]
 pub(super) struct Demand<'a> {
     pub beams: &'a StationBeams,
-    pub pairs: &'a [(u32, u32)],
+    /// Rows of the partition.
+    pub rows: &'a [SampleRow],
     pub feeds: &'a [usize],
     /// Directions, l and m about the aim, where coefficients are taken.
     pub lm: &'a [[f64; 2]],
     /// Bend at these directions; empty where w does not matter.
     pub bends: &'a [f64],
-    /// Largest |w|, metres.
-    pub w_m: f64,
-    /// Parallactic angles at a few times.
-    pub angles: &'a [Vec<f64>],
+    /// Declination of the image centre, radians.
+    pub declination: f64,
+    /// Middles of spans to look at, MJD.
+    pub probes: &'a [f64],
+    /// Time between rows of a pair, days; 0 where there is but one.
+    pub interval: f64,
     /// Error allowed of products, root mean square.
     pub error: f64,
     /// |g_p|²|g_q|² in place of g_p* g_q.
     pub power: bool,
     /// Bands at least.
     pub fewest: usize,
+    /// Nodes at most.
+    pub lanes: usize,
 }
 
-/// What makes a number of bands cheap or dear.
+/// What makes a choice cheap or dear.
 #[derive(Debug, Clone, Copy)]
 pub(super) struct Costs {
     /// Cells of the window, one way.
@@ -76,184 +161,382 @@ pub(super) struct Costs {
     pub directions: usize,
 }
 
+/// Visibilities that share nodes: channels, rows, how much their frequencies spread relative to the middle, radians that
+/// the Earth turns from row to row, nodes.
+#[derive(Debug, Clone, Copy)]
+pub(super) struct Extent {
+    pub channels: f64,
+    pub rows: f64,
+    pub width: f64,
+    pub turn: f64,
+    pub nodes: usize,
+}
+
 impl Costs {
-    /// Rough cost of one visibility in nanoseconds (only ratios matter) in bands of `channels` whose frequencies spread by
-    /// `width` relative to their middle, with `nodes` nodes.
-    pub(super) fn of(&self, channels: f64, width: f64, nodes: usize) -> f64 {
-        let rows = rows_of(nodes) as f64;
-        let along = self.distance * width;
+    /// Rough cost of one visibility in nanoseconds (only ratios matter).
+    pub(super) fn of(&self, run: Extent) -> f64 {
         let support = self.support as f64;
-        let cells = support * support + 1.3 * support * along;
-        let (lanes, blocks) = (nodes as f64 * rows, self.blocks as f64);
-        let expanding = 1.2 * cells * (0.54 * lanes * blocks + 1.4 * blocks + 2.0);
-        let coefficients = lanes * self.directions as f64 * (1.0 + 0.3 * blocks);
-        20.0 + 0.55 * support * support + (expanding + coefficients) / (channels * rows)
+        let (along, across) = (self.distance * run.width, self.distance * run.turn * (run.rows - 1.0));
+        let cells = support * support + 1.3 * support * (along + across) + along * across;
+        let (nodes, blocks) = (run.nodes as f64, self.blocks as f64);
+        let expanding = 1.2 * cells * (0.4 * nodes * blocks + 1.4 * blocks + 3.0);
+        let coefficients = nodes * self.directions as f64 * (1.5 + 0.6 * blocks);
+        50.0 + 0.6 * support * support + (expanding + coefficients) / (run.channels * run.rows)
     }
 }
 
-/// Rows that fit a scrap of eight lanes.
-fn rows_of(nodes: usize) -> usize {
-    (LANES / nodes).max(1)
+/// Bands, and how many rows share a span.
+#[derive(Debug, Clone)]
+struct Way {
+    bands: usize,
+    rows: usize,
+    /// Polynomials in frequency for each power of time.
+    shape: Vec<usize>,
+    cost: f64,
 }
 
-impl<T: GridReal> Band<T> {
-    /// The cheapest bands that keep the demand; every channel a band of its own where nothing else does.
-    pub(super) fn choose(demand: &Demand, hz: &[f64], first: usize, costs: Costs) -> Vec<Band<T>> {
-        let mut best: Option<(f64, Vec<Range<usize>>, usize)> = None;
-        let mut bands = demand.fewest.clamp(1, hz.len());
-        // fewer channels need no more nodes
-        let mut nodes = LANES;
-        loop {
-            let parts: Vec<Range<usize>> =
-                (0..bands).map(|b| b * hz.len() / bands..(b + 1) * hz.len() / bands).collect();
-            let widest = parts.iter().map(ExactSizeIterator::len).max().unwrap_or(1);
-            let needed = if widest == 1 {
-                Some(1)
-            } else {
-                let ends = [&parts[0], &parts[parts.len() - 1]];
-                let ends: Vec<&[f64]> = ends[..bands.min(2)].iter().map(|part| &hz[(*part).clone()]).collect();
-                let mut good = None;
-                for count in (1..=nodes.min(widest)).rev() {
-                    let exact = count == widest;
-                    if !exact && !ends.iter().all(|hz| demand.kept(hz, count)) {
-                        break;
-                    }
-                    good = Some(count);
-                }
-                good
-            };
-            if let Some(count) = needed {
-                nodes = count;
-                let (low, high) = range(hz);
-                let width = (high - low) / (0.5 * (high + low)) / bands as f64;
-                let cost = costs.of(hz.len() as f64 / bands as f64, width, count);
-                if best.as_ref().is_none_or(|(least, ..)| cost < *least) {
-                    best = Some((cost, parts, count));
-                } else if best.as_ref().is_some_and(|(least, ..)| cost > 1.5 * least) {
-                    break;
-                }
-            }
-            if bands == hz.len() {
-                break;
-            }
-            bands = (2 * bands).min(hz.len());
+/// The cheapest bands that keep the demand, and the rows of a span; with `rows` given, for that many.
+pub(super) fn choose<T: GridReal>(
+    demand: &Demand,
+    hz: &[f64],
+    first: usize,
+    costs: Costs,
+    rows: Option<usize>,
+) -> (Vec<Band<T>>, usize) {
+    let mut error = demand.error;
+    let most = rows.unwrap_or(ROWS[ROWS.len() - 1]);
+    let spectrum = demand.spectrum(hz, most);
+    for _ in 0..8 {
+        let Some(way) = cheapest(demand, hz, costs, rows, error, &spectrum) else { break };
+        let bands: Vec<Band<T>> = parts(hz.len(), way.bands)
+            .into_iter()
+            .map(|part| Band::new(&hz[part.clone()], first + part.start, &way.shape))
+            .collect();
+        // the first band is the widest for its frequency
+        if demand.kept(&hz[..bands[0].channels.len()], &bands[0], way.rows) {
+            return (bands, way.rows);
         }
-        let (_, parts, count) = best.unwrap_or_else(|| (0.0, (0..hz.len()).map(|c| c..c + 1).collect(), 1));
-        parts.into_iter().map(|part| Band::new(&hz[part.clone()], first + part.start, count)).collect()
+        error *= 0.5;
     }
+    // every channel and every time by itself is exact
+    let rows = rows.unwrap_or(1);
+    let shape = if rows == 1 { vec![1] } else { vec![1; MOST_DEGREES] };
+    ((0..hz.len()).map(|c| Band::new(&hz[c..=c], first + c, &shape)).collect(), rows)
+}
 
-    fn new(hz: &[f64], first: usize, count: usize) -> Band<T> {
-        let nodes = if count >= hz.len() { hz.to_vec() } else { nodes_of(hz, count) };
-        let matrix = interpolation(&nodes, hz);
-        let weights: Vec<Vec<f64>> = matrix.outer_iter().map(|row| row.to_vec()).collect();
-        let rows = rows_of(nodes.len());
-        let mut profiles = vec![[T::zero(); 2 * LANES]; rows * hz.len()];
-        for row in 0..rows {
-            for (channel, weights) in weights.iter().enumerate() {
-                let profile = &mut profiles[row * hz.len() + channel];
-                for (node, &weight) in weights.iter().enumerate() {
-                    profile[row * nodes.len() + node] = real(weight);
-                    profile[row * nodes.len() + node + LANES] = real(weight);
+fn parts(channels: usize, bands: usize) -> Vec<Range<usize>> {
+    (0..bands).map(|b| b * channels / bands..(b + 1) * channels / bands).collect()
+}
+
+/// Mean squares of the Chebyshev coefficients of products over a whole band and the longest span: `[frequency][time]`.
+struct Spectrum {
+    squares: Vec<Vec<f64>>,
+    rows: usize,
+}
+
+impl Spectrum {
+    /// Predicted error of a shape for 1/bands of the band and some rows: coefficients shrink with the powers of both.
+    fn error(&self, shape: &[usize], bands: usize, rows: usize, channels: usize) -> f64 {
+        let narrower = (bands as f64).recip();
+        let shorter = (rows - 1) as f64 / (self.rows - 1).max(1) as f64;
+        let widest = channels.div_ceil(bands);
+        let mut sum = 0.0;
+        for (a, line) in self.squares.iter().enumerate() {
+            for (b, square) in line.iter().enumerate() {
+                // as many polynomials as channels leave nothing out
+                let held = shape.get(b).is_some_and(|&n| a < n || n >= widest)
+                    || (shape.len() >= rows && {
+                        // nor do as many powers of time as rows
+                        let n = shape[rows - 1];
+                        a < n || n >= widest
+                    });
+                if !held {
+                    sum += square * narrower.powi(2 * a as i32) * shorter.powi(2 * b as i32);
                 }
             }
         }
-        let (low, high) = range(hz);
-        Band {
-            channels: first..first + hz.len(),
-            k: nodes.iter().map(|&hz| wavelengths_per_metre(hz)).collect(),
-            middle_k: wavelengths_per_metre(0.5 * (low + high)),
-            ends_k: (wavelengths_per_metre(low), wavelengths_per_metre(high)),
-            hz: nodes,
-            weights,
-            rows,
-            profiles,
+        ALIASED * sum.sqrt()
+    }
+}
+
+fn cheapest(
+    demand: &Demand,
+    hz: &[f64],
+    costs: Costs,
+    rows: Option<usize>,
+    error: f64,
+    spectrum: &Spectrum,
+) -> Option<Way> {
+    let (low, high) = range(hz);
+    let width = (high - low) / (0.5 * (high + low));
+    let every: Vec<usize> = match rows {
+        Some(rows) => vec![rows],
+        None if demand.interval == 0.0 => vec![1],
+        None => ROWS.to_vec(),
+    };
+    let mut best: Option<Way> = None;
+    let mut bands = demand.fewest.clamp(1, hz.len());
+    loop {
+        let widest = hz.len().div_ceil(bands);
+        for &rows in &every {
+            for shape in shapes(demand.lanes, widest, if rows == 1 { 1 } else { MOST_DEGREES }) {
+                if spectrum.error(&shape, bands, rows, hz.len()) > error {
+                    continue;
+                }
+                let cost = costs.of(Extent {
+                    channels: hz.len() as f64 / bands as f64,
+                    rows: rows as f64,
+                    width: width / bands as f64,
+                    turn: EARTH * demand.interval,
+                    nodes: shape.iter().sum(),
+                });
+                if best.as_ref().is_none_or(|best| cost < best.cost) {
+                    best = Some(Way { bands, rows, shape, cost });
+                }
+            }
+        }
+        if bands == hz.len() {
+            return best;
+        }
+        bands = (2 * bands).min(hz.len());
+    }
+}
+
+/// All n_0 ≥ n_1 ≥ … of sum at most `lanes`, n_0 at most `widest`, at most `degrees` of them.
+fn shapes(lanes: usize, widest: usize, degrees: usize) -> Vec<Vec<usize>> {
+    fn grow(shape: &mut Vec<usize>, left: usize, most: usize, degrees: usize, all: &mut Vec<Vec<usize>>) {
+        if !shape.is_empty() {
+            all.push(shape.clone());
+        }
+        if shape.len() == degrees {
+            return;
+        }
+        for next in 1..=most.min(left) {
+            shape.push(next);
+            grow(shape, left - next, next, degrees, all);
+            shape.pop();
         }
     }
+    let mut all = Vec::new();
+    grow(&mut Vec::new(), lanes, widest, degrees, &mut all);
+    all
 }
 
 fn range(hz: &[f64]) -> (f64, f64) {
     hz.iter().fold((f64::INFINITY, 0.0f64), |(low, high), &f| (low.min(f), high.max(f)))
 }
 
-fn nodes_of(hz: &[f64], count: usize) -> Vec<f64> {
-    let (low, high) = range(hz);
-    chebyshev_points(low, high, count)
+/// Places in −1 to 1 through which polynomials of degree below `count` are interpolated; the first few of them serve fewer
+/// polynomials well, too (each next one lies where the product of distances to those before is largest: Leja 1957).
+fn places(count: usize) -> Vec<f64> {
+    if count == 1 {
+        return vec![0.0];
+    }
+    let mut left = chebyshev_points(-1.0, 1.0, count);
+    let mut ordered = Vec::with_capacity(count);
+    while !left.is_empty() {
+        let reach = |x: f64| -> f64 { ordered.iter().map(|&o: &f64| (x - o).abs()).product::<f64>() };
+        let start = |x: f64| if ordered.is_empty() && count > 2 { 2.0 - x.abs() } else { reach(x) };
+        let next = (0..left.len()).max_by(|&a, &b| start(left[a]).total_cmp(&start(left[b])));
+        ordered.push(left.swap_remove(next.unwrap_or(0)));
+    }
+    ordered
 }
 
-impl Demand<'_> {
-    /// Whether interpolation through `count` nodes keeps the error.
-    fn kept(&self, hz: &[f64], count: usize) -> bool {
-        let (low, high) = range(hz);
-        let nodes = nodes_of(hz, count);
-        // between nodes, where errors are largest
-        let probes: Vec<f64> = (0..PROBES)
-            .map(|i| {
-                low + (high - low) * (0.5 - 0.5 * (std::f64::consts::PI * (i as f64 + 0.5) / PROBES as f64).cos())
-            })
-            .chain([low, 0.5 * (low + high)])
-            .collect();
-        let matrix = interpolation(&nodes, &probes);
-        let all: Vec<f64> = nodes.iter().chain(&probes).copied().collect();
-        let looks: Vec<Vec<Vec<Complex64>>> = all.par_iter().map(|&hz| self.voltages(hz)).collect();
-        let mut rng = ChaCha8Rng::seed_from_u64(0xbad5);
-        let mut members = Vec::new();
-        for _ in 0..PAIRS {
-            let pair = self.pairs[rng.random_range(0..self.pairs.len())];
-            let time = rng.random_range(0..self.angles.len().max(1));
-            let feed = rng.random_range(0..self.feeds.len());
-            let w = if self.bends.is_empty() { 0.0 } else { [-self.w_m, self.w_m][rng.random_range(0..2)] };
-            members.push((pair, time, feed, w));
-        }
-        let errors: Vec<(f64, f64)> = members
-            .par_iter()
-            .map(|&((p, q), time, feed, w)| {
-                let stations = self.beams.len();
-                let at = |station: u32| (time * stations + station as usize) * self.feeds.len() + feed;
-                let (p, q) = (at(p), at(q));
-                let (mut sum, mut worst) = (0.0, 0.0f64);
-                for direction in 0..self.lm.len() {
-                    let value = |index: usize| -> Complex64 {
-                        let (gp, gq) = (looks[index][p][direction], looks[index][q][direction]);
-                        if self.power {
-                            return Complex64::new(gp.norm_sqr() * gq.norm_sqr(), 0.0);
-                        }
-                        let product = gp.conj() * gq;
-                        match self.bends.get(direction) {
-                            Some(bend) => {
-                                product * Complex64::cis(TAU * w * wavelengths_per_metre(all[index]) * bend)
-                            }
-                            None => product,
-                        }
-                    };
-                    let known: Vec<Complex64> = (0..count).map(value).collect();
-                    for probe in 0..probes.len() {
-                        let got: Complex64 = known.iter().zip(matrix.row(probe)).map(|(k, &m)| k * m).sum();
-                        let error = (got - value(count + probe)).norm();
-                        sum += error * error;
-                        // NaN must not pass
-                        worst = if error <= worst { worst } else { error };
-                    }
-                }
-                (sum / (self.lm.len() * probes.len()).max(1) as f64, worst)
-            })
-            .collect();
-        let mean = (errors.iter().map(|e| e.0).sum::<f64>() / errors.len().max(1) as f64).sqrt();
-        let worst = errors.iter().fold(0.0f64, |worst, e| if e.1 <= worst { worst } else { e.1 });
-        mean <= self.error && worst <= WORST * self.error
+/// T_0 … T_{count−1} at x.
+pub(super) fn chebyshev(x: f64, count: usize) -> Vec<f64> {
+    let mut all = vec![1.0, x];
+    for n in 2..count {
+        all.push(2.0 * x * all[n - 1] - all[n - 2]);
     }
+    all.truncate(count);
+    all
+}
 
-    /// `[(time, station, feed)][direction]`.
-    fn voltages(&self, hz: f64) -> Vec<Vec<Complex64>> {
-        let mut all = Vec::new();
-        for angles in self.angles {
-            for (station, &angle) in angles.iter().enumerate() {
-                for &feed in self.feeds {
-                    let mut out = vec![Complex64::ZERO; self.lm.len()];
-                    self.beams.voltages(station, angle, hz, feed, self.lm, &mut out);
-                    all.push(out);
+impl<T: GridReal> Band<T> {
+    fn new(hz: &[f64], first: usize, shape: &[usize]) -> Band<T> {
+        let (low, high) = range(hz);
+        let (middle, half) = (0.5 * (low + high), 0.5 * (high - low));
+        let shape: Vec<usize> = shape.iter().map(|&n| n.min(hz.len())).collect();
+        // as many nodes as channels: the channels themselves
+        let exact = shape[0] == hz.len();
+        let x_of = |hz: f64| if half == 0.0 { 0.0 } else { (hz - middle) / half };
+        let xs: Vec<f64> = if exact { hz.iter().map(|&hz| x_of(hz)).collect() } else { places(shape[0]) };
+        let times = places(shape.len());
+        let nodes: Vec<(usize, usize)> =
+            shape.iter().enumerate().flat_map(|(b, &n)| (0..n).map(move |a| (a, b))).collect();
+        let count = nodes.len();
+        // the polynomials at the nodes; its inverse makes polynomials of node values
+        let matrix = DMatrix::from_fn(count, count, |row, column| {
+            let ((a, b), (i, j)) = (nodes[column], nodes[row]);
+            chebyshev(xs[i], a + 1)[a] * chebyshev(times[j], b + 1)[b]
+        });
+        let inverse = matrix.try_inverse().unwrap_or_else(|| DMatrix::identity(count, count));
+        let degrees = shape.len();
+        let mut weights = vec![vec![0.0; count]; hz.len() * degrees];
+        for (channel, &hz) in hz.iter().enumerate() {
+            let polynomials = chebyshev(x_of(hz), shape[0]);
+            for (row, &(a, b)) in nodes.iter().enumerate() {
+                for (node, weight) in weights[channel * degrees + b].iter_mut().enumerate() {
+                    *weight += polynomials[a] * inverse[(row, node)];
                 }
             }
         }
-        all
+        let profiles = if count > LANES {
+            Vec::new()
+        } else {
+            let twice = |weights: &Vec<f64>| {
+                let mut cell = Cell::zero();
+                for (node, &weight) in weights.iter().enumerate() {
+                    (cell[node], cell[node + LANES]) = (real(weight), real(weight));
+                }
+                cell
+            };
+            weights.iter().map(twice).collect()
+        };
+        let nodes_hz: Vec<f64> = if exact { hz.to_vec() } else { xs.iter().map(|x| middle + half * x).collect() };
+        Band {
+            channels: first..first + hz.len(),
+            k: nodes_hz.iter().map(|&hz| wavelengths_per_metre(hz)).collect(),
+            hz: nodes_hz,
+            times,
+            nodes,
+            middle_k: wavelengths_per_metre(middle),
+            ends_k: (wavelengths_per_metre(low), wavelengths_per_metre(high)),
+            weights,
+            profiles,
+        }
+    }
+
+    /// Powers of time.
+    pub(super) fn degrees(&self) -> usize {
+        self.times.len()
+    }
+}
+
+impl Demand<'_> {
+    /// Products of the rows in all directions at frequency × time points: `[row, direction][frequency][time]`.
+    fn products(&self, hz: &[f64], times: &[f64], half_span: f64) -> Vec<Complex64> {
+        let looked = |mjd: f64| self.beams.angles_at(mjd);
+        let angles: Vec<Vec<Vec<f64>>> = self
+            .probes
+            .par_iter()
+            .map(|&middle| times.iter().map(|&x| looked(middle + half_span * x)).collect())
+            .collect();
+        let per_row = self.lm.len() * hz.len() * times.len();
+        let mut out = vec![Complex64::ZERO; self.rows.len() * per_row];
+        out.par_chunks_mut(per_row.max(1)).zip(self.rows).enumerate().for_each(|(index, (out, row))| {
+            let angles = &angles[index % angles.len().max(1)];
+            let feed = self.feeds[index % self.feeds.len()];
+            let mut voltages = [vec![Complex64::ZERO; self.lm.len()], vec![Complex64::ZERO; self.lm.len()]];
+            for (f, &at_hz) in hz.iter().enumerate() {
+                let k = wavelengths_per_metre(at_hz);
+                for (t, &x) in times.iter().enumerate() {
+                    for (end, station) in [row.pair.0, row.pair.1].into_iter().enumerate() {
+                        let angle = angles[t][station as usize];
+                        self.beams.voltages(station as usize, angle, at_hz, feed, self.lm, &mut voltages[end]);
+                    }
+                    let w = row.w_after(EARTH * half_span * x, self.declination);
+                    for direction in 0..self.lm.len() {
+                        let (p, q) = (voltages[0][direction], voltages[1][direction]);
+                        let value = if self.power {
+                            Complex64::new(p.norm_sqr() * q.norm_sqr(), 0.0)
+                        } else {
+                            let product = p.conj() * q;
+                            match self.bends.get(direction) {
+                                Some(bend) => product * Complex64::cis(TAU * w * k * bend),
+                                None => product,
+                            }
+                        };
+                        out[(direction * hz.len() + f) * times.len() + t] = value;
+                    }
+                }
+            }
+        });
+        out
+    }
+
+    fn half_span(&self, rows: usize) -> f64 {
+        0.5 * (rows - 1) as f64 * self.interval
+    }
+
+    fn spectrum(&self, hz: &[f64], rows: usize) -> Spectrum {
+        let (low, high) = range(hz);
+        let zeros = |n: usize| -> Vec<f64> { (0..n).map(|i| (PI * (i as f64 + 0.5) / n as f64).cos()).collect() };
+        let (xs, ts) = (zeros(LOOKS.0), if rows == 1 || self.interval == 0.0 { vec![0.0] } else { zeros(LOOKS.1) });
+        let at: Vec<f64> = xs.iter().map(|x| 0.5 * (low + high) + 0.5 * (high - low) * x).collect();
+        let products = self.products(&at, &ts, self.half_span(rows));
+        // coefficient n of a function known at the zeros: 2/N Σ f(x_i) T_n(x_i), half of it for n = 0
+        let transform = |at: &[f64]| -> Vec<Vec<f64>> {
+            (0..at.len())
+                .map(|n| {
+                    let scale = if n == 0 { 1.0 } else { 2.0 } / at.len() as f64;
+                    at.iter().map(|&x| scale * chebyshev(x, n + 1)[n]).collect()
+                })
+                .collect()
+        };
+        let (of_x, of_t) = (transform(&xs), transform(&ts));
+        let count = (products.len() / (xs.len() * ts.len())).max(1);
+        let squares = products
+            .par_chunks(xs.len() * ts.len())
+            .fold(
+                || vec![vec![0.0; ts.len()]; xs.len()],
+                |mut sums, values| {
+                    for (a, of_x) in of_x.iter().enumerate() {
+                        let line: Vec<Complex64> = (0..ts.len())
+                            .map(|t| of_x.iter().enumerate().map(|(f, &c)| values[f * ts.len() + t] * c).sum())
+                            .collect();
+                        for (b, of_t) in of_t.iter().enumerate() {
+                            let c: Complex64 = line.iter().zip(of_t).map(|(z, &c)| z * c).sum();
+                            sums[a][b] += c.norm_sqr() / count as f64;
+                        }
+                    }
+                    sums
+                },
+            )
+            .reduce(
+                || vec![vec![0.0; ts.len()]; xs.len()],
+                |mut a, b| {
+                    a.iter_mut().flatten().zip(b.iter().flatten()).for_each(|(a, b)| *a += b);
+                    a
+                },
+            );
+        Spectrum { squares, rows }
+    }
+
+    /// Whether a band's interpolation keeps the error: measured between its nodes.
+    fn kept<T: GridReal>(&self, hz: &[f64], band: &Band<T>, rows: usize) -> bool {
+        let half_span = self.half_span(rows);
+        // rows lie evenly from end to end
+        let ts: Vec<f64> = match rows {
+            1 => vec![0.0],
+            rows => (0..rows).step_by(rows.div_ceil(5)).map(|i| 2.0 * i as f64 / (rows - 1) as f64 - 1.0).collect(),
+        };
+        // some channels: the weights are theirs
+        let channels: Vec<usize> = (0..hz.len()).step_by(hz.len().div_ceil(6)).chain([hz.len() - 1]).collect();
+        let probes: Vec<f64> = channels.iter().map(|&c| hz[c]).collect();
+        let truth = self.products(&probes, &ts, half_span);
+        let known = self.products(&band.hz, &band.times, half_span);
+        let (per_truth, per_known) = (probes.len() * ts.len(), band.hz.len() * band.times.len());
+        let mut sum = 0.0;
+        for (truth, known) in truth.chunks_exact(per_truth).zip(known.chunks_exact(per_known)) {
+            for (probe, &channel) in channels.iter().enumerate() {
+                for (t, &x) in ts.iter().enumerate() {
+                    let powers = chebyshev(x, band.degrees());
+                    let mut got = Complex64::ZERO;
+                    for (node, &(a, b)) in band.nodes.iter().enumerate() {
+                        let weight: f64 = powers
+                            .iter()
+                            .zip(&band.weights[channel * band.degrees()..])
+                            .map(|(power, weights)| power * weights[node])
+                            .sum();
+                        got += known[a * band.times.len() + b] * weight;
+                    }
+                    sum += (got - truth[probe * ts.len() + t]).norm_sqr();
+                }
+            }
+        }
+        let mean = sum / truth.len().max(1) as f64;
+        mean.sqrt() <= self.error
     }
 }

@@ -1,6 +1,6 @@
 //! Which way of gridding costs least: how visibilities are parted, how far apart the layers in w lie, how wide the window.
 
-use super::bands::Costs;
+use super::bands::{Costs, Extent};
 use super::family::Family;
 use super::survey::Survey;
 use super::terms::{MOST_ESTIMATED, Terms};
@@ -23,6 +23,8 @@ mod cost {
     /// Elimination, per direction, and components, per direction cubed.
     pub const DIRECTION: f64 = 4e6;
     pub const COMPONENTS: f64 = 30.0;
+    /// How often terms are used, at the least: dirty image, point spread function, self-check, predictions.
+    pub const USES: f64 = 4.0;
     /// Estimates that ended at the most directions they can see are not to be trusted.
     pub const UNKNOWN: f64 = 20.0;
 }
@@ -33,8 +35,8 @@ const HALF_TURNS: [f64; 7] = [4.0, 2.0, 1.0, 0.5, 0.24, 0.1, 0.04];
 const GROUPS: [usize; 5] = [1, 2, 4, 8, 16];
 /// Chebyshev nodes a side that estimates are made on.
 const NODES: (usize, usize) = (14, 14);
-/// Nodes that a band of channels is reckoned to need.
-const BAND_NODES: usize = 4;
+/// Rows that are reckoned to share a span.
+const SPAN_ROWS: f64 = 4.0;
 /// How far w of a band's ends may lie outside its layer, in half layers.
 pub(super) const SLACK: f64 = 0.15;
 
@@ -83,6 +85,8 @@ pub(super) struct Question<'a> {
     pub turns: (f64, f64),
     /// Half range of the curvature over the patch.
     pub half_bend: f64,
+    /// Radians that the Earth turns between rows of a pair.
+    pub turn: f64,
 }
 
 impl Question<'_> {
@@ -122,7 +126,7 @@ fn range(hz: &[f64]) -> (f64, f64) {
 /// The cheapest way; `None` when no window is good enough. `family` is used as scratch.
 pub(super) fn cheapest(question: &Question, family: &mut Family) -> Option<Candidate> {
     let windows: Vec<(f64, Choice)> =
-        [1.5, 2.0].into_iter().filter_map(|s| Some((s, window(question.window_error, s)?))).collect();
+        [1.5, 1.75, 2.0].into_iter().filter_map(|s| Some((s, window(question.window_error, s)?))).collect();
     let mut best: Option<Candidate> = None;
     let (low_hz, high_hz) = range(question.frequencies_hz);
     let width = (high_hz - low_hz) / (0.5 * (high_hz + low_hz));
@@ -146,7 +150,13 @@ pub(super) fn cheapest(question: &Question, family: &mut Family) -> Option<Candi
                     let shape = GridShape::new(question.patch_size, oversampling, question.reach, window.support);
                     let bands = groups * layering.bands.div_ceil(groups).max(1);
                     let channels = question.frequencies_hz.len() as f64 / bands as f64;
-                    let nodes = BAND_NODES.min(channels.ceil() as usize).max(1);
+                    let extent = Extent {
+                        channels,
+                        rows: SPAN_ROWS.min(question.survey.times.len() as f64),
+                        width: width / bands as f64,
+                        turn: question.turn,
+                        nodes: LANES,
+                    };
                     let per_sample: f64 = parts
                         .iter()
                         .map(|part| {
@@ -156,7 +166,7 @@ pub(super) fn cheapest(question: &Question, family: &mut Family) -> Option<Candi
                                 blocks: part.terms.div_ceil(LANES),
                                 directions: part.directions,
                             };
-                            part.fraction * costs.of(channels, width / bands as f64, nodes)
+                            part.fraction * costs.of(extent)
                         })
                         .sum();
                     let spread = question.survey.samples as f64 * per_sample;
@@ -169,9 +179,10 @@ pub(super) fn cheapest(question: &Question, family: &mut Family) -> Option<Candi
                         * (cost::TRANSFORM * length + cost::PIXEL * pixels);
                     let build: f64 = parts.iter().map(|part| part.build(groups)).sum();
                     let known = parts.iter().all(|part| part.directions < MOST_ESTIMATED);
-                    worth_parting |= spread > transforms + build || !known;
-                    worth_more_layers |= spread + build > transforms || !known;
-                    let total = (spread + transforms + build) * if known { 1.0 } else { cost::UNKNOWN };
+                    let once = build / cost::USES;
+                    worth_parting |= spread > transforms + once || !known;
+                    worth_more_layers |= spread + once > transforms || !known;
+                    let total = (spread + transforms + once) * if known { 1.0 } else { cost::UNKNOWN };
                     if best.is_none_or(|best| total < best.total) {
                         best = Some(Candidate { by_class, groups, oversampling, window, layering, total });
                     }

@@ -46,6 +46,11 @@ impl Patch {
         self.geometry.pixel
     }
 
+    /// Declination of the image centre, radians.
+    pub(crate) fn centre_declination(&self) -> f64 {
+        self.geometry.centre.dec
+    }
+
     /// The tangent frame of the image.
     pub(crate) fn image_frame(&self) -> &TangentFrame {
         &self.image_frame

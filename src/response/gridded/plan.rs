@@ -3,10 +3,11 @@
 //! A plan is made before any gridding, from the beams, the patch, a survey of the visibilities and the tolerance asked
 //! for; the same inputs give the same plan.
 
+use super::bands::EARTH;
 use super::choice::{Layering, Question, channel_groups, cheapest};
 use super::family::{Family, MEAN};
 use super::patch::Patch;
-use super::survey::Survey;
+use super::survey::{SampleRow, Survey};
 use super::terms::{MOST_TERMS, Terms, WORST_MEMBER, node_counts};
 use super::transform::GridShape;
 use crate::beam::StationBeams;
@@ -22,12 +23,12 @@ use std::time::Instant;
 /// Shares of the tolerance. Errors of different origin add, so the shares sum to at most 1.
 mod share {
     /// Aliasing of the window (largest over the field, both axes).
-    pub const WINDOW: f64 = 0.25;
+    pub const WINDOW: f64 = 0.2;
     /// Difference between kernels and their terms, w included, relative to the products' root mean square: root mean
     /// square over the field and over all members; no member alone passes [`super::terms::WORST_MEMBER`] times it.
     pub const TERMS: f64 = 0.55;
     /// Interpolation of products in frequency, within a band of channels: root mean square as for the terms.
-    pub const BANDS: f64 = 0.1;
+    pub const BANDS: f64 = 0.15;
     /// Beam products beyond a patch's edge.
     pub const EDGE: f64 = 0.05;
     /// Curvature left out where w is ignored.
@@ -93,6 +94,7 @@ pub(crate) struct Plan {
     pub window: Choice,
     pub layers: Layers,
     /// Largest distance in w from a layer that terms stand for, wavelengths.
+    #[cfg_attr(not(test), expect(dead_code, reason = "what the tests of bounds go by"))]
     pub half_w: f64,
     /// Bands of channels in every partition, at least.
     pub fewest_bands: usize,
@@ -109,8 +111,11 @@ pub(crate) struct Plan {
     /// Largest |u′| and |v′|, and the range of |w|, that grids and layers were made for, metres.
     pub reach_m: (f64, f64),
     pub w_m: (f64, f64),
-    /// A few times of the observation, to test what depends on time.
-    pub probe_times: Vec<f64>,
+    /// Times of the observation (thinned, and all), some of the rows, and the time between those of a pair, days.
+    pub times: Vec<f64>,
+    pub all_times: Vec<f64>,
+    pub sample: Vec<SampleRow>,
+    pub interval: f64,
     pub double: bool,
     pub report: KernelReport,
 }
@@ -210,6 +215,7 @@ impl Plan {
             mean_reach: survey.mean_uv_m * k_high * patch.pixel(),
             turns,
             half_bend,
+            turn: EARTH * survey.interval,
         };
         let chosen = cheapest(&question, &mut family);
         let refuse =
@@ -303,10 +309,10 @@ impl Plan {
             channel_groups,
             reach_m: (survey.u_m, survey.v_m),
             w_m: survey.w_m,
-            probe_times: [0, survey.times.len() / 2, survey.times.len().saturating_sub(1)]
-                .iter()
-                .filter_map(|&at| survey.times.get(at).copied())
-                .collect(),
+            times: survey.times.clone(),
+            all_times: survey.all_times.clone(),
+            sample: survey.sample.clone(),
+            interval: survey.interval,
             double,
             report,
         })

@@ -37,18 +37,18 @@ impl<T: GridReal> Register<T> for Plain<T> {
 
     #[inline(always)]
     fn times(self, factor: T) -> Self {
-        Plain(self.0.map(|v| v * factor))
+        Plain(Cell(self.0.0.map(|v| v * factor)))
     }
 
     #[inline(always)]
     fn times_plus(mut self, factor: T, add: Self) -> Self {
-        self.0.iter_mut().zip(&add.0).for_each(|(v, &a)| *v = *v * factor + a);
+        self.0.iter_mut().zip(add.0.iter()).for_each(|(v, &a)| *v = *v * factor + a);
         self
     }
 
     #[inline(always)]
     fn product_plus(mut self, other: Self, add: Self) -> Self {
-        self.0.iter_mut().zip(&other.0).zip(&add.0).for_each(|((v, &o), &a)| *v = *v * o + a);
+        self.0.iter_mut().zip(other.0.iter()).zip(add.0.iter()).for_each(|((v, &o), &a)| *v = *v * o + a);
         self
     }
 }

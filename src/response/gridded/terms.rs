@@ -38,9 +38,9 @@ const ROUNDS: usize = 7;
 /// How far one member may pass the bound that all of them keep in the root mean square.
 pub(crate) const WORST_MEMBER: f64 = 3.0;
 /// How much finer than the bound the elimination goes before components are dropped.
-const FINER: f64 = 0.3;
+const FINER: f64 = 0.4;
 /// Components per direction, roughly: for planning.
-const COMPONENTS: f64 = 0.7;
+const COMPONENTS: f64 = 0.73;
 /// Directions that an estimate counts at most.
 pub(crate) const MOST_ESTIMATED: usize = 150;
 /// More terms than this never pay.

@@ -241,7 +241,7 @@ impl<T: GridReal> Transform<T> {
             let cells = cells.chunks_exact_mut(of.blocks);
             for (column, (cells, &at)) in cells.zip(&self.at.columns).enumerate() {
                 let cell = &mut cells[of.block];
-                *cell = [T::zero(); 2 * LANES];
+                *cell = Cell::zero();
                 for image in 0..images.len() {
                     let here = line[image * gx + at];
                     if paired {

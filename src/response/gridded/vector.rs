@@ -11,6 +11,7 @@
 
 #![allow(unsafe_code)]
 
+use super::bands::MOST_DEGREES;
 use super::register::{Plain, Register};
 
 use crate::response::window::{MAX_TAPS, PolynomialWindow, Real};
@@ -18,8 +19,32 @@ use crate::response::window::{MAX_TAPS, PolynomialWindow, Real};
 /// Terms a cell holds.
 pub(crate) const LANES: usize = 8;
 
-/// Eight complex numbers: real parts, then imaginary parts.
-pub(crate) type Cell<T> = [T; 2 * LANES];
+/// Eight complex numbers: real parts, then imaginary parts. Aligned, so that a register is loaded from one cache line.
+#[derive(Debug, Clone, Copy, PartialEq)]
+#[repr(align(64))]
+pub(crate) struct Cell<T>(pub [T; 2 * LANES]);
+
+impl<T: GridReal> Cell<T> {
+    pub(crate) fn zero() -> Self {
+        Cell([T::zero(); 2 * LANES])
+    }
+}
+
+impl<T> std::ops::Deref for Cell<T> {
+    type Target = [T; 2 * LANES];
+
+    #[inline(always)]
+    fn deref(&self) -> &Self::Target {
+        &self.0
+    }
+}
+
+impl<T> std::ops::DerefMut for Cell<T> {
+    #[inline(always)]
+    fn deref_mut(&mut self) -> &mut Self::Target {
+        &mut self.0
+    }
+}
 
 /// The number types grids are made of.
 pub(crate) trait GridReal: Real + rustfft::FftNum {
@@ -94,8 +119,10 @@ impl GridReal for f64 {
 pub(crate) struct Sample<T> {
     /// First cell (row · width + column) of its footprint on the scrap.
     pub cell: u32,
-    /// Which of the profiles it has.
-    pub profile: u32,
+    /// Its channel, counted in the band, and its row, counted in the run.
+    pub channel: u32,
+    /// See `channel`.
+    pub row: u32,
     /// Fractions, as [`crate::response::window::locate`].
     pub fx: T,
     /// See `fx`.
@@ -109,8 +136,12 @@ pub(crate) struct Sample<T> {
 /// A small part of the grid with at most eight numbers a cell, one a node: visibilities that are close in u, v meet here,
 /// and only what they sum to meets the many terms of the grid.
 pub(crate) struct Scrap<'a, T> {
-    /// How much of a visibility each node gets: the interpolation weights, twice.
+    /// How much of a visibility each node gets, for each power of time: `[channel][power]`, every weight twice.
     pub profiles: &'a [Cell<T>],
+    /// Powers of time.
+    pub degrees: usize,
+    /// T_b of each row's time.
+    pub times: &'a [[T; MOST_DEGREES]],
     /// Columns.
     pub width: usize,
     /// The window.
@@ -153,14 +184,37 @@ fn fma<T: Real, const FUSED: bool>(a: T, b: T, c: T) -> T {
     if FUSED { a.mul_add(b, c) } else { a * b + c }
 }
 
+/// Half a cell: what the compiler makes one vector of.
+type Half<T> = [T; LANES];
+
 #[inline(always)]
-fn polynomial<T: Real, const FUSED: bool>(coefficients: &[f64], x: &[T; LANES]) -> [T; LANES] {
+fn halves<T: Copy>(cell: &Cell<T>) -> (Half<T>, Half<T>) {
+    (std::array::from_fn(|j| cell.0[j]), std::array::from_fn(|j| cell.0[j + LANES]))
+}
+
+#[inline(always)]
+fn each<T: Copy + Default>(a: &Half<T>, b: &Half<T>, f: impl Fn(T, T) -> T) -> Half<T> {
+    let mut out = [T::default(); LANES];
+    for j in 0..LANES {
+        out[j] = f(a[j], b[j]);
+    }
+    out
+}
+
+#[inline(always)]
+fn plus_product<T: GridReal, const FUSED: bool>(a: &Half<T>, b: &Half<T>, c: &Half<T>) -> Half<T> {
+    let mut out = [T::default(); LANES];
+    for j in 0..LANES {
+        out[j] = fma::<T, FUSED>(a[j], b[j], c[j]);
+    }
+    out
+}
+
+#[inline(always)]
+fn polynomial<T: GridReal, const FUSED: bool>(coefficients: &[f64], x: &Half<T>) -> Half<T> {
     let mut sum = [T::default(); LANES];
     for &c in coefficients.iter().rev() {
-        let c = <T as Real>::from_f64(c);
-        for lane in 0..LANES {
-            sum[lane] = fma::<T, FUSED>(sum[lane], x[lane], c);
-        }
+        sum = plus_product::<T, FUSED>(&sum, x, &[<T as Real>::from_f64(c); LANES]);
     }
     sum
 }
@@ -171,32 +225,42 @@ fn kernel_values<T: GridReal, const FUSED: bool>(
     gp: &Cell<T>,
     gq: &Cell<T>,
     dw: Option<T>,
-    bend: &[T; LANES],
-) -> Cell<T> {
-    let mut out = [T::default(); 2 * LANES];
-    for j in 0..LANES {
-        let (pr, pi, qr, qi) = (gp[j], gp[j + LANES], gq[j], gq[j + LANES]);
-        out[j] = fma::<T, FUSED>(pr, qr, pi * qi);
-        out[j + LANES] = pr * qi - pi * qr;
-    }
-    if let Some(dw) = dw {
-        let mut t = [T::default(); LANES];
-        let mut t2 = [T::default(); LANES];
-        for j in 0..LANES {
-            let turns = dw * bend[j];
-            t[j] = turns - ((turns + T::WHOLE) - T::WHOLE);
-            t2[j] = t[j] * t[j];
+    bend: &Half<T>,
+) -> (Half<T>, Half<T>) {
+    let ((pr, pi), (qr, qi)) = (halves(gp), halves(gq));
+    let re = plus_product::<T, FUSED>(&pr, &qr, &each(&pi, &qi, |a, b| a * b));
+    let im = each(&each(&pr, &qi, |a, b| a * b), &each(&pi, &qr, |a, b| a * b), |a, b| a - b);
+    let Some(dw) = dw else { return (re, im) };
+    let turns = each(bend, &[dw; LANES], |bend, dw| bend * dw);
+    let t = each(&turns, &turns, |turns, _| turns - ((turns + T::WHOLE) - T::WHOLE));
+    let t2 = each(&t, &t, |a, b| a * b);
+    let cos = polynomial::<T, FUSED>(T::COS, &t2);
+    let sin = each(&polynomial::<T, FUSED>(T::SIN, &t2), &t, |a, b| a * b);
+    let turned_re = each(&each(&re, &cos, |a, b| a * b), &each(&im, &sin, |a, b| a * b), |a, b| a - b);
+    (turned_re, plus_product::<T, FUSED>(&re, &sin, &each(&im, &cos, |a, b| a * b)))
+}
+
+/// Blocks of terms that are summed at once, in registers, at most.
+const AT_ONCE: usize = 6;
+
+/// Runs of blocks summed at once, as even as they go: one block alone waits for itself.
+pub(crate) fn block_runs(blocks: usize) -> impl Iterator<Item = std::ops::Range<usize>> {
+    let runs = blocks.div_ceil(AT_ONCE).max(1);
+    (0..runs).map(move |run| run * blocks / runs..(run + 1) * blocks / runs)
+}
+
+/// Calls a body compiled for the number of blocks in a run.
+macro_rules! by_blocks {
+    ($body:ident, $register:ty, $run:expr, ($($arg:expr),*)) => {
+        match $run.len() {
+            1 => $body::<T, $register, 1>($($arg),*),
+            2 => $body::<T, $register, 2>($($arg),*),
+            3 => $body::<T, $register, 3>($($arg),*),
+            4 => $body::<T, $register, 4>($($arg),*),
+            5 => $body::<T, $register, 5>($($arg),*),
+            _ => $body::<T, $register, 6>($($arg),*),
         }
-        let cos = polynomial::<T, FUSED>(T::COS, &t2);
-        let sin = polynomial::<T, FUSED>(T::SIN, &t2);
-        for j in 0..LANES {
-            let (c, s) = (cos[j], sin[j] * t[j]);
-            let (re, im) = (out[j], out[j + LANES]);
-            out[j] = re * c - im * s;
-            out[j + LANES] = fma::<T, FUSED>(re, s, im * c);
-        }
-    }
-    out
+    };
 }
 
 /// Directions whose values are computed together before they are mixed into terms.
@@ -209,7 +273,7 @@ fn coefficients_body<T: GridReal, R: Register<T>, const FUSED: bool>(
     mixing: &Mixing<T>,
     out: &mut [Cell<T>],
 ) {
-    let zero = [T::default(); 2 * LANES];
+    let zero = Cell::<T>::zero();
     let mut values = [zero; DIRECTIONS];
     for (look, out) in looks.iter().zip(out.chunks_exact_mut(mixing.blocks)) {
         out.fill(zero);
@@ -218,22 +282,14 @@ fn coefficients_body<T: GridReal, R: Register<T>, const FUSED: bool>(
         let mix = mixing.mix.chunks(DIRECTIONS * mixing.blocks);
         for (((p, q), bends), mix) in chunks.zip(bends).zip(mix) {
             for (block, ((gp, gq), bend)) in p.iter().zip(q).zip(bends).enumerate() {
-                let eight = kernel_values::<T, FUSED>(gp, gq, look.dw, bend);
+                let (re, im) = kernel_values::<T, FUSED>(gp, gq, look.dw, bend);
                 for (lane, value) in values[block * LANES..(block + 1) * LANES].iter_mut().enumerate() {
-                    value[..LANES].fill(eight[lane]);
-                    value[LANES..].fill(eight[lane + LANES]);
+                    value[..LANES].fill(re[lane]);
+                    value[LANES..].fill(im[lane]);
                 }
             }
-            let mut first = 0;
-            while first + 4 <= mixing.blocks {
-                mix_blocks::<T, R, 4>(&values, mix, mixing.blocks, first, out);
-                first += 4;
-            }
-            match mixing.blocks - first {
-                3 => mix_blocks::<T, R, 3>(&values, mix, mixing.blocks, first, out),
-                2 => mix_blocks::<T, R, 2>(&values, mix, mixing.blocks, first, out),
-                1 => mix_blocks::<T, R, 1>(&values, mix, mixing.blocks, first, out),
-                _ => {}
+            for run in block_runs(mixing.blocks) {
+                by_blocks!(mix_blocks, R, run, (&values, mix, mixing.blocks, run.start, out));
             }
         }
     }
@@ -269,6 +325,19 @@ fn window_taps<T: GridReal, const FUSED: bool>(window: &PolynomialWindow<T>, f: 
     }
 }
 
+/// The interpolation weights of a sample.
+#[inline(always)]
+fn profile<T: GridReal, R: Register<T>>(sample: &Sample<T>, with: &Scrap<T>) -> R {
+    let powers = &with.times[sample.row as usize];
+    let start = sample.channel as usize * with.degrees;
+    let cells = &with.profiles[start..start + with.degrees];
+    let mut sum = R::load(&cells[0]);
+    for (cell, &power) in cells.iter().zip(powers).skip(1) {
+        sum = R::load(cell).times_plus(power, sum);
+    }
+    sum
+}
+
 /// Samples whose taps are computed together, before any of them meets the scrap: the two loops then each run at the
 /// processor's pace.
 const TOGETHER: usize = 32;
@@ -281,16 +350,15 @@ fn spread_body<T: GridReal, R: Register<T>, const W: usize, const FUSED: bool>(
 ) {
     // a support of 0 stands for any
     let support = if W == 0 { with.window.support() } else { W };
-    let mut values = [[T::default(); 2 * LANES]; TOGETHER];
+    let mut values = [Cell::<T>::zero(); TOGETHER];
     let mut across = [[T::default(); MAX_TAPS]; TOGETHER];
     let mut down = [[T::default(); MAX_TAPS]; TOGETHER];
     for samples in samples.chunks(TOGETHER) {
         for (i, sample) in samples.iter().enumerate() {
-            let profile = &with.profiles[sample.profile as usize];
-            for j in 0..LANES {
-                values[i][j] = profile[j] * sample.re;
-                values[i][j + LANES] = profile[j] * sample.im;
-            }
+            let mut both = Cell([sample.re; 2 * LANES]);
+            both[LANES..].fill(sample.im);
+            let zero = R::load(&Cell::zero());
+            profile::<T, R>(sample, with).product_plus(R::load(&both), zero).store(&mut values[i]);
             window_taps::<T, FUSED>(with.window, sample.fx, &mut across[i]);
             window_taps::<T, FUSED>(with.window, sample.fy, &mut down[i]);
         }
@@ -318,7 +386,7 @@ fn gather_body<T: GridReal, R: Register<T>, const W: usize, const FUSED: bool>(
     out: &mut [[f64; 2]],
 ) {
     let support = if W == 0 { with.window.support() } else { W };
-    let zero = [T::default(); 2 * LANES];
+    let zero = Cell::<T>::zero();
     let mut values = [zero; TOGETHER];
     let mut across = [[T::default(); MAX_TAPS]; TOGETHER];
     let mut down = [[T::default(); MAX_TAPS]; TOGETHER];
@@ -339,9 +407,7 @@ fn gather_body<T: GridReal, R: Register<T>, const W: usize, const FUSED: bool>(
                 sum = line.times_plus(tap, sum);
                 start += with.width;
             }
-            R::load(&with.profiles[sample.profile as usize])
-                .product_plus(sum, R::load(&zero))
-                .store(&mut values[i]);
+            profile::<T, R>(sample, with).product_plus(sum, R::load(&zero)).store(&mut values[i]);
         }
         for (value, out) in values.iter().zip(out) {
             let (mut re, mut im) = (T::default(), T::default());
@@ -367,20 +433,8 @@ fn expand_body<T: GridReal, R: Register<T>>(
         let from = &scrap[piece.from..piece.from + piece.length];
         let to = &mut grid[piece.to * blocks..(piece.to + piece.length) * blocks];
         for (cell, out) in from.iter().zip(to.chunks_exact_mut(blocks)) {
-            // cells of the scrap that no visibility touched
-            if cell.iter().all(|&value| value == T::zero()) {
-                continue;
-            }
-            let mut first = 0;
-            while first + 4 <= blocks {
-                expand_blocks::<T, R, 4>(cell, coefficients, first, out);
-                first += 4;
-            }
-            match blocks - first {
-                3 => expand_blocks::<T, R, 3>(cell, coefficients, first, out),
-                2 => expand_blocks::<T, R, 2>(cell, coefficients, first, out),
-                1 => expand_blocks::<T, R, 1>(cell, coefficients, first, out),
-                _ => {}
+            for run in block_runs(blocks) {
+                by_blocks!(expand_blocks, R, run, (cell, coefficients, run.start, out));
             }
         }
     }
@@ -393,25 +447,51 @@ fn expand_blocks<T: GridReal, R: Register<T>, const N: usize>(
     first: usize,
     out: &mut [Cell<T>],
 ) {
-    let out = &mut out[first..first + N];
+    let Some(out) = out[first..].first_chunk_mut::<N>() else { return };
+    // `first` blocks of all nodes lie before these
+    let nodes = coefficients.cells[first * coefficients.nodes..].as_chunks::<N>().0;
     let mut sums: [R; N] = std::array::from_fn(|n| R::load(&out[n]));
-    for (j, node) in coefficients.cells.chunks_exact(coefficients.blocks).enumerate() {
-        let (re, im) = (cell[j], cell[j + LANES]);
-        for (sum, pair) in sums.iter_mut().zip(&node[first..first + N]) {
-            *sum = R::load(&pair[1]).times_plus(im, R::load(&pair[0]).times_plus(re, *sum));
+    let mut others: [R; N] = [R::load(&Cell::zero()); N];
+    for ((node, &re), &im) in nodes[..coefficients.nodes].iter().zip(&cell.0[..LANES]).zip(&cell.0[LANES..]) {
+        for n in 0..N {
+            sums[n] = R::load(&node[n][0]).times_plus(re, sums[n]);
+            others[n] = R::load(&node[n][1]).times_plus(im, others[n]);
         }
     }
-    for (sum, out) in sums.iter().zip(out) {
-        sum.store(out);
+    for n in 0..N {
+        sums[n].times_plus(<T as Real>::from_f64(1.0), others[n]).store(&mut out[n]);
     }
 }
 
-/// Coefficients c of a run ready for [`expand`]: `[node][block]`, (c, i c).
+/// Coefficients c of a run ready for [`expand`]: (c, i c), `[node][block]` for each of [`block_runs`].
 pub(crate) struct Expansion<T> {
     /// See the type.
     pub cells: Vec<[Cell<T>; 2]>,
     /// Blocks of terms.
     pub blocks: usize,
+    /// Nodes.
+    pub nodes: usize,
+}
+
+impl<T: GridReal> Expansion<T> {
+    /// For so many blocks, still empty.
+    pub(crate) fn new(blocks: usize) -> Self {
+        Expansion { cells: Vec::new(), blocks, nodes: 0 }
+    }
+
+    /// Takes coefficients `[node][block]`.
+    pub(crate) fn take(&mut self, coefficients: &[Cell<T>]) {
+        self.nodes = coefficients.len() / self.blocks;
+        self.cells.clear();
+        for run in block_runs(self.blocks) {
+            for node in coefficients.chunks_exact(self.blocks) {
+                self.cells.extend(node[run.clone()].iter().map(|c| {
+                    let turned = std::array::from_fn(|at| if at < LANES { -c[at + LANES] } else { c[at - LANES] });
+                    [*c, Cell(turned)]
+                }));
+            }
+        }
+    }
 }
 
 /// Coefficients c of a run ready for [`collect`]: `[term]`, (conj c, i conj c), a lane a node.
@@ -429,7 +509,7 @@ fn collect_body<T: GridReal, R: Register<T>>(
     scrap: &mut [Cell<T>],
 ) {
     let blocks = coefficients.cells.len() / LANES;
-    let zero = R::load(&[T::default(); 2 * LANES]);
+    let zero = R::load(&Cell::zero());
     for piece in pieces {
         let from = &grid[piece.to * blocks..(piece.to + piece.length) * blocks];
         let to = &mut scrap[piece.from..piece.from + piece.length];
@@ -469,17 +549,34 @@ fn accumulate_body<T: GridReal, R: Register<T>>(
 ) {
     // short runs in T, their sums in double precision
     for run in shares.chunks(64) {
-        let mut sum = R::load(&[T::default(); 2 * LANES]);
+        let mut sum = R::load(&Cell::zero());
         for share in run {
             let (p, q) = (&table[(share.p + offset) as usize], &table[(share.q + offset) as usize]);
             sum = R::load(p).times(share.weight).product_plus(R::load(q), sum);
         }
-        let mut total = [T::default(); 2 * LANES];
+        let mut total = Cell::zero();
         sum.store(&mut total);
-        for (out, total) in out.iter_mut().zip(&total) {
+        for (out, total) in out.iter_mut().zip(total.iter()) {
             *out += double(*total);
         }
     }
+}
+
+/// Asks for the cells of a grid that a scrap will meet, so that they are on their way while the scrap is filled.
+#[inline]
+pub(crate) fn fetch<T>(grid: &[Cell<T>], pieces: &[Piece], blocks: usize) {
+    #[cfg(target_arch = "x86_64")]
+    for piece in pieces {
+        let cells = &grid[piece.to * blocks..(piece.to + piece.length) * blocks];
+        for cell in cells {
+            // SAFETY: a hint that reads nothing; the address is that of a cell at hand.
+            unsafe {
+                std::arch::x86_64::_mm_prefetch::<{ std::arch::x86_64::_MM_HINT_T1 }>(cell.0.as_ptr().cast())
+            };
+        }
+    }
+    #[cfg(not(target_arch = "x86_64"))]
+    let _ = (grid, pieces, blocks);
 }
 
 /// Which compiled body runs.

@@ -13,9 +13,10 @@ use prepare::Prepared;
 use runs::{Scratch as RunScratch, View};
 use tables::{Table, uniform_step};
 
-use super::bands::{Band, Costs, Demand};
+use super::bands::{self, Band, Costs, Demand, Lattice, turn};
 use super::patch::Patch;
 use super::plan::{Partition, Plan, kernel_feeds};
+use super::survey::SampleRow;
 use super::terms::Terms;
 use super::transform::{Scratch, Transform};
 use super::vector::{Cell, GridReal, Instructions, LANES, Mixing, real};
@@ -28,6 +29,10 @@ use crate::response::window::{PolynomialWindow, Window};
 use ndarray::LinalgScalar;
 use rayon::prelude::*;
 
+/// Times at which the turning of parallactic angles is looked at, at most.
+const PROBED: usize = 48;
+/// Rows of the sample that interpolation is measured on, at most.
+const SAMPLED: usize = 40;
 /// Samples that one thread predicts at once.
 const BATCH: usize = 1 << 17;
 /// Pixels added at once: a chunk of the eight images of a block stays in the second cache.
@@ -58,6 +63,11 @@ pub(super) struct Engine<T: GridReal> {
     /// First partition of each pair of stations (their class), [`u32::MAX`] for pairs without data.
     class: Vec<u32>,
     bands: Vec<Bands<T>>,
+    /// Stretches of time that share nodes, and the places of these in each.
+    lattice: Lattice,
+    places: Vec<f64>,
+    /// How far w may be from the polynomial that follows it, metres.
+    w_error_m: f64,
 }
 
 /// How kernels of one partition follow from station voltages.
@@ -110,6 +120,7 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
             reachable: super::SMALLEST_TOLERANCE,
             reason: e.to_string(),
         };
+        let centre_declination = plan.patch.centre_declination();
         let window = plan.window.window().map_err(refuse)?;
         let rounding = if plan.double { 1e-13 } else { 3e-7 };
         let polynomial = PolynomialWindow::new(&window, (0.02 * tolerance).max(rounding)).map_err(refuse)?;
@@ -150,15 +161,43 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
             class[p as usize * stations + q as usize] = first as u32;
             class[q as usize * stations + p as usize] = first as u32;
         }
-        let angles: Vec<Vec<f64>> = plan.probe_times.iter().map(|&mjd| beams.angles_at(mjd)).collect();
-        let bands = plan
-            .partitions
-            .iter()
-            .map(|partition| Bands::choose(&plan, partition, beams, &feeds, &angles, &observation.frequencies_hz))
-            .collect();
+        let choose = |rows: Option<usize>| -> Vec<(Bands<T>, usize)> {
+            let of = |partition| {
+                Bands::choose(
+                    &plan,
+                    partition,
+                    beams,
+                    &feeds,
+                    (&observation.frequencies_hz, centre_declination),
+                    rows,
+                )
+            };
+            plan.partitions.iter().map(of).collect()
+        };
+        // spans are the same for all partitions: those of the one that wants the shortest
+        let mut chosen = choose(None);
+        let rows = chosen.iter().map(|(_, rows)| *rows).min().unwrap_or(1);
+        if chosen.iter().any(|&(_, wanted)| wanted != rows) {
+            chosen = choose(Some(rows));
+        }
+        let bands: Vec<Bands<T>> = chosen.into_iter().map(|(bands, _)| bands).collect();
+        let lattice = lattice(&plan, beams, rows);
+        let mut places: Vec<f64> = Vec::new();
+        for band in bands.iter().flat_map(|bands| bands.kernel.iter().chain(&bands.power)) {
+            places.extend(&band.times);
+        }
+        places.sort_by(f64::total_cmp);
+        places.dedup();
+        let furthest_bend = plan.partitions.iter().flat_map(|p| &p.kernel.points).map(|p| p.bend.abs());
+        let furthest_bend = furthest_bend.fold(f64::MIN_POSITIVE, f64::max);
+        let k_high = observation.frequencies_hz.iter().map(|&hz| wavelengths_per_metre(hz)).fold(0.0, f64::max);
+        let w_error_m = plan.error / (std::f64::consts::TAU * k_high * furthest_bend);
         Ok(Engine {
             class,
             bands,
+            lattice,
+            places,
+            w_error_m,
             recentre: Recentre::new(&observation.phase_centre.frame(), plan.patch.image_frame()),
             wavelengths_per_metre: observation.frequencies_hz.iter().map(|&hz| wavelengths_per_metre(hz)).collect(),
             frequencies_hz: observation.frequencies_hz.clone(),
@@ -222,7 +261,7 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
             let copies = threads.div_ceil(chunk.len()).max(1);
             let blank = |task: &Task| -> Vec<Cell<T>> {
                 let blocks = self.bands[task.partition].blocks;
-                vec![[T::zero(); 2 * LANES]; self.plan.shape.cells() * blocks]
+                vec![Cell::zero(); self.plan.shape.cells() * blocks]
             };
             let mut work: Vec<Work<T>> = chunk
                 .iter()
@@ -230,9 +269,10 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
                 .map(|(task, copy)| Work { task, copy, grid: blank(&task), scratch: RunScratch::new() })
                 .collect();
             source.rewind()?;
-            while let Some(block) = source.next_block()? {
-                let prepared = self.prepare(&block);
-                self.check_reach(&block, &prepared)?;
+            let mut kept = None;
+            while let Some(block) = source.lend_block(&mut kept)? {
+                let prepared = self.prepare(block);
+                self.check_reach(block, &prepared)?;
                 let mut tables: Vec<Option<Table<T>>> = self.plan.partitions.iter().map(|_| None).collect();
                 for task in chunk {
                     tables[task.partition].get_or_insert_with(|| self.kernel_table(&prepared, task.partition));
@@ -241,12 +281,12 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
                 work.par_iter_mut().for_each(|Work { task, copy, grid, scratch }| {
                     let part = *copy * rows / copies..(*copy + 1) * rows / copies;
                     if let Some(table) = &tables[task.partition] {
-                        let view = View { task: *task, block: &block, prepared: &prepared, table };
+                        let view = View { task: *task, block, prepared: &prepared, table };
                         self.spread_rows(&view, part, scratch, grid);
                     }
                 });
                 if first_pass {
-                    self.add_block_powers(&block, &prepared, &mut powers);
+                    self.add_block_powers(block, &prepared, &mut powers);
                 }
             }
             let mut ready: Vec<(Task, Vec<Cell<T>>)> = Vec::with_capacity(chunk.len());
@@ -254,7 +294,7 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
                 match ready.last_mut() {
                     Some((_, whole)) if copy > 0 => {
                         whole.par_iter_mut().zip(&grid).with_min_len(4096).for_each(|(cell, add)| {
-                            cell.iter_mut().zip(add).for_each(|(c, &a)| *c = *c + a);
+                            cell.iter_mut().zip(add.iter()).for_each(|(c, &a)| *c = *c + a);
                         });
                     }
                     _ => ready.push((task, grid)),
@@ -273,15 +313,42 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
     }
 }
 
+/// Spans of so many rows of a pair.
+fn lattice(plan: &Plan, beams: &StationBeams, rows: usize) -> Lattice {
+    if rows == 1 {
+        return Lattice::default();
+    }
+    let length = (rows - 1) as f64 * plan.interval;
+    let most_turn = 1.05 * turns(plan, beams, length).last().map_or(0.0, |turn| turn.0) + 1e-9;
+    // an interval of jitter must not part what belongs together
+    Lattice::new(&plan.all_times, 1.001 * length, most_turn, beams)
+}
+
+/// By how much parallactic angles turn within `step` about some of the observation's times, and those times; ascending,
+/// without the fastest tenth.
+fn turns(plan: &Plan, beams: &StationBeams, step: f64) -> Vec<(f64, f64)> {
+    let times = &plan.times;
+    let some = times.iter().copied().step_by(times.len().div_ceil(PROBED).max(1));
+    let mut turns: Vec<(f64, f64)> = some
+        .collect::<Vec<f64>>()
+        .into_par_iter()
+        .map(|mjd| (turn(beams, mjd - 0.5 * step, mjd + 0.5 * step), mjd))
+        .collect();
+    turns.sort_by(|a, b| a.0.total_cmp(&b.0));
+    turns.truncate((9 * turns.len()).div_ceil(10));
+    turns
+}
+
 impl<T: GridReal> Bands<T> {
+    /// The bands of one partition, and the rows of a span that they are good for; with `rows` given, for that many.
     fn choose(
         plan: &Plan,
         partition: &Partition,
         beams: &StationBeams,
         feeds: &[usize],
-        angles: &[Vec<f64>],
-        hz: &[f64],
-    ) -> Self {
+        (hz, declination): (&[f64], f64),
+        rows: Option<usize>,
+    ) -> (Self, usize) {
         let Partition { channels, pairs, kernel, power } = partition;
         let first = channels.start;
         let hz = &hz[channels.clone()];
@@ -296,23 +363,46 @@ impl<T: GridReal> Bands<T> {
         let bends: Vec<f64> =
             if plan.layers.bends { kernel.points.iter().map(|p| p.bend).collect() } else { Vec::new() };
         let (kernel_lm, power_lm) = (lm(kernel), lm(power));
+        // u, v, w of some rows, on pairs of this partition
+        let every = plan.sample.len().div_ceil(SAMPLED).max(1);
+        let sample: Vec<SampleRow> = plan
+            .sample
+            .iter()
+            .step_by(every)
+            .enumerate()
+            .map(|(index, row)| {
+                let mine = pairs.binary_search(&row.pair).is_ok();
+                let pair = if mine { row.pair } else { pairs[index * 7919 % pairs.len()] };
+                SampleRow { pair, ..*row }
+            })
+            .collect();
+        // where angles turn fast, and where they turn as they mostly do
+        let turning = turns(plan, beams, 8.0 * plan.interval);
+        let middle = turning.len() / 2;
+        let probes: Vec<f64> = [turning.last(), turning.get(middle), turning.first()]
+            .into_iter()
+            .flatten()
+            .map(|turn| turn.1)
+            .collect();
         let demand = Demand {
             beams,
-            pairs,
+            rows: &sample,
             feeds,
             lm: &kernel_lm,
             bends: &bends,
-            w_m: plan.w_m.1,
-            angles,
+            declination,
+            probes: &probes,
+            interval: plan.interval,
             error: plan.error,
             power: false,
             fewest: plan.fewest_bands,
+            lanes: LANES,
         };
-        let kernel_bands = Band::choose(&demand, hz, first, costs);
+        let (kernel_bands, rows) = bands::choose(&demand, hz, first, costs, rows);
         let power_demand =
             Demand { lm: &power_lm, bends: &[], error: plan.power_error, power: true, fewest: 1, ..demand };
-        let power_bands = Band::choose(&power_demand, hz, first, costs);
-        let mut mix = vec![[T::zero(); 2 * LANES]; kernel.points.len() * blocks];
+        let (power_bands, _) = bands::choose(&power_demand, hz, first, costs, Some(rows));
+        let mut mix = vec![Cell::zero(); kernel.points.len() * blocks];
         for ((term, point), &value) in kernel.mix.indexed_iter() {
             let cell = &mut mix[point * blocks + term / LANES];
             (cell[term % LANES], cell[term % LANES + LANES]) = (real(value), real(value));
@@ -323,13 +413,14 @@ impl<T: GridReal> Bands<T> {
             bend
         });
         let k: Vec<f64> = hz.iter().map(|&hz| wavelengths_per_metre(hz)).collect();
-        Bands {
+        let bands = Bands {
             kernel: kernel_bands,
             power: power_bands,
             step: uniform_step(&k),
             bends: bends.collect(),
             mix,
             blocks,
-        }
+        };
+        (bands, rows)
     }
 }

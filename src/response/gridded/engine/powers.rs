@@ -1,10 +1,11 @@
 //! The normaliser: sums of weights times |A|² of every visibility, in the few directions that stand for all.
 
-use super::prepare::Prepared;
+use super::prepare::{Prepared, Row};
 use super::tables::Table;
 use super::{Engine, POWER_LANES};
 use crate::observation::{Block, BlockSource};
 use crate::response::ResponseError;
+use crate::response::gridded::bands::chebyshev;
 use crate::response::gridded::patch::Patch;
 use crate::response::gridded::plan::Partition;
 use crate::response::gridded::smooth::interpolation;
@@ -84,10 +85,11 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
     ) -> Result<(), ResponseError> {
         let mut powers = self.no_powers();
         source.rewind()?;
-        while let Some(block) = source.next_block()? {
-            let prepared = self.prepare(&block);
-            self.check_reach(&block, &prepared)?;
-            self.add_block_powers(&block, &prepared, &mut powers);
+        let mut kept = None;
+        while let Some(block) = source.lend_block(&mut kept)? {
+            let prepared = self.prepare(block);
+            self.check_reach(block, &prepared)?;
+            self.add_block_powers(block, &prepared, &mut powers);
         }
         for (partition, powers) in self.plan.partitions.iter().zip(&powers) {
             self.finish_powers(partition, powers, normaliser);
@@ -95,8 +97,8 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
         Ok(())
     }
 
-    /// Adds the share of some rows to a partition's power coefficients. Weights are summed over channels first, to the
-    /// nodes of each band.
+    /// Adds the share of some rows (positions in the order) to a partition's power coefficients. Weights are summed to the nodes
+    /// first.
     fn add_powers(
         &self,
         partition_index: usize,
@@ -127,22 +129,36 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
             batch.clear();
         };
         let mut sums = Vec::new();
-        for index in rows {
-            let row = &prepared.rows[index];
-            let (p, q) = row.pair;
+        let row_at = |ordered: usize| &prepared.rows[prepared.order[ordered] as usize];
+        let mut start = rows.start;
+        while start < rows.end {
+            let first = row_at(start);
+            let (p, q) = first.pair;
+            let together = |row: &Row| row.pair == first.pair && row.span == first.span;
+            let end = (start + 1..rows.end).find(|&next| !together(row_at(next))).unwrap_or(rows.end);
+            let run = std::mem::replace(&mut start, end)..end;
             if self.class[p as usize * self.stations + q as usize] as usize != class {
                 continue;
             }
             for (band_index, band) in self.bands[partition_index].power.iter().enumerate() {
+                let degrees = band.degrees();
                 for (shares, hands) in &groups {
                     sums.clear();
-                    sums.resize(band.hz.len(), 0.0);
+                    sums.resize(band.nodes.len(), 0.0);
                     let mut any = false;
-                    for (channel, weights) in band.channels.clone().zip(&band.weights) {
-                        let (_, weight) = Intensity::weighted(block, block.index(index, channel), hands);
-                        if weight != 0.0 {
+                    for ordered in run.clone() {
+                        let index = prepared.order[ordered] as usize;
+                        let times = chebyshev(row_at(ordered).place, degrees);
+                        for (channel, weights) in band.channels.clone().zip(band.weights.chunks_exact(degrees)) {
+                            let (_, weight) = Intensity::weighted(block, block.index(index, channel), hands);
+                            if weight == 0.0 {
+                                continue;
+                            }
                             any = true;
-                            sums.iter_mut().zip(weights).for_each(|(sum, l)| *sum += weight * l);
+                            for (time, weights) in times.iter().zip(weights) {
+                                let weight = weight * time;
+                                sums.iter_mut().zip(weights).for_each(|(sum, l)| *sum += weight * l);
+                            }
                         }
                     }
                     if !any {
@@ -151,8 +167,8 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
                     for (node, sum) in sums.iter().enumerate() {
                         for &(slot, part) in shares {
                             batch.push(Share {
-                                p: table.start(row.time, (band_index, node), slot, p) as u32,
-                                q: table.start(row.time, (band_index, node), slot, q) as u32,
+                                p: table.start(first.span, (band_index, node), slot, p) as u32,
+                                q: table.start(first.span, (band_index, node), slot, q) as u32,
                                 weight: real(part * sum),
                             });
                         }

@@ -118,7 +118,7 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
             })
             .collect();
         let blocks = terms.screens.len().div_ceil(LANES);
-        let mut grid = vec![[T::zero(); 2 * LANES]; self.plan.shape.cells() * blocks];
+        let mut grid = vec![Cell::zero(); self.plan.shape.cells() * blocks];
         for block in 0..blocks {
             let of = self.lanes(task.partition, block);
             let indices: Vec<usize> = (block * LANES..block * LANES + of.terms).collect();

@@ -5,9 +5,9 @@ use super::prepare::{Prepared, Row};
 use super::tables::Table;
 use super::{Engine, Task};
 use crate::observation::Block;
-use crate::response::gridded::bands::Band;
+use crate::response::gridded::bands::{Band, MOST_DEGREES, chebyshev};
 use crate::response::gridded::vector::{
-    Cell, Collection, Expansion, GridReal, LANES, Look, Piece, Sample, Scrap, coefficients, collect, expand,
+    Cell, Collection, Expansion, GridReal, LANES, Look, Piece, Sample, Scrap, coefficients, collect, expand, fetch,
     gather, real, spread,
 };
 use crate::response::rows::{Intensity, Seen, cis_turns};
@@ -20,8 +20,8 @@ use std::ops::Range;
 const ANCHOR: usize = 16;
 /// How far apart in cells visibilities of a scrap may lie: it fits the first cache then.
 const SPAN: f64 = 8.0;
-/// How far apart in cells rows of a run may lie.
-const NEAR: f64 = 3.0;
+/// Rows of a run at most.
+const ROWS: usize = 64;
 
 /// Which kernels a group of hands sees, and how much of each.
 #[derive(Debug, Clone, Copy)]
@@ -62,8 +62,13 @@ pub(super) struct Scratch<T> {
     places: Vec<Place>,
     cells: Vec<Cell<T>>,
     width: usize,
+    /// First column and one past the last that samples touch, row by row.
+    touched: Vec<(u32, u32)>,
     pieces: Vec<Piece>,
     coefficients: Vec<Cell<T>>,
+    times: Vec<[T; MOST_DEGREES]>,
+    /// w at the places of a run's nodes, metres.
+    node_w: Vec<f64>,
     got: Vec<[f64; 2]>,
 }
 
@@ -74,8 +79,11 @@ impl<T: GridReal> Scratch<T> {
             places: Vec::new(),
             cells: Vec::new(),
             width: 0,
+            touched: Vec::new(),
             pieces: Vec::new(),
             coefficients: Vec::new(),
+            times: Vec::new(),
+            node_w: Vec::new(),
             got: Vec::new(),
         }
     }
@@ -95,41 +103,89 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
     }
 
     /// Calls `each` with every run of the view's task among `rows` (positions in the order).
-    fn runs(&self, view: &View<T>, rows: Range<usize>, mut each: impl FnMut(&Run<T>)) {
+    fn runs(
+        &self,
+        view: &View<T>,
+        rows: Range<usize>,
+        scratch: &mut Scratch<T>,
+        mut each: impl FnMut(&Run<T>, &mut Scratch<T>),
+    ) {
         let plan = &self.plan;
         let class = view.task.partition - view.task.partition % plan.channel_groups.len();
-        let (scale_x, scale_y) = self.cells_per_wavelength();
         let shares = self.shares();
         let row_at = |ordered: usize| &view.prepared.rows[view.prepared.order[ordered] as usize];
-        for (index, band) in self.bands[view.task.partition].kernel.iter().enumerate() {
-            let layer_of = |row: &Row| plan.layers.of(row.w * band.middle_k);
-            let mine = |row: &Row| {
-                row.planned
-                    && self.class[row.pair.0 as usize * self.stations + row.pair.1 as usize] as usize == class
-                    && layer_of(row) == view.task.layer
-            };
-            let reach = (band.ends_k.1 * scale_x.abs() / NEAR, band.ends_k.1 * scale_y.abs() / NEAR);
-            for &share in &shares {
-                let mut start = rows.start;
-                while start < rows.end {
-                    let first = row_at(start);
-                    if !mine(first) {
-                        start += 1;
-                        continue;
+        // a pair at a time: its tracks in all bands lie close together on the grid
+        let mut pair_start = rows.start;
+        while pair_start < rows.end {
+            let pair = row_at(pair_start).pair;
+            let next = (pair_start + 1..rows.end).find(|&next| row_at(next).pair != pair).unwrap_or(rows.end);
+            let of_pair = std::mem::replace(&mut pair_start, next)..next;
+            if self.class[pair.0 as usize * self.stations + pair.1 as usize] as usize != class {
+                continue;
+            }
+            for (index, band) in self.bands[view.task.partition].kernel.iter().enumerate() {
+                let mine = |row: &Row| row.planned && plan.layers.of(row.w * band.middle_k) == view.task.layer;
+                for &share in &shares {
+                    let mut start = of_pair.start;
+                    while start < of_pair.end {
+                        let first = row_at(start);
+                        if !mine(first) {
+                            start += 1;
+                            continue;
+                        }
+                        let most = of_pair.end.min(start + ROWS);
+                        // places rise: w is followed through them
+                        let goes_on = |next: usize| {
+                            let (last, row) = (row_at(next - 1), row_at(next));
+                            row.span == first.span && row.place > last.place && mine(row)
+                        };
+                        let mut end = (start + 1..most).find(|&next| !goes_on(next)).unwrap_or(most);
+                        while !self.follow_w(view, start..end, band, &mut scratch.node_w) {
+                            end = start + (end - start).div_ceil(2);
+                        }
+                        scratch.times.clear();
+                        scratch.times.extend((start..end).map(|ordered| {
+                            let mut powers = [T::zero(); MOST_DEGREES];
+                            let polynomials = chebyshev(row_at(ordered).place, band.degrees());
+                            powers.iter_mut().zip(polynomials).for_each(|(power, value)| *power = real(value));
+                            powers
+                        }));
+                        each(&Run { rows: start..end, band: index, of: band, share }, scratch);
+                        start = end;
                     }
-                    let near = |row: &Row| {
-                        row.pair == first.pair
-                            && mine(row)
-                            && (row.uv[0] - first.uv[0]).abs() * reach.0 <= 1.0
-                            && (row.uv[1] - first.uv[1]).abs() * reach.1 <= 1.0
-                    };
-                    let most = rows.end.min(start + band.rows);
-                    let end = (start + 1..most).find(|&next| !near(row_at(next))).unwrap_or(most);
-                    each(&Run { rows: start..end, band: index, of: band, share });
-                    start = end;
                 }
             }
         }
+    }
+
+    /// w of some rows at the places of a band's nodes, by the polynomial through as many rows as there are powers of time;
+    /// false when it passes other rows by too far.
+    fn follow_w(&self, view: &View<T>, rows: Range<usize>, band: &Band<T>, node_w: &mut Vec<f64>) -> bool {
+        let row_at = |ordered: usize| &view.prepared.rows[view.prepared.order[ordered] as usize];
+        node_w.clear();
+        let count = rows.len();
+        let through = band.degrees().min(count);
+        let knots: Vec<(f64, f64)> = (0..through)
+            .map(|i| {
+                let row = row_at(rows.start + if through == 1 { 0 } else { i * (count - 1) / (through - 1) });
+                (row.place, row.w)
+            })
+            .collect();
+        let follow = |x: f64| -> f64 {
+            let term = |(i, &(at, w)): (usize, &(f64, f64))| -> f64 {
+                let others = knots.iter().enumerate().filter(|&(j, _)| j != i);
+                w * others.map(|(_, other)| (x - other.0) / (at - other.0)).product::<f64>()
+            };
+            knots.iter().enumerate().map(term).sum()
+        };
+        node_w.extend(band.times.iter().map(|&x| follow(x)));
+        if !self.plan.layers.bends || count <= through {
+            return true;
+        }
+        rows.clone().all(|ordered| {
+            let row = row_at(ordered);
+            (follow(row.place) - row.w).abs() <= self.w_error_m
+        })
     }
 
     /// Cells of the grid per wavelength of u and v; u grows against the columns.
@@ -138,23 +194,23 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
         (-pixel * shape.fft.0 as f64, pixel * shape.fft.1 as f64)
     }
 
-    /// The coefficients of a run's nodes, `[row and node][block]`, into `scratch`.
+    /// The coefficients of a run's nodes, `[node][block]`, into `scratch`.
     fn run_coefficients(&self, view: &View<T>, run: &Run<T>, scratch: &mut Scratch<T>) {
         let layer_w = self.plan.layers.w(view.task.layer);
+        let row = &view.prepared.rows[view.prepared.order[run.rows.start] as usize];
         let looks: Vec<Look<T>> = run
-            .rows
-            .clone()
-            .flat_map(|ordered| {
-                let row = &view.prepared.rows[view.prepared.order[ordered] as usize];
-                run.of.k.iter().enumerate().map(move |(node, k)| {
-                    let at = |station: u32| view.table.at(row.time, (run.band, node), run.share.slot, station);
-                    let dw = self.plan.layers.bends.then(|| real(row.w * k - layer_w));
-                    Look { p: at(row.pair.0), q: at(row.pair.1), dw }
-                })
+            .of
+            .nodes
+            .iter()
+            .enumerate()
+            .map(|(node, &(a, b))| {
+                let at = |station: u32| view.table.at(row.span, (run.band, node), run.share.slot, station);
+                let dw = self.plan.layers.bends.then(|| real(scratch.node_w[b] * run.of.k[a] - layer_w));
+                Look { p: at(row.pair.0), q: at(row.pair.1), dw }
             })
             .collect();
         let mixing = self.bands[view.task.partition].mixing();
-        scratch.coefficients.resize(looks.len() * mixing.blocks, [T::zero(); 2 * LANES]);
+        scratch.coefficients.resize(looks.len() * mixing.blocks, Cell::zero());
         coefficients(self.instructions, &looks, &mixing, &mut scratch.coefficients);
     }
 
@@ -170,53 +226,64 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
         let band = run.of;
         let (scale_x, scale_y) = self.cells_per_wavelength();
         let row_at = |ordered: usize| &view.prepared.rows[view.prepared.order[ordered] as usize];
-        let channels = band.channels.len();
-        let farthest = run
-            .rows
-            .clone()
-            .map(row_at)
-            .fold(0.0, |far: f64, row| far.max((row.uv[0] * scale_x).abs()).max((row.uv[1] * scale_y).abs()));
-        let length = farthest * (band.ends_k.1 - band.ends_k.0);
-        let parts = ((length / SPAN).ceil() as usize).clamp(1, channels);
-        for part in 0..parts {
-            let local = part * channels / parts..(part + 1) * channels / parts;
-            let ends = local.clone().map(|c| self.wavelengths_per_metre[band.channels.start + c]);
-            let ends = ends.fold((f64::INFINITY, 0.0f64), |(low, high), k| (low.min(k), high.max(k)));
-            let (mut x, mut y) = ((f64::INFINITY, f64::NEG_INFINITY), (f64::INFINITY, f64::NEG_INFINITY));
-            for row in run.rows.clone().map(row_at) {
-                // the very products that samples are placed by: rounding must not put one outside
-                let (x_per_k, y_per_k) = (row.uv[0] * scale_x, row.uv[1] * scale_y);
-                for k in [ends.0, ends.1] {
-                    let (px, py) = (x_per_k * k, y_per_k * k);
-                    x = (x.0.min(px), x.1.max(px));
-                    y = (y.0.min(py), y.1.max(py));
+        let (first, last) = (row_at(run.rows.start), row_at(run.rows.end - 1));
+        let far = |uv: [f64; 2]| (uv[0] * scale_x).abs().max((uv[1] * scale_y).abs());
+        let along = far(first.uv).max(far(last.uv)) * (band.ends_k.1 - band.ends_k.0);
+        let across = far([last.uv[0] - first.uv[0], last.uv[1] - first.uv[1]]) * band.ends_k.1;
+        let part = |length: f64, count: usize| -> Vec<Range<usize>> {
+            let parts = ((length / SPAN).ceil() as usize).clamp(1, count);
+            (0..parts).map(|p| p * count / parts..(p + 1) * count / parts).collect()
+        };
+        let channel_parts = part(along, band.channels.len());
+        for lanes in part(across, run.rows.len()) {
+            for local in &channel_parts {
+                let ends = local.clone().map(|c| self.wavelengths_per_metre[band.channels.start + c]);
+                let ends = ends.fold((f64::INFINITY, 0.0f64), |(low, high), k| (low.min(k), high.max(k)));
+                let mut x = (f64::INFINITY, f64::NEG_INFINITY);
+                let mut y = x;
+                for lane in lanes.clone() {
+                    let row = row_at(run.rows.start + lane);
+                    // the very products that samples are placed by: rounding must not put one outside
+                    let (x_per_k, y_per_k) = (row.uv[0] * scale_x, row.uv[1] * scale_y);
+                    for k in [ends.0, ends.1] {
+                        let (px, py) = (x_per_k * k, y_per_k * k);
+                        x = (x.0.min(px), x.1.max(px));
+                        y = (y.0.min(py), y.1.max(py));
+                    }
                 }
-            }
-            let corner = self.lay_out(x, y, scratch);
-            scratch.samples.clear();
-            scratch.places.clear();
-            for (lane, ordered) in run.rows.clone().enumerate() {
-                let index = view.prepared.order[ordered] as usize;
-                self.row_samples(view, run, (lane, ordered, index), (local.clone(), corner), spreading, scratch);
-            }
-            if !scratch.samples.is_empty() {
-                each(scratch);
+                let corner = self.lay_out(x, y, scratch);
+                scratch.samples.clear();
+                scratch.places.clear();
+                for lane in lanes.clone() {
+                    let ordered = run.rows.start + lane;
+                    self.row_samples(view, run, (lane, ordered), (local.clone(), corner), spreading, scratch);
+                }
+                if !scratch.samples.is_empty() {
+                    self.cut(x, y, corner, scratch);
+                    each(scratch);
+                }
             }
         }
     }
 
     /// Lays a scrap over positions from `x.0` to `x.1` and `y.0` to `y.1` cells; gives its corner.
     fn lay_out(&self, x: (f64, f64), y: (f64, f64), scratch: &mut Scratch<T>) -> (i64, i64) {
-        let shape = &self.plan.shape;
         let support = self.plan.window.support;
         let corner = (locate(x.0, support).0, locate(y.0, support).0);
         let width = (locate(x.1, support).0 - corner.0) as usize + support;
         let height = (locate(y.1, support).0 - corner.1) as usize + support;
         scratch.width = width;
         scratch.cells.clear();
-        scratch.cells.resize(width * height, [T::zero(); 2 * LANES]);
-        scratch.pieces.clear();
-        // positions beyond half the transform fold back by whole lengths of it
+        scratch.cells.resize(width * height, Cell::zero());
+        scratch.touched.clear();
+        scratch.touched.resize(height, (width as u32, 0));
+        corner
+    }
+
+    /// The pieces of a scrap that samples touch. Positions beyond half the transform fold back by whole lengths of it.
+    fn cut(&self, x: (f64, f64), y: (f64, f64), corner: (i64, i64), scratch: &mut Scratch<T>) {
+        let shape = &self.plan.shape;
+        let support = self.plan.window.support as u32;
         let fold = |middle: f64, n: usize| (middle / n as f64).round() as i64 * n as i64;
         let column = corner.0 - fold(0.5 * (x.0 + x.1), shape.fft.0) + shape.origin.0 as i64;
         let line = corner.1 - fold(0.5 * (y.0 + y.1), shape.fft.1) + shape.origin.1 as i64;
@@ -230,23 +297,26 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
                 at
             }) as usize
         };
-        for row in 0..height {
+        scratch.pieces.clear();
+        for (row, &(low, high)) in scratch.touched.iter().enumerate() {
+            if high == 0 {
+                continue;
+            }
             let start = place(line + row as i64, shape.height, shape.fft.1) * shape.width;
-            let mut from = 0;
-            while from < width {
-                let at = place(column + from as i64, shape.width, shape.fft.0);
-                // up to where the stored columns end
+            let (mut from, end) = (low as usize, (high - 1 + support) as usize);
+            while from < end {
                 let next = column + from as i64;
+                // up to where the stored columns end
                 let length = match next {
-                    next if next < 0 => (width - from).min(next.unsigned_abs() as usize),
-                    next if next >= shape.width as i64 => width - from,
-                    _ => (width - from).min(shape.width - next as usize),
+                    next if next < 0 => (end - from).min(next.unsigned_abs() as usize),
+                    next if next >= shape.width as i64 => end - from,
+                    _ => (end - from).min(shape.width - next as usize),
                 };
-                scratch.pieces.push(Piece { from: row * width + from, to: start + at, length });
+                let to = start + place(next, shape.width, shape.fft.0);
+                scratch.pieces.push(Piece { from: row * scratch.width + from, to, length });
                 from += length;
             }
         }
-        corner
     }
 
     /// Adds the samples of one row to a scrap's. For spreading they carry the weighted visibilities, and those without
@@ -256,12 +326,13 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
         &self,
         view: &View<T>,
         run: &Run<T>,
-        (lane, ordered, index): (usize, usize, usize),
+        (lane, ordered): (usize, usize),
         (local, corner): (Range<usize>, (i64, i64)),
         spreading: bool,
         scratch: &mut Scratch<T>,
     ) {
         let band = run.of;
+        let index = view.prepared.order[ordered] as usize;
         let row = &view.prepared.rows[index];
         let support = self.plan.window.support;
         let (scale_x, scale_y) = self.cells_per_wavelength();
@@ -272,6 +343,7 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
         let path = row.path + if self.plan.layers.bends { row.w * self.plan.middle_bend } else { 0.0 };
         let step = self.bands[view.task.partition].step.map(|step| cis_turns(path * step));
         let mut phase = Complex64::ONE;
+        let mut last = (usize::MAX, 0);
         for (count, at) in local.enumerate() {
             let channel = band.channels.start + at;
             let k = self.wavelengths_per_metre[channel];
@@ -296,9 +368,18 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
             };
             let (first_x, fx) = locate(x_per_k * k, support);
             let (first_y, fy) = locate(y_per_k * k, support);
+            let (down, across) = ((first_y - corner.1) as usize, (first_x - corner.0) as u32);
+            // many channels start at the same cell
+            if (down, across) != last {
+                last = (down, across);
+                for touched in &mut scratch.touched[down..down + support] {
+                    *touched = (touched.0.min(across), touched.1.max(across + 1));
+                }
+            }
             scratch.samples.push(Sample {
-                cell: ((first_y - corner.1) as usize * scratch.width + (first_x - corner.0) as usize) as u32,
-                profile: (lane * band.channels.len() + at) as u32,
+                cell: (down * scratch.width) as u32 + across,
+                channel: at as u32,
+                row: lane as u32,
                 fx: real(fx),
                 fy: real(fy),
                 re: real(value.re),
@@ -307,8 +388,8 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
         }
     }
 
-    fn scrap<'a>(&'a self, run: &Run<'a, T>, width: usize) -> Scrap<'a, T> {
-        Scrap { profiles: &run.of.profiles, width, window: &self.window }
+    fn scrap<'a>(&'a self, run: &Run<'a, T>, width: usize, times: &'a [[T; MOST_DEGREES]]) -> Scrap<'a, T> {
+        Scrap { profiles: &run.of.profiles, degrees: run.of.degrees(), times, width, window: &self.window }
     }
 
     /// Spreads the rows of a view (positions in the order) onto the task's grid.
@@ -320,24 +401,17 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
         grid: &mut [Cell<T>],
     ) {
         let blocks = self.bands[view.task.partition].mixing().blocks;
-        let mut expansion = Expansion { cells: Vec::new(), blocks };
-        self.runs(view, rows, |run| {
+        let mut expansion = Expansion::new(blocks);
+        self.runs(view, rows, scratch, |run, scratch| {
             let mut ready = false;
             self.scraps(view, run, true, scratch, |scratch| {
                 if !ready {
                     self.run_coefficients(view, run, scratch);
-                    expansion.cells.clear();
-                    expansion.cells.extend(scratch.coefficients.iter().map(|c| {
-                        let mut turned = [T::zero(); 2 * LANES];
-                        for lane in 0..LANES {
-                            turned[lane] = -c[lane + LANES];
-                            turned[lane + LANES] = c[lane];
-                        }
-                        [*c, turned]
-                    }));
+                    expansion.take(&scratch.coefficients);
                     ready = true;
                 }
-                let with = self.scrap(run, scratch.width);
+                fetch(grid, &scratch.pieces, blocks);
+                let with = self.scrap(run, scratch.width, &scratch.times);
                 spread(self.instructions, &scratch.samples, &with, &mut scratch.cells);
                 expand(self.instructions, &scratch.cells, &scratch.pieces, &expansion, grid);
             });
@@ -356,13 +430,13 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
     ) {
         let blocks = self.bands[view.task.partition].mixing().blocks;
         let mut collection = Collection { cells: Vec::new() };
-        self.runs(view, rows, |run| {
+        self.runs(view, rows, scratch, |run, scratch| {
             let mut ready = false;
             self.scraps(view, run, false, scratch, |scratch| {
                 if !ready {
                     self.run_coefficients(view, run, scratch);
                     collection.cells.clear();
-                    collection.cells.resize(blocks * LANES, [[T::zero(); 2 * LANES]; 2]);
+                    collection.cells.resize(blocks * LANES, [Cell::zero(); 2]);
                     for (node, coefficients) in scratch.coefficients.chunks_exact(blocks).enumerate() {
                         let terms = coefficients.iter().flat_map(|c| (0..LANES).map(move |j| (c[j], c[j + LANES])));
                         for ((re, im), [plain, turned]) in terms.zip(&mut collection.cells) {
@@ -372,9 +446,10 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
                     }
                     ready = true;
                 }
+                fetch(grid, &scratch.pieces, blocks);
                 collect(self.instructions, grid, &scratch.pieces, &collection, &mut scratch.cells);
                 scratch.got.resize(scratch.samples.len(), [0.0; 2]);
-                let with = self.scrap(run, scratch.width);
+                let with = self.scrap(run, scratch.width, &scratch.times);
                 gather(self.instructions, &scratch.samples, &with, &scratch.cells, &mut scratch.got);
                 for (place, got) in scratch.places.iter().zip(&scratch.got) {
                     let value = Complex64::new(got[0], got[1]) * place.phase.conj();

@@ -19,7 +19,8 @@ struct Quantities<'a, T> {
 }
 
 /// Station quantities of one partition at its terms' directions, for one block of rows:
-/// `[time][band and node][slot][station][block of directions]`.
+/// `[station][slot][span][band and node][block of directions]`:
+/// runs go through one pair's spans one after the other.
 pub(super) struct Table<T> {
     cells: Vec<Cell<T>>,
     /// Cells a station takes.
@@ -28,19 +29,19 @@ pub(super) struct Table<T> {
     nodes: usize,
     before: Vec<usize>,
     slots: usize,
-    stations: usize,
+    spans: usize,
 }
 
 impl<T> Table<T> {
     /// Where a station's cells start.
-    pub(super) fn start(&self, time: u32, (band, node): (usize, usize), slot: usize, station: u32) -> usize {
-        let at = time as usize * self.nodes + self.before[band] + node;
-        ((at * self.slots + slot) * self.stations + station as usize) * self.per_station
+    pub(super) fn start(&self, span: u32, (band, node): (usize, usize), slot: usize, station: u32) -> usize {
+        let at = (station as usize * self.slots + slot) * self.spans + span as usize;
+        (at * self.nodes + self.before[band] + node) * self.per_station
     }
 
     /// A station's cells.
-    pub(super) fn at(&self, time: u32, node: (usize, usize), slot: usize, station: u32) -> &[Cell<T>] {
-        let start = self.start(time, node, slot, station);
+    pub(super) fn at(&self, span: u32, node: (usize, usize), slot: usize, station: u32) -> &[Cell<T>] {
+        let start = self.start(span, node, slot, station);
         &self.cells[start..start + self.per_station]
     }
 
@@ -62,54 +63,56 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
         let Quantities { terms, bands, lanes, slots } = of;
         let lm: Vec<[f64; 2]> = terms.points.iter().map(|p| p.aim_lm).collect();
         let per_station = lm.len().div_ceil(lanes);
-        let hz: Vec<f64> = bands.iter().flat_map(|band| band.hz.iter().copied()).collect();
+        // frequency and place in the span of every node
+        let place_of = |x: f64| self.places.iter().position(|&place| place == x).unwrap_or(0);
+        let at: Vec<(f64, usize)> = bands
+            .iter()
+            .flat_map(|band| band.nodes.iter().map(|&(a, b)| (band.hz[a], place_of(band.times[b]))))
+            .collect();
         let mut before = Vec::with_capacity(bands.len());
         let mut nodes = 0;
         for band in bands {
             before.push(nodes);
-            nodes += band.hz.len();
+            nodes += band.nodes.len();
         }
-        let per_node = slots * self.stations * per_station;
-        let per_time = nodes * per_node;
+        let spans = prepared.angles.len();
+        let per_span = nodes * per_station;
+        let per_slot = spans * per_span;
         let mut taking_part = vec![false; self.stations];
         for &(p, q) in &partition.pairs {
             taking_part[p as usize] = true;
             taking_part[q as usize] = true;
         }
-        let fill = |time: usize, only_turning: bool, cells: &mut [Cell<T>]| {
+        let fill = |(station, cells): (usize, &mut [Cell<T>])| {
+            if !taking_part[station] {
+                return;
+            }
             let mut voltages = [Vec::new(), Vec::new()];
-            for (&hz, cells) in hz.iter().zip(cells.chunks_exact_mut(per_node)) {
-                for station in (0..self.stations).filter(|&s| taking_part[s]) {
-                    if only_turning && !self.beams.turns(station) {
-                        continue;
-                    }
+            // a station that does not turn looks alike at all times: later spans copy the first
+            let fresh = if self.beams.turns(station) { spans } else { 1 };
+            for (span, angles) in prepared.angles.iter().enumerate().take(fresh) {
+                for (node, &(hz, place)) in at.iter().enumerate() {
                     for &feed in &self.feeds {
                         voltages[feed].resize(lm.len(), Complex64::ZERO);
-                        let angle = prepared.angles[time][station];
+                        let angle = angles[place][station];
                         self.beams.voltages(station, angle, hz, feed, &lm, &mut voltages[feed]);
                     }
                     for slot in 0..slots {
-                        let start = (slot * self.stations + station) * per_station;
+                        let start = slot * per_slot + span * per_span + node * per_station;
                         write(slot, &voltages, lm.len(), &mut cells[start..start + per_station]);
                     }
                 }
             }
+            for slot in cells.chunks_exact_mut(per_slot) {
+                let (known, rest) = slot.split_at_mut(fresh * per_span);
+                rest.chunks_exact_mut(per_span).for_each(|cells| cells.copy_from_slice(&known[..per_span]));
+            }
         };
-        let mut cells = vec![[T::zero(); 2 * LANES]; prepared.angles.len() * per_time];
+        let mut cells = vec![Cell::zero(); self.stations * slots * per_slot];
         if !cells.is_empty() {
-            // stations that do not turn look alike at all times: copy what the first time gave them
-            let (first, rest) = cells.split_at_mut(per_time);
-            fill(0, false, first);
-            let first = &*first;
-            let all_turn = (0..self.stations).all(|s| !taking_part[s] || self.beams.turns(s));
-            rest.par_chunks_mut(per_time).enumerate().for_each(|(index, cells)| {
-                if !all_turn {
-                    cells.copy_from_slice(first);
-                }
-                fill(index + 1, true, cells);
-            });
+            cells.par_chunks_mut(slots * per_slot).enumerate().for_each(fill);
         }
-        Table { cells, per_station, nodes, before, slots, stations: self.stations }
+        Table { cells, per_station, nodes, before, slots, spans }
     }
 
     pub(super) fn kernel_table(&self, prepared: &Prepared, index: usize) -> Table<T> {
