@@ -1,19 +1,24 @@
 //! The fast response: windows, terms and layers, to a promised relative error.
 //!
 //! A visibility's gridding kernel is the transform of its screen A_pq*(l,m) exp(2πi w κ(l,m)). Instead of one table per
-//! baseline, time, channel and w, a partition's screens are expanded in a few common screens θ_j, its *terms*,
-//! with coefficients that are the screen's own values in K directions:
+//! baseline, time, channel and w, a partition's screens are expanded in a few common real screens φ_k, its *terms*:
 //!
 //! ```text
-//! N(l,m) = Re Σ_layers exp(2πi w_layer κ) Σ_j θ_j(l,m) · F[ Σ_k c_kj ω_k V_k ⊛ window ](l,m) / taper(l,m)
+//! N(l,m) = Re Σ_layers exp(2πi w_layer κ) Σ_k φ_k(l,m) · F[ Σ_v c_vk ω_v V_v ⊛ window ](l,m) / taper(l,m)
 //! ```
 //!
 //! F is a Fourier transform of a grid filled with a plain separable window at each visibility's exact position. The terms
-//! of a partition lie interleaved in memory, so that one visibility is a run of fused multiply-adds on whole vectors.
-//! The normaliser needs no grid: |A_pq|² is expanded the same way and its coefficients are summed.
+//! of a partition lie interleaved in memory. Three ideas keep the work small:
 //!
-//! Files, in the order of a run: `patch` (which pixels), `survey` (how far u, v, w reach), `plan` (shares of the tolerance,
-//! partitions), `family`, `smooth` and `terms` (kernels), `engine` (gridding), `vector` (inner loops), `transform`.
+//! - Along a pair's track the coefficients c_vk are smooth: visibilities of neighbouring channels and times meet a few
+//!   *nodes* on a scrap of grid in the first cache, and what the scrap sums to meets the terms once.
+//! - Only real parts count, so rows of negative w are taken as conjugates of the opposite baseline: half the layers. With one
+//!   layer at w = 0 the images of two terms come out of one transform.
+//! - The normaliser needs no grid: |A_pq|² is expanded the same way and its coefficients are summed.
+//!
+//! Files, in the order of a run: `patch` (which pixels), `survey` (how far u, v, w reach), `plan` and `choice` (shares of the
+//! tolerance, partitions, layers), `family`, `smooth` and `terms` (kernels), `bands` (nodes), `engine` (gridding), `vector`
+//! and `register` (inner loops), `transform`.
 
 mod bands;
 mod choice;

@@ -110,7 +110,7 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
     ) {
         let class = partition_index - partition_index % self.plan.channel_groups.len();
         let slot_of = |power: Power| self.powers.iter().position(|&p| p == power).unwrap_or(0);
-        let groups: Vec<(Vec<(usize, f64)>, &[usize])> = self
+        let groups: Vec<(Vec<_>, &[usize])> = self
             .intensity
             .groups()
             .iter()
