@@ -11,7 +11,7 @@ use rand_chacha::ChaCha8Rng;
 use std::sync::Arc;
 
 /// Six stations of two classes with pointing offsets, alt-azimuth mounts, three hours, four channels of an 8 % band.
-fn scene(seed: u64) -> (Observation, Block, StationBeams) {
+pub(super) fn scene(seed: u64) -> (Observation, Block, StationBeams) {
     let mut rng = ChaCha8Rng::seed_from_u64(seed);
     let stations = (0..6)
         .map(|i| Station {

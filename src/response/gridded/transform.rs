@@ -282,3 +282,61 @@ impl<T: GridReal> Transform<T> {
         );
     }
 }
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use rand::{Rng, SeedableRng};
+    use rand_chacha::ChaCha8Rng;
+
+    /// Two terms in one transform give the real parts that each gives alone, folded positions and all, and the way back is
+    /// the transpose. Bound: rounding of transforms of some thousand cells.
+    #[test]
+    fn pairs_of_terms_share_a_transform() {
+        let mut rng = ChaCha8Rng::seed_from_u64(11);
+        for reach in [(0.2, 0.3), (0.7, 0.45)] {
+            let size = (21, 26);
+            let shape = GridShape::new(size, 1.5, reach, 6);
+            let transform = Transform::<f64>::new(shape, size);
+            let of = Lanes { block: 1, blocks: 2, terms: 7 };
+            let mut grid = vec![Cell::zero(); 2 * shape.cells()];
+            grid.iter_mut().for_each(|cell| cell.0.fill_with(|| rng.random::<f64>() - 0.5));
+            for cell in grid.iter_mut().skip(1).step_by(2) {
+                // a term that is not there
+                (cell[7], cell[7 + LANES]) = (0.0, 0.0);
+            }
+            let (mut alone, mut paired) = (Scratch::default(), Scratch::default());
+            transform.to_patch(&grid, of, false, &mut alone);
+            transform.to_patch(&grid, of, true, &mut paired);
+            for term in 0..of.terms {
+                for (one, two) in alone.images[term].iter().zip(&paired.images[term / 2]) {
+                    let two = if term % 2 == 0 { two.re } else { two.im };
+                    assert!((one.re - two).abs() <= 1e-11, "term {term}: {} and {two}", one.re);
+                }
+            }
+            // ⟨real images, images of the grid⟩ = ⟨grid of the images, grid⟩, real parts
+            let images: Vec<Vec<Complex<f64>>> = (0..4)
+                .map(|pair| {
+                    let second = if pair == 3 { 0.0 } else { 1.0 };
+                    let mut draw = || rng.random::<f64>() - 0.5;
+                    (0..size.0 * size.1).map(|_| Complex::new(draw(), second * draw())).collect()
+                })
+                .collect();
+            let mut back = vec![Cell::zero(); 2 * shape.cells()];
+            transform.to_grid(&images, of, true, &mut back);
+            let left: f64 = images
+                .iter()
+                .zip(&paired.images)
+                .flat_map(|(a, b)| a.iter().zip(b).map(|(a, b)| a.re * b.re + a.im * b.im))
+                .sum();
+            let right: f64 = grid
+                .iter()
+                .zip(&back)
+                .skip(1)
+                .step_by(2)
+                .flat_map(|(a, b)| a.iter().zip(b.iter()).map(|(a, b)| a * b))
+                .sum();
+            assert!((left - right).abs() <= 1e-9 * left.abs().max(1.0), "{left} and {right}");
+        }
+    }
+}
