@@ -6,15 +6,16 @@ use super::progress::Progress;
 use super::{CliError, Common};
 use crate::beam::StationBeams;
 use crate::imaging::beam_fit::fit_beam;
-use crate::imaging::{Mosaic, flat_sky, response_map, self_check};
+use crate::imaging::{Mosaic, Price, flat_sky, response_map, self_check, side_lobes};
 use crate::observation::{Mount, Observation};
 use crate::report::{
     Accuracy, BeamFigures, ImageFigures, InputFile, KernelFigures, Noise, PointingRecord, Product, ProductHeader,
-    RunRecord, StageTime, StationGroup, WriteError, summary_json, summary_text, write_json, write_page,
+    RunRecord, StageTime, StationGroup, WeightingFigures, WriteError, summary_json, summary_text, write_json,
+    write_page,
 };
 use crate::response::Sums;
 use crate::response::gridded::Options;
-use crate::run::{Image, RunFile, iso_utc};
+use crate::run::{Image, RunFile, Weighting, iso_utc};
 use crate::sky::{Direction, ImageGeometry};
 use clap::Args;
 use ndarray::Array2;
@@ -54,7 +55,7 @@ pub fn run(arguments: &Arguments, common: &Common) -> Result<String, CliError> {
     };
     record.inputs = checksums(&run)?;
     record.stations = station_groups(&inputs);
-    let mut making = Making { progress: &progress, record, settings };
+    let mut making = Making { progress: &progress, record, settings, weighting: run.weighting };
     making.timed("opening and checksums", started);
     let images = making.images(inputs)?;
     let started = Instant::now();
@@ -172,6 +173,7 @@ struct Making<'a> {
     progress: &'a Progress,
     record: RunRecord,
     settings: Image,
+    weighting: Weighting,
 }
 
 impl Making<'_> {
@@ -203,6 +205,7 @@ impl Making<'_> {
             return Err(told(NothingToImage::Visibilities));
         }
 
+        let price = self.weigh(&mut mosaic)?;
         let started = Instant::now();
         let rows = mosaic.pointings().iter().map(|p| p.tally.rows).sum();
         let stage = self.progress.stage("gridding", "rows", Some(rows));
@@ -210,6 +213,7 @@ impl Making<'_> {
         stage.finish();
         self.timed("gridding", started);
 
+        let weight = mosaic.weight_map(&sums, |_| ())?;
         let dirty = flat_sky(&sums, self.settings.lowest_response.value);
         let reference = reference_pixel(&geometry, &sums, &dirty).ok_or_else(|| told(NothingToImage::Pixels))?;
         let place = geometry.direction_of(reference.0 as f64, reference.1 as f64).unwrap_or(geometry.centre);
@@ -235,6 +239,8 @@ impl Making<'_> {
             }
         };
         self.record.beam = beam.as_ref().map(BeamFigures::from);
+        let lobes = beam.as_ref().map(|beam| side_lobes(psf.view(), reference, beam, geometry.pixel));
+        self.record.weighting = Some(WeightingFigures::new(&self.weighting, price, lobes));
 
         let started = Instant::now();
         let stage = self.progress.stage("checking against exact sums", "", None);
@@ -265,7 +271,7 @@ impl Making<'_> {
             .iter()
             .fold((0.0, 0.0), |sum, p| (sum.0 + p.tally.weight, sum.1 + p.tally.weight_hz));
         let frequency_hz = weight_hz.1 / weight_hz.0;
-        self.noise(&geometry, &sums, &dirty, frequency_hz);
+        self.noise(&geometry, &weight, &dirty, frequency_hz);
         let start = mosaic.pointings().iter().map(|p| p.tally.span.0).fold(f64::INFINITY, f64::min);
         let header = ProductHeader {
             bunit: "Jy/beam".to_owned(),
@@ -277,7 +283,20 @@ impl Making<'_> {
             description: String::new(),
             history: self.history(),
         };
-        Ok(Images { geometry, dirty, weight: sums.normaliser, psf, header })
+        Ok(Images { geometry, dirty, weight, psf, header })
+    }
+
+    /// Imaging weights, where others than natural are asked for; what they cost.
+    fn weigh(&mut self, mosaic: &mut Mosaic) -> Result<Option<Price>, CliError> {
+        if self.weighting.is_natural() {
+            return Ok(None);
+        }
+        let started = Instant::now();
+        let stage = self.progress.stage("weighting", "rows", None);
+        let price = mosaic.weigh(&self.weighting, |rows| stage.add(rows))?;
+        stage.finish();
+        self.timed("weighting", started);
+        if price.imaging > 0.0 { Ok(Some(price)) } else { Err(told(NothingToImage::Weights)) }
     }
 
     /// A pattern that is not round, on a mount whose turning is not known here, would be placed wrongly.
@@ -338,9 +357,8 @@ impl Making<'_> {
         self.record.kernels = Some(kernels);
     }
 
-    fn noise(&mut self, geometry: &ImageGeometry, sums: &Sums, dirty: &Array2<f64>, frequency_hz: f64) {
-        let mut noises: Vec<(f64, usize)> = sums
-            .normaliser
+    fn noise(&mut self, geometry: &ImageGeometry, weight: &Array2<f64>, dirty: &Array2<f64>, frequency_hz: f64) {
+        let mut noises: Vec<(f64, usize)> = weight
             .iter()
             .zip(dirty)
             .enumerate()
@@ -368,7 +386,7 @@ impl Making<'_> {
         let record = &self.record;
         let mut lines = vec![
             format!("made by evensky {} image, run file {}", record.versions.evensky, record.run_file),
-            "weights: natural; Stokes I from all parallel hands or Stokes I data".to_owned(),
+            format!("weights: {}; Stokes I from all parallel hands or Stokes I data", self.weighting.describe()),
             format!("pixels below {} of the largest response are blank", self.settings.lowest_response.value),
         ];
         if let Some(a) = &record.accuracy {
@@ -398,6 +416,11 @@ enum NothingToImage {
          hands or Stokes I with positive weights"
     )]
     Visibilities,
+    #[error(
+        "[weighting] leaves no visibility: uv_range_wavelengths or outer_cosine_wavelengths exclude all; compare them with \
+         the baselines that `evensky describe` shows"
+    )]
+    Weights,
     #[error(
         "no pixel of the image reaches lowest_response: no pointing looks there; compare centre_deg with the aims that \
          `evensky describe` shows"

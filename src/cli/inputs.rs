@@ -3,6 +3,7 @@
 use super::CliError;
 use super::progress::Progress;
 use crate::beam::{StationBeams, patterns, station_beams};
+use crate::imaging::Weighted;
 use crate::observation::{BlockSource, Selection, open};
 use crate::run::{Problem, RunError, RunFile, Sources};
 use std::collections::BTreeSet;
@@ -51,6 +52,10 @@ pub fn open_pointings(run: &RunFile, progress: &Progress) -> Result<Vec<Pointing
             continue;
         }
         for source in sources {
+            let source: Box<dyn BlockSource> = match pointing.weight_scale {
+                1.0 => source,
+                scale => Box::new(Weighted::new(source, scale)),
+            };
             let mut observation = source.observation().clone();
             if let Some(aim) = pointing.aim {
                 observation.aim = aim.value;

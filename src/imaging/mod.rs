@@ -4,7 +4,11 @@ pub mod beam_fit;
 mod flat;
 mod mosaic;
 mod self_check;
+mod side_lobes;
+mod weighting;
 
 pub use flat::{flat_noise, flat_sky, response_map};
 pub use mosaic::{Mosaic, Pointing, Tally};
 pub use self_check::{SelfCheck, self_check};
+pub use side_lobes::{SideLobes, side_lobes};
+pub use weighting::{Price, Weigher, Weighted};

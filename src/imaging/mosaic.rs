@@ -1,16 +1,18 @@
 //! Pointings summed into one mosaic.
 
+use super::weighting::{Price, Weigher, Weighted, weigh};
 use crate::beam::StationBeams;
 use crate::observation::{Block, BlockSource, Watched};
 use crate::response::gridded::Options;
 use crate::response::{Exact, Gridded, Response, ResponseError, Sums};
+use crate::run::Weighting;
 use crate::sky::{Component, Direction, ImageGeometry};
 use ndarray::Array2;
 
 /// One pointing with both its responses.
 pub struct Pointing {
-    /// Its visibilities.
-    pub source: Box<dyn BlockSource>,
+    /// Its visibilities, with imaging weights once there are any.
+    pub source: Weighted,
     /// The fast response.
     pub gridded: Gridded,
     /// The exact one, its judge.
@@ -77,12 +79,13 @@ impl Mosaic {
     /// When the visibilities cannot be read or the tolerance cannot be kept.
     pub fn add(
         &mut self,
-        mut source: Box<dyn BlockSource>,
+        source: Box<dyn BlockSource>,
         beams: StationBeams,
         tolerance: f64,
         options: Options,
         mut rows: impl FnMut(u64) + Send,
     ) -> Result<(), ResponseError> {
+        let mut source = Weighted::new(source, 1.0);
         let mut observation = source.observation().clone();
         observation.aim = beams.aim();
         let hands = observation.total_intensity();
@@ -121,6 +124,56 @@ impl Mosaic {
     /// The common pixel grid.
     pub fn geometry(&self) -> &ImageGeometry {
         &self.geometry
+    }
+
+    /// Gives every pointing imaging weights; what they cost.
+    ///
+    /// # Errors
+    /// When visibilities cannot be read.
+    pub fn weigh(&mut self, weighting: &Weighting, rows: impl FnMut(u64)) -> Result<Price, ResponseError> {
+        let geometry = self.geometry;
+        let mut weighers: Vec<Weigher> = self
+            .pointings
+            .iter()
+            .map(|pointing| Weigher::new(*weighting, pointing.source.observation(), &geometry))
+            .collect();
+        let mut sources: Vec<&mut dyn BlockSource> =
+            self.pointings.iter_mut().map(|pointing| pointing.source.as_mut()).collect();
+        let price = weigh(&mut weighers, &mut sources, rows)?;
+        for (pointing, weigher) in self.pointings.iter_mut().zip(weighers) {
+            pointing.source.weigh_by(Some(weigher));
+        }
+        Ok(price)
+    }
+
+    /// Inverse variance of the flat sky: W² / Σ ω²/w |A|², which with natural weights is W.
+    ///
+    /// # Errors
+    /// When visibilities cannot be read.
+    pub fn weight_map(
+        &mut self,
+        sums: &Sums,
+        mut rows: impl FnMut(u64) + Send,
+    ) -> Result<Array2<f64>, ResponseError> {
+        if self.pointings.iter().all(|pointing| pointing.source.weigher().is_none()) {
+            return Ok(sums.normaliser.clone());
+        }
+        let mut variance = Array2::zeros(sums.normaliser.dim());
+        for Pointing { source, gridded, .. } in &mut self.pointings {
+            let weigher = source.weigher().cloned();
+            // ω of the source times ω/w once more
+            let mut squared = Watched::new(source.as_mut(), |block: &mut Block| {
+                rows(block.rows() as u64);
+                if let Some(weigher) = &weigher {
+                    weigher.apply(block);
+                }
+                Ok(())
+            });
+            gridded.normaliser(&mut squared, &mut variance)?;
+        }
+        let mut map = sums.normaliser.clone();
+        map.zip_mut_with(&variance, |w, &v| *w = if v > 0.0 { *w * *w / v } else { 0.0 });
+        Ok(map)
     }
 
     /// N and W of all pointings: one sum, not a patchwork.

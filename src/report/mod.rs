@@ -15,7 +15,7 @@ pub use page::{PageError, PagePicture, render_page, write_page};
 pub use products::{ProductError, ProductHeader, write_image_product};
 pub use record::{
     Accuracy, BeamFigures, ImageFigures, InputFile, KernelFigures, Noise, PointingRecord, Product, RunRecord,
-    StageTime, StationGroup, Versions,
+    StageTime, StationGroup, Versions, WeightingFigures,
 };
 pub use summary::{summary_json, summary_sentence, summary_text};
 pub use whole_file::{WriteError, write_json, write_whole};

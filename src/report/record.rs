@@ -39,6 +39,8 @@ pub struct RunRecord {
     pub kernels: Option<KernelFigures>,
     /// Fitted beam; `None` when it could not be fitted (a warning says why).
     pub beam: Option<BeamFigures>,
+    /// Imaging weights and what they cost.
+    pub weighting: Option<WeightingFigures>,
     /// Noise figures from the weight map.
     pub noise: Option<Noise>,
     /// Where the time went.
@@ -241,6 +243,36 @@ impl From<&crate::imaging::beam_fit::FittedBeam> for BeamFigures {
             minor_arcsec: beam.minor.to_degrees() * 3600.0,
             position_angle_deg: beam.position_angle.to_degrees(),
             largest_misfit: beam.largest_misfit,
+        }
+    }
+}
+
+/// Imaging weights and what they cost.
+#[derive(Debug, Clone, PartialEq, Default, Serialize, Deserialize)]
+pub struct WeightingFigures {
+    /// Scheme, tapers and ranges, in words.
+    pub scheme: String,
+    /// Noise relative to natural weights, √(Σ ω²/w · Σ w) / Σ ω over all visibilities: 1 for natural.
+    pub relative_noise: f64,
+    /// Largest side lobe of the point spread function between 1.2 and 10 widths from its peak, relative to the peak; `None`
+    /// without a fitted beam.
+    pub highest_side_lobe: Option<f64>,
+    /// Most negative one.
+    pub lowest_side_lobe: Option<f64>,
+}
+
+impl WeightingFigures {
+    /// From the price (`None`: natural weights) and side lobes measured on the point spread function.
+    pub fn new(
+        weighting: &crate::run::Weighting,
+        price: Option<crate::imaging::Price>,
+        lobes: Option<crate::imaging::SideLobes>,
+    ) -> Self {
+        WeightingFigures {
+            scheme: weighting.describe(),
+            relative_noise: price.map_or(1.0, |price| price.relative_noise()),
+            highest_side_lobe: lobes.map(|lobes| lobes.highest),
+            lowest_side_lobe: lobes.map(|lobes| lobes.lowest),
         }
     }
 }

@@ -1,6 +1,6 @@
 //! The closing summary: what a person reads in ten seconds, and the same as one JSON object.
 
-use super::record::{Accuracy, BeamFigures, RunRecord};
+use super::record::{Accuracy, BeamFigures, RunRecord, WeightingFigures};
 
 /// The closing summary in plain text, without a newline at the end.
 pub fn summary_text(record: &RunRecord, folder: &str) -> String {
@@ -28,6 +28,9 @@ pub fn summary_text(record: &RunRecord, folder: &str) -> String {
             ),
         );
     }
+    if let Some(weighting) = &record.weighting {
+        push(&mut text, &format!("weights    {}", weighting_line(weighting)));
+    }
     let seconds: f64 = record.timings.iter().map(|t| t.seconds).sum();
     if seconds > 0.0 {
         push(&mut text, &format!("time       {} on {} threads", duration(seconds), record.threads));
@@ -36,6 +39,19 @@ pub fn summary_text(record: &RunRecord, folder: &str) -> String {
         push(&mut text, &format!("look first {}", join(folder, first)));
     }
     text
+}
+
+/// Scheme, price and side lobes in a line.
+pub(super) fn weighting_line(weighting: &WeightingFigures) -> String {
+    let mut line = weighting.scheme.clone();
+    if weighting.relative_noise > 1.0 {
+        line += &format!("; noise {:.2} times that of natural weights", weighting.relative_noise);
+    }
+    if let (Some(high), Some(low)) = (weighting.highest_side_lobe, weighting.lowest_side_lobe) {
+        line +=
+            &format!("; side lobes up to {:.1} % and down to {:.1} %", 100.0 * high, 100.0 * low).replace('-', "−");
+    }
+    line
 }
 
 /// The summary as a JSON object for `--json`: the record with the folder and the place to look first.

@@ -18,6 +18,7 @@ pub mod window;
 pub use exact::Exact;
 pub use fine_grid::{FineGridError, fine_grid};
 pub use gridded::Gridded;
+pub(crate) use rows::{Recentre, wavelengths_per_metre};
 
 use crate::observation::{Block, BlockSource, ObservationError};
 use crate::sky::{Component, ImageGeometry};
@@ -58,6 +59,17 @@ pub trait Response: Send + Sync {
     /// # Errors
     /// When the source cannot be read.
     fn adjoint(&self, source: &mut dyn BlockSource, sums: &mut Sums) -> Result<(), ResponseError>;
+
+    /// Adds W of all blocks of `source` to `sum`, and nothing else.
+    ///
+    /// # Errors
+    /// When the source cannot be read.
+    fn normaliser(&self, source: &mut dyn BlockSource, sum: &mut Array2<f64>) -> Result<(), ResponseError> {
+        let mut sums = Sums { numerator: Array2::zeros(sum.dim()), normaliser: Array2::zeros(sum.dim()) };
+        self.adjoint(source, &mut sums)?;
+        *sum += &sums.normaliser;
+        Ok(())
+    }
 }
 
 /// Why a response could not be made or applied.

@@ -1,4 +1,4 @@
-//! `[[pointing]]`, `[image]` and `[weighting]`: what to image, and onto which pixels.
+//! `[[pointing]]` and `[image]`: what to image, and onto which pixels.
 
 use super::document::{At, Section, count, list, number, pair, text};
 use super::{Problem, RunFile};
@@ -29,6 +29,8 @@ pub struct Pointing {
     pub sources: Sources,
     /// Angle from the aim, degrees, beyond which every response is 0; overrides that of `[image]`.
     pub response_radius_deg: Option<At<f64>>,
+    /// The file's inverse variances are multiplied by this.
+    pub weight_scale: f64,
 }
 
 /// Sources of a multi-source file; each becomes a pointing.
@@ -55,15 +57,6 @@ pub struct Image {
     pub lowest_response: At<f64>,
     /// Angle from each aim, degrees, beyond which every response is 0: part of the beams' definition.
     pub response_radius_deg: Option<At<f64>>,
-}
-
-/// `[weighting]`.
-#[derive(Debug, Clone, Copy, PartialEq, Eq, Default, Serialize)]
-#[serde(tag = "scheme", rename_all = "kebab-case")]
-pub enum Weighting {
-    /// Each visibility by its inverse variance.
-    #[default]
-    Natural,
 }
 
 impl RunFile {
@@ -104,11 +97,13 @@ pub(super) fn read_pointing(section: &Section) -> Option<Pointing> {
         section.complain(aim.line, "aim_deg", problem);
     }
     let response_radius_deg = response_radius(section);
+    let expected = "a number greater than 0 that the file's weights are multiplied by";
+    let weight_scale = section.or("weight_scale", 1.0, expected, number(|scale| scale > 0.0)).value;
     section.finish();
     let visibilities = visibilities?;
     let path = section.document.resolve(&visibilities.value);
     let visibilities = At { value: path, line: visibilities.line };
-    Some(Pointing { line: section.line, visibilities, aim, sources, response_radius_deg })
+    Some(Pointing { line: section.line, visibilities, aim, sources, response_radius_deg, weight_scale })
 }
 
 fn sources(value: &DeValue) -> Option<Sources> {
@@ -171,18 +166,5 @@ pub(super) fn read_image(section: &Section) -> Option<Image> {
             section.complain(at, key, problem);
             None
         }
-    }
-}
-
-pub(super) fn read_weighting(section: &Section) -> Weighting {
-    let scheme = section.optional("scheme", "the name of a weighting scheme: \"natural\"", text);
-    section.finish();
-    match scheme {
-        Some(scheme) if scheme.value != "natural" => {
-            let problem = Problem::NotYet { found: scheme.value, available: "\"natural\"".to_owned() };
-            section.complain(scheme.line, "scheme", problem);
-            Weighting::Natural
-        }
-        _ => Weighting::Natural,
     }
 }

@@ -38,14 +38,16 @@ mod error;
 mod image;
 mod simulate;
 mod tables;
+mod weighting;
 
 pub use beams::{Beam, SHAPES, Shape, StationRule, StationSettings};
 pub use calendar::{fits_date, iso_utc, mjd_of_day};
 pub use document::At;
 pub use error::{Complaint, Problem, RunError};
-pub use image::{Image, MOST_PIXELS, Pointing, Sources, TOLERANCES, Weighting};
+pub use image::{Image, MOST_PIXELS, Pointing, Sources, TOLERANCES};
 pub use simulate::{Method, Simulate, SimulatedPointing};
 pub use tables::{LayoutMount, LayoutStation, StationRow, StationTable};
+pub use weighting::{DensityOf, Scheme, Weighting};
 
 use document::{Document, Section, text};
 use serde::Serialize;
@@ -182,7 +184,7 @@ fn read(root: &Section) -> RunFile {
     let station_table = root.optional("station_table", "the name of a CSV table of stations", text);
     let pointings = root.tables("pointing").iter().filter_map(image::read_pointing).collect();
     let image = root.table("image").and_then(|section| image::read_image(&section));
-    let weighting = root.table("weighting").map_or_else(Weighting::default, |s| image::read_weighting(&s));
+    let weighting = root.table("weighting").map_or_else(Weighting::default, |s| weighting::read_weighting(&s));
     let beam_sections = root.table("beams").map(|beams| beams.named_tables()).unwrap_or_default();
     // a beam that is itself wrong is still a name that exists
     let beam_names: Vec<String> = beam_sections.iter().map(|(name, _)| name.clone()).collect();

@@ -194,4 +194,16 @@ impl Response for Gridded {
             None => Ok(()),
         }
     }
+
+    fn normaliser(
+        &self,
+        source: &mut dyn BlockSource,
+        sum: &mut ndarray::Array2<f64>,
+    ) -> Result<(), ResponseError> {
+        match &self.engine {
+            Some(Precision::Single(engine)) => engine.normaliser(source, sum),
+            Some(Precision::Double(engine)) => engine.normaliser(source, sum),
+            None => Ok(()),
+        }
+    }
 }
