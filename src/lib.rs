@@ -101,6 +101,7 @@ pub mod beam;
 pub mod cli;
 pub mod fits;
 pub mod imaging;
+pub mod measure;
 pub mod observation;
 pub mod report;
 pub mod response;
