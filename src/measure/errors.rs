@@ -156,8 +156,7 @@ pub fn condon_white(signal_to_noise: f64, size: &Ellipse, pixel: f64) -> CondonE
     let rho2 = std::f64::consts::PI * major * minor / (FWHM2 * pixel * pixel) * signal_to_noise * signal_to_noise;
     let error = (2.0 / rho2).sqrt();
     let difference = major * major - minor * minor;
-    let angle =
-        if difference > 0.0 { 2f64.sqrt() * error * major * minor / difference } else { f64::INFINITY };
+    let angle = if difference > 0.0 { 2f64.sqrt() * error * major * minor / difference } else { f64::INFINITY };
     CondonErrors {
         peak: error,
         integrated: error,
@@ -246,8 +245,7 @@ mod tests {
             let flux = [1.0, 0.0, 0.0, 0.5 / s2, 0.0, 0.5 / s2];
             let variance: f64 =
                 (0..6).flat_map(|i| (0..6).map(move |j| (i, j))).map(|(i, j)| flux[i] * flux[j] * c[(i, j)]).sum();
-            let got =
-                [c[(0, 0)].sqrt(), c[(1, 1)].sqrt() / fwhm, 0.5 * c[(3, 3)].sqrt() / s2, variance.sqrt()];
+            let got = [c[(0, 0)].sqrt(), c[(1, 1)].sqrt() / fwhm, 0.5 * c[(3, 3)].sqrt() / s2, variance.sqrt()];
             for (g, w) in got.iter().zip(want) {
                 assert_relative_eq!(*g, w, max_relative = 0.02);
             }
@@ -274,8 +272,9 @@ mod tests {
         image[[0, 0]] = f64::NAN;
         image[[2, 2]] = 0.5;
         let c = Correlation::Image(image, (1, 1));
-        assert_eq!([c.at(0, 0), c.at(1, 0), c.at(-1, 0), c.at(1, 1), c.at(-1, -1), c.at(5, 0)], [
-            1.0, 0.45, 0.45, 0.25, 0.25, 0.0
-        ]);
+        assert_eq!(
+            [c.at(0, 0), c.at(1, 0), c.at(-1, 0), c.at(1, 1), c.at(-1, -1), c.at(5, 0)],
+            [1.0, 0.45, 0.45, 0.25, 0.25, 0.0]
+        );
     }
 }

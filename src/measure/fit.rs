@@ -301,11 +301,7 @@ fn unfitted(plate: &Plate, peak: &Peak, together: usize) -> FittedPeak {
     let (value, noise) = (plate.image[[y, x]], plate.noise[[y, x]]);
     let place = (plate.beam.major * noise / value).powi(2) + 1.0 / 12.0;
     FittedPeak {
-        gaussian: PixelGaussian {
-            peak: value,
-            centre: [x as f64, y as f64],
-            covariance: plate.beam.covariance(),
-        },
+        gaussian: PixelGaussian { peak: value, centre: [x as f64, y as f64], covariance: plate.beam.covariance() },
         covariance: DMatrix::from_diagonal(&DVector::from_vec(vec![noise * noise, place, place])),
         noise,
         flux: (value, noise),
@@ -374,7 +370,8 @@ mod tests {
     /// Sampled Gaussians without noise come back, alone, blended and resolved; the bound is the solver's.
     #[test]
     fn what_was_drawn_is_measured() {
-        let point = |peak: f64, x: f64, y: f64| PixelGaussian { peak, centre: [x, y], covariance: BEAM.covariance() };
+        let point =
+            |peak: f64, x: f64, y: f64| PixelGaussian { peak, centre: [x, y], covariance: BEAM.covariance() };
         let wide = Ellipse { major: 11.0, minor: 7.0, position_angle: -1.0 };
         let sky = [
             point(2.0, 20.3, 21.7),
@@ -395,7 +392,11 @@ mod tests {
         assert_abs_diff_eq!(fitted[2].flux.0, 0.9 * ratio, epsilon = 1e-4);
         let size = Ellipse::of_covariance(fitted[2].gaussian.covariance).unwrap();
         assert_abs_diff_eq!(size.position_angle, -1.0, epsilon = 1e-4);
-        assert_abs_diff_eq!(height_at(drawn(&sky[..1], 80).view(), &BEAM, 20.3, 21.7).unwrap(), 2.0, epsilon = 1e-12);
+        assert_abs_diff_eq!(
+            height_at(drawn(&sky[..1], 80).view(), &BEAM, 20.3, 21.7).unwrap(),
+            2.0,
+            epsilon = 1e-12
+        );
     }
 
     #[test]

@@ -53,14 +53,9 @@ pub fn find_sources(
 ) -> Vec<Source> {
     let noise = noise_of(weight);
     let signal_to_noise = &image / &noise;
-    let found =
-        peaks(signal_to_noise.view(), options.island_above_noise, options.find_above_noise, RISE);
-    let plate = Plate {
-        image,
-        noise: noise.view(),
-        beam: Ellipse::from(beam).scaled(1.0 / geometry.pixel),
-        correlation,
-    };
+    let found = peaks(signal_to_noise.view(), options.island_above_noise, options.find_above_noise, RISE);
+    let plate =
+        Plate { image, noise: noise.view(), beam: Ellipse::from(beam).scaled(1.0 / geometry.pixel), correlation };
     let fitted = fit_peaks(&plate, &found, options.shapes);
     let mut sources: Vec<Source> =
         fitted.iter().filter_map(|one| on_the_sky(one, &plate, geometry, options)).collect();
@@ -74,7 +69,8 @@ fn on_the_sky(one: &FittedPeak, plate: &Plate, geometry: &ImageGeometry, options
     let fitted = Ellipse::of_covariance(one.gaussian.covariance)?;
     let mut flux_error = one.flux.1;
     let mut peak_error = one.covariance[(0, 0)].sqrt();
-    let mut place = [[one.covariance[(1, 1)], one.covariance[(1, 2)]], [one.covariance[(2, 1)], one.covariance[(2, 2)]]];
+    let mut place =
+        [[one.covariance[(1, 1)], one.covariance[(1, 2)]], [one.covariance[(2, 1)], one.covariance[(2, 2)]]];
     let mut size_error = one.shape_free.then(|| size_errors(one.gaussian.covariance, &one.covariance));
     if options.errors == Errors::Condon && !one.remarks.unfitted {
         let smoothing = (plate.beam.major * plate.beam.minor).sqrt();
@@ -85,8 +81,7 @@ fn on_the_sky(one: &FittedPeak, plate: &Plate, geometry: &ImageGeometry, options
         let (sin, cos) = fitted.position_angle.sin_cos();
         let (major, minor) = (e.along_major.powi(2), e.along_minor.powi(2));
         let mixed = -(major - minor) * sin * cos;
-        place =
-            [[major * sin * sin + minor * cos * cos, mixed], [mixed, major * cos * cos + minor * sin * sin]];
+        place = [[major * sin * sin + minor * cos * cos, mixed], [mixed, major * cos * cos + minor * sin * sin]];
         size_error = one.shape_free.then_some(Ellipse {
             major: e.major * fitted.major,
             minor: e.minor * fitted.minor,

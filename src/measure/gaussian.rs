@@ -26,11 +26,7 @@ impl Ellipse {
     pub fn covariance(&self) -> [f64; 3] {
         let (sin, cos) = self.position_angle.sin_cos();
         let (major, minor) = (self.major * self.major / FWHM2, self.minor * self.minor / FWHM2);
-        [
-            major * sin * sin + minor * cos * cos,
-            (major - minor) * sin * cos,
-            major * cos * cos + minor * sin * sin,
-        ]
+        [major * sin * sin + minor * cos * cos, (major - minor) * sin * cos, major * cos * cos + minor * sin * sin]
     }
 
     /// The ellipse of a covariance; `None` unless both its axes have a positive length.

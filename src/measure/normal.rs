@@ -187,8 +187,7 @@ impl NormalEquations {
         let used: Vec<usize> = (0..unknowns).filter(|&i| self.matrix[(i, i)] > 0.0).collect();
         let scale: Vec<f64> = used.iter().map(|&i| self.matrix[(i, i)].sqrt()).collect();
         let n = used.len();
-        let correlation =
-            DMatrix::from_fn(n, n, |a, b| self.matrix[(used[a], used[b])] / (scale[a] * scale[b]));
+        let correlation = DMatrix::from_fn(n, n, |a, b| self.matrix[(used[a], used[b])] / (scale[a] * scale[b]));
         if let Some((first, second)) = self.confused(&correlation, &used) {
             return Err(MeasureError::Singular {
                 first,
@@ -235,7 +234,8 @@ impl NormalEquations {
         }
         let mut shares = vec![0.0; self.sources.len()];
         for (a, &unknown) in used.iter().enumerate() {
-            let source = if unknown < self.sources.len() { unknown } else { self.slopes[unknown - self.sources.len()] };
+            let source =
+                if unknown < self.sources.len() { unknown } else { self.slopes[unknown - self.sources.len()] };
             shares[source] += eigen.eigenvectors[(a, at)].powi(2);
         }
         let mut order: Vec<usize> = (0..shares.len()).collect();

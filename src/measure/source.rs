@@ -45,6 +45,8 @@ pub struct Source {
     pub direction: Direction,
     /// Error of the place towards East and North on the sky, radians; `None` for a place that was given.
     pub place_error: Option<[f64; 2]>,
+    /// Frequency of the flux density, Hz.
+    pub reference_hz: Option<f64>,
     /// Integrated flux density on the flat sky at the reference frequency, Jy.
     pub flux_jy: Option<f64>,
     /// Its error, Jy.
@@ -80,6 +82,7 @@ impl Source {
             name: name.to_owned(),
             direction,
             place_error: None,
+            reference_hz: None,
             flux_jy: None,
             flux_error_jy: None,
             peak_jy: None,

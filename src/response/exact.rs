@@ -100,7 +100,14 @@ impl Exact {
         [first, second]
     }
 
-    pub(super) fn product(&self, voltages: &[Vec<Vec<Complex64>>; 2], seen: Seen, p: usize, q: usize, at: usize) -> Complex64 {
+    pub(super) fn product(
+        &self,
+        voltages: &[Vec<Vec<Complex64>>; 2],
+        seen: Seen,
+        p: usize,
+        q: usize,
+        at: usize,
+    ) -> Complex64 {
         let of = |feed: usize| voltages[feed][p][at] * voltages[feed][q][at].conj();
         match seen {
             Seen::Feed(feed) => of(feed),

@@ -89,13 +89,13 @@ fn word<T: Copy>(choices: &[(&str, T)]) -> impl Fn(&DeValue) -> Option<T> {
 }
 
 pub(super) fn read_measure(section: &Section) -> Measure {
-    let positions = section.optional("positions", "the name of a CSV list of positions (name, ra_deg, dec_deg)", text);
+    let positions =
+        section.optional("positions", "the name of a CSV list of positions (name, ra_deg, dec_deg)", text);
     let multiple = "a multiple of the local noise, greater than 0 and at most 1000000";
     let level = || number(|m| m > 0.0 && m <= 1e6);
     let find = section.or("find_above_noise", DEFAULT_FIND, multiple, level());
     // an island may not stand higher than the peaks it holds: the default gives way, a contradiction is told
-    let island =
-        section.or("island_above_noise", DEFAULT_ISLAND.min(find.value), multiple, level());
+    let island = section.or("island_above_noise", DEFAULT_ISLAND.min(find.value), multiple, level());
     if island.value > find.value {
         let problem = Problem::Conflict {
             found: format!("islands above {} times the noise, peaks above {}", island.value, find.value),
@@ -106,7 +106,8 @@ pub(super) fn read_measure(section: &Section) -> Measure {
     let shapes = [("auto", SourceShape::Auto), ("point", SourceShape::Point), ("gaussian", SourceShape::Gaussian)];
     let shape = section.or("shape", SourceShape::Auto, "\"auto\", \"point\" or \"gaussian\"", word(&shapes));
     let places = [("visibilities", FluxesFrom::Visibilities), ("image", FluxesFrom::Image)];
-    let fluxes = section.or("fluxes_from", FluxesFrom::Visibilities, "\"visibilities\" or \"image\"", word(&places));
+    let fluxes =
+        section.or("fluxes_from", FluxesFrom::Visibilities, "\"visibilities\" or \"image\"", word(&places));
     let kinds = [("covariance", FitErrors::Covariance), ("condon", FitErrors::Condon)];
     let errors = section.or("errors", FitErrors::Covariance, "\"covariance\" or \"condon\"", word(&kinds));
     let index_error = section.or(

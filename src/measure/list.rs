@@ -1,0 +1,217 @@
+//! A list of sources completed: flux densities from the visibilities, noise and response from the weight map, pointings.
+
+use super::fit::height_at;
+use super::joint::{JointFluxes, JointOptions, Reading, joint_fluxes, survey};
+use super::normal::Seen;
+use super::{Ellipse, MeasureError, Method, Source};
+use crate::imaging::beam_fit::FittedBeam;
+use crate::response::UnitSource;
+use crate::sky::{Direction, ImageGeometry};
+use nalgebra::DMatrix;
+use ndarray::ArrayView2;
+
+/// How a list is completed.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub struct ListOptions {
+    /// Frequency that flux densities are given at: that of the image's header, Hz.
+    pub reference_hz: f64,
+    /// Spectral indices are fitted where their error would not pass this; 0 fits none.
+    pub index_error: f64,
+    /// Root mean square beam product from which on a pointing counts as seeing a source.
+    pub lowest_response: f64,
+    /// Signal to noise that the joint fit must confirm, or the source is taken for a side lobe and left out; `None` for
+    /// places that were given, which all stay.
+    pub confirm: Option<f64>,
+}
+
+/// What the joint fit of a list amounts to.
+#[derive(Debug, Clone)]
+pub struct ListFluxes {
+    /// Covariance of the flux densities in the order of the list, Jy²; NaN for those not measured.
+    pub covariance: DMatrix<f64>,
+    /// Σ ω|v − M x|² over data less unknowns.
+    pub reduced_misfit: f64,
+    /// Number of real data.
+    pub data: u64,
+    /// Times the visibilities were read.
+    pub passes: usize,
+    /// Sources left out because the visibilities do not confirm them.
+    pub unconfirmed: usize,
+    /// Pairs that could not be told apart: (the one that holds the flux, the other).
+    pub merged: Vec<(String, String)>,
+}
+
+/// Factor from which on a source's error counts as widened by its neighbours.
+const WIDENED: f64 = 1.5;
+
+fn units(sources: &[Source], reference_hz: f64) -> Vec<UnitSource> {
+    let unit = |source: &Source| UnitSource {
+        direction: source.direction,
+        shape: match (source.method, &source.deconvolved) {
+            (Method::ImageGaussian, Some(shape)) => shape.covariance(),
+            _ => [0.0; 3],
+        },
+        reference_hz,
+        spectral_index: source.spectral_index,
+    };
+    sources.iter().map(unit).collect()
+}
+
+fn count_pointings(seen: &[Seen], source: usize, lowest: f64) -> usize {
+    seen.iter().filter(|pointing| pointing.response(source) > 0.0 && pointing.response(source) >= lowest).count()
+}
+
+/// Flux densities, and spectral indices where they can be had, of all sources of the list by joint least squares on the
+/// visibilities. Sources with a deconvolved size enter with it, held; the error of their flux density is then no less than
+/// the relative one of the image's fit, which knows that the size is uncertain.
+///
+/// # Errors
+/// When the visibilities cannot be read, or sums are no numbers.
+pub fn fluxes_from_visibilities(
+    sources: &mut Vec<Source>,
+    pointings: &mut [Reading],
+    options: &ListOptions,
+    mut rows: impl FnMut(u64),
+) -> Result<ListFluxes, MeasureError> {
+    let mut unconfirmed = 0;
+    let mut passes = 0;
+    let mut fit = |sources: &[Source], index_error: f64| -> Result<JointFluxes, MeasureError> {
+        joint_fluxes(pointings, &units(sources, options.reference_hz), JointOptions { index_error }, &mut rows)
+    };
+    if let Some(level) = options.confirm {
+        // the false ones first go, and only then are spectra fitted: one that soaks up its neighbours' flux spoils theirs
+        loop {
+            let joint = fit(sources, 0.0)?;
+            passes += joint.passes;
+            let mut keep = joint
+                .flux
+                .iter()
+                .zip(&joint.merged_into)
+                .map(|(&(flux, error), merged)| merged.is_none() && flux >= level * error)
+                .collect::<Vec<bool>>()
+                .into_iter();
+            let before = sources.len();
+            sources.retain(|_| keep.next().unwrap_or(true));
+            unconfirmed += before - sources.len();
+            if sources.len() == before {
+                break;
+            }
+        }
+    }
+    let joint = fit(sources, options.index_error)?;
+    passes += joint.passes;
+    let names: Vec<String> = sources.iter().map(|s| s.name.clone()).collect();
+    let mut merged = Vec::new();
+    for (index, source) in sources.iter_mut().enumerate() {
+        let (flux, error) = joint.flux[index];
+        source.pointings = count_pointings(&joint.seen, index, options.lowest_response);
+        source.reference_hz = Some(options.reference_hz);
+        if let Some((fitted, error)) = joint.index[index] {
+            source.spectral_index = fitted;
+            source.spectral_index_error = Some(error);
+        }
+        if let Some(holder) = joint.merged_into[index] {
+            source.remarks.push(format!("cannot be told apart from {0}: its flux is in {0}", names[holder]));
+            merged.push((names[holder].clone(), names[index].clone()));
+            (source.flux_jy, source.flux_error_jy) = (None, None);
+        } else if flux.is_nan() {
+            source.remarks.push("seen by no visibility".to_owned());
+            (source.flux_jy, source.flux_error_jy) = (None, None);
+        } else {
+            let image = source.flux_jy.zip(source.flux_error_jy).filter(|_| source.method == Method::ImageGaussian);
+            let of_shape = image.map_or(0.0, |(flux_in_image, error)| error / flux_in_image * flux);
+            source.flux_jy = Some(flux);
+            source.flux_error_jy = Some(error.max(of_shape.abs()));
+            if joint.widened[index] > WIDENED {
+                source.remarks.push(format!("error widened {:.1} times by neighbours", joint.widened[index]));
+            }
+        }
+        source.method = Method::Visibilities;
+        let weight = joint.weight[index];
+        if source.noise_jy.is_none() && weight > 0.0 {
+            // off the image: as natural weights have it
+            source.noise_jy = Some(1.0 / weight.sqrt());
+        }
+    }
+    for (holder, other) in &merged {
+        if let Some(source) = sources.iter_mut().find(|s| s.name == *holder) {
+            source.remarks.push(format!("holds the flux of {other} too"));
+        }
+    }
+    Ok(ListFluxes {
+        covariance: joint.covariance,
+        reduced_misfit: joint.reduced_misfit,
+        data: joint.data,
+        passes,
+        unconfirmed,
+        merged,
+    })
+}
+
+/// Completes sources measured in the image: pointings that see them and, unless `at_reference` says that the image already
+/// stands at the reference frequency everywhere (it was made with spectral terms), flux densities brought from the
+/// frequency that N/W has at their place to the reference frequency, with their assumed spectral index.
+///
+/// # Errors
+/// When the visibilities cannot be read.
+pub fn survey_visibilities(
+    sources: &mut [Source],
+    pointings: &mut [Reading],
+    options: &ListOptions,
+    at_reference: bool,
+    rows: impl FnMut(u64),
+) -> Result<(), MeasureError> {
+    let survey = survey(pointings, &units(sources, options.reference_hz), rows)?;
+    for (index, source) in sources.iter_mut().enumerate() {
+        source.pointings = count_pointings(survey.seen(), index, options.lowest_response);
+        source.reference_hz = Some(options.reference_hz);
+        if let Some(hz) = survey.effective_hz(index).filter(|_| !at_reference) {
+            let factor = (options.reference_hz / hz).powf(source.spectral_index);
+            source.flux_jy = source.flux_jy.map(|flux| flux * factor);
+            source.flux_error_jy = source.flux_error_jy.map(|error| error * factor);
+        }
+    }
+    Ok(())
+}
+
+/// Between pixels, linearly; `None` off the image or beside a blank pixel.
+fn between(image: ArrayView2<f64>, x: f64, y: f64) -> Option<f64> {
+    let (height, width) = image.dim();
+    let (x0, y0) = (x.floor(), y.floor());
+    if !(x0 >= 0.0 && y0 >= 0.0 && x <= (width - 1) as f64 && y <= (height - 1) as f64) {
+        return None;
+    }
+    let (fx, fy) = (x - x0, y - y0);
+    let mut sum = 0.0;
+    for (dx, dy, share) in
+        [(0, 0, (1.0 - fx) * (1.0 - fy)), (1, 0, fx * (1.0 - fy)), (0, 1, (1.0 - fx) * fy), (1, 1, fx * fy)]
+    {
+        if share > 0.0 {
+            sum += share * image[[y0 as usize + dy, x0 as usize + dx]];
+        }
+    }
+    sum.is_finite().then_some(sum)
+}
+
+/// Reads noise, response and, where no fit gave one, peak of every source off the image and its weight map (inverse
+/// variance). Sources off the image get none.
+pub fn read_maps(
+    sources: &mut [Source],
+    image: ArrayView2<f64>,
+    weight: ArrayView2<f64>,
+    geometry: &ImageGeometry,
+    beam: Option<&FittedBeam>,
+) {
+    let most = weight.iter().copied().filter(|w| w.is_finite()).fold(0.0, f64::max);
+    let place = |direction: Direction| geometry.pixel_of(direction);
+    for source in sources {
+        let Some((x, y)) = place(source.direction) else { continue };
+        if let Some(w) = between(weight, x, y).filter(|&w| w > 0.0) {
+            source.noise_jy = Some(1.0 / w.sqrt());
+            source.response = Some((w / most).sqrt());
+        }
+        if let (None, Some(beam)) = (source.peak_jy, beam) {
+            source.peak_jy = height_at(image, &Ellipse::from(beam).scaled(1.0 / geometry.pixel), x, y);
+        }
+    }
+}
