@@ -96,6 +96,8 @@ pub(super) fn measure(
         index_error: settings.spectral_index_error.value,
         lowest_response: request.lowest_response,
         // one error less than the peak had to have: the fit at the fitted place scatters about it
+        wander: request.positions.is_none().then(|| plates.beam.map(|beam| 0.5 * beam.minor)).flatten(),
+        frame: plates.geometry.frame(),
         confirm: request.positions.is_none().then(|| (settings.find_above_noise.value - 1.0).max(0.0)),
     };
     let mut pointings: Vec<Reading> =

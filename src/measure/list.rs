@@ -6,7 +6,7 @@ use super::normal::Seen;
 use super::{Ellipse, MeasureError, Method, Source};
 use crate::imaging::beam_fit::FittedBeam;
 use crate::response::UnitSource;
-use crate::sky::{Direction, ImageGeometry};
+use crate::sky::{Direction, ImageGeometry, TangentFrame};
 use nalgebra::DMatrix;
 use ndarray::ArrayView2;
 
@@ -22,6 +22,10 @@ pub struct ListOptions {
     /// Signal to noise that the joint fit must confirm, or the source is taken for a side lobe and left out; `None` for
     /// places that were given, which all stay.
     pub confirm: Option<f64>,
+    /// Places are fitted to the visibilities too, within this angle (radians) of those of the image; `None` holds them.
+    pub wander: Option<f64>,
+    /// The image's frame.
+    pub frame: TangentFrame,
 }
 
 /// What the joint fit of a list amounts to.
@@ -75,13 +79,14 @@ pub fn fluxes_from_visibilities(
 ) -> Result<ListFluxes, MeasureError> {
     let mut unconfirmed = 0;
     let mut passes = 0;
-    let mut fit = |sources: &[Source], index_error: f64| -> Result<JointFluxes, MeasureError> {
-        joint_fluxes(pointings, &units(sources, options.reference_hz), JointOptions { index_error }, &mut rows)
+    let mut fit = |sources: &[Source], index_error: f64, wander| -> Result<JointFluxes, MeasureError> {
+        let joint = JointOptions { index_error, wander, frame: options.frame };
+        joint_fluxes(pointings, &units(sources, options.reference_hz), joint, &mut rows)
     };
     if let Some(level) = options.confirm {
         // the false ones first go, and only then are spectra fitted: one that soaks up its neighbours' flux spoils theirs
         loop {
-            let joint = fit(sources, 0.0)?;
+            let joint = fit(sources, 0.0, None)?;
             passes += joint.passes;
             let mut keep = joint
                 .flux
@@ -98,8 +103,18 @@ pub fn fluxes_from_visibilities(
             }
         }
     }
-    let joint = fit(sources, options.index_error)?;
+    let joint = fit(sources, options.index_error, options.wander)?;
     passes += joint.passes;
+    for (source, place) in sources.iter_mut().zip(&joint.place) {
+        if let Some((direction, [by_l, by_m])) = place {
+            source.direction = *direction;
+            // l and m are foreshortened away from the image's centre: these errors are small by 1 − n at most
+            source.place_error = Some([*by_l, *by_m]);
+        }
+    }
+    if options.wander.is_some() {
+        super::name_sources(sources);
+    }
     let names: Vec<String> = sources.iter().map(|s| s.name.clone()).collect();
     let mut merged = Vec::new();
     for (index, source) in sources.iter_mut().enumerate() {

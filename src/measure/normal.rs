@@ -13,6 +13,7 @@ use crate::observation::{Block, BlockSource};
 use crate::response::{Columns, Exact, TimeRows, UnitSource, UnitSources};
 use nalgebra::{DMatrix, DVector};
 use rayon::prelude::*;
+use std::f64::consts::TAU;
 
 /// Shares of a block summed side by side; fixed, so that the order of every sum does not depend on the threads. Fewer for
 /// many unknowns, whose matrices would fill the memory.
@@ -42,6 +43,8 @@ pub struct NormalEquations {
     sources: Vec<UnitSource>,
     /// Sources that have a second unknown: the slope by ln ν.
     slopes: Vec<usize>,
+    /// Sources that have two more unknowns: the place.
+    places: Vec<usize>,
     matrix: DMatrix<f64>,
     right: DVector<f64>,
     /// Σ ω |v|².
@@ -56,9 +59,10 @@ pub struct NormalEquations {
 impl NormalEquations {
     /// Equations for the flux densities of `sources` at their reference frequencies, and for those whose indices are in
     /// `slopes` (ascending) also for S·δα, the change of the spectral index: to first order
-    /// S (ν/ν₀)^(α+δα) = S (ν/ν₀)^α + S δα ln(ν/ν₀) (ν/ν₀)^α. The unknowns stand in this order.
-    pub fn new(sources: Vec<UnitSource>, slopes: Vec<usize>) -> Self {
-        let unknowns = sources.len() + slopes.len();
+    /// S (ν/ν₀)^(α+δα) = S (ν/ν₀)^α + S δα ln(ν/ν₀) (ν/ν₀)^α; and for those in `places` also for S·δl and S·δm, the way in
+    /// direction cosines of the image. The unknowns stand in this order, all δl before all δm.
+    pub fn new(sources: Vec<UnitSource>, slopes: Vec<usize>, places: Vec<usize>) -> Self {
+        let unknowns = sources.len() + slopes.len() + 2 * places.len();
         NormalEquations {
             matrix: DMatrix::zeros(unknowns, unknowns),
             right: DVector::zeros(unknowns),
@@ -69,12 +73,13 @@ impl NormalEquations {
             with_matrix: true,
             sources,
             slopes,
+            places,
         }
     }
 
     /// Only what each pointing knows of each source, at a fraction of the cost: no equations.
     pub fn survey(sources: Vec<UnitSource>) -> Self {
-        NormalEquations { with_matrix: false, ..NormalEquations::new(sources, Vec::new()) }
+        NormalEquations { with_matrix: false, ..NormalEquations::new(sources, Vec::new(), Vec::new()) }
     }
 
     /// Adds all visibilities of a pointing. `rows` is told the number of rows as they are done.
@@ -217,6 +222,16 @@ impl NormalEquations {
         Ok(Solution { x, covariance })
     }
 
+    /// The source that an unknown belongs to.
+    pub fn source_of(&self, unknown: usize) -> usize {
+        let (fluxes, slopes, places) = (self.sources.len(), self.slopes.len(), self.places.len());
+        match unknown {
+            flux if flux < fluxes => flux,
+            slope if slope < fluxes + slopes => self.slopes[slope - fluxes],
+            place => self.places[(place - fluxes - slopes) % places.max(1)],
+        }
+    }
+
     /// H_ij / √(H_ii H_jj): 1 for sources that no visibility tells apart, in effect the point spread function between them.
     pub fn overlap(&self, first: usize, second: usize) -> f64 {
         self.matrix[(first, second)] / (self.matrix[(first, first)] * self.matrix[(second, second)]).sqrt()
@@ -320,6 +335,16 @@ impl Part {
             for (i, &s) in equations.slopes.iter().enumerate() {
                 rows[(2 * k, count + i)] = rows[(2 * k, s)] * logs[s];
                 rows[(2 * k + 1, count + i)] = rows[(2 * k + 1, s)] * logs[s];
+            }
+            let (first, many) = (count + equations.slopes.len(), equations.places.len());
+            for (i, &s) in equations.places.iter().enumerate() {
+                let slopes = columns.phase_slopes[k * count + s];
+                for (axis, slope) in slopes.iter().enumerate() {
+                    // −2πi u' M
+                    let (re, im) = (rows[(2 * k, s)], rows[(2 * k + 1, s)]);
+                    rows[(2 * k, first + axis * many + i)] = TAU * slope * im;
+                    rows[(2 * k + 1, first + axis * many + i)] = -TAU * slope * re;
+                }
             }
         }
         self.matrix.gemm_tr(1.0, &rows, &rows, 1.0);

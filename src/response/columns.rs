@@ -88,6 +88,9 @@ pub struct Columns {
     pub model: Vec<Complex64>,
     /// |A|² of the same, `[sample][source]`.
     pub beam_power: Vec<f64>,
+    /// (u', v') in wavelengths, `[sample][source]`: the derivatives of M by the place of a source are −2πi u' M and −2πi v' M
+    /// (the beam is taken not to change over such small ways).
+    pub phase_slopes: Vec<[f64; 2]>,
     /// Data: mean over the hands that see the same beam product, weighted, Jy. One for each sample.
     pub data: Vec<Complex64>,
     /// Sum of the weights of those hands, Jy⁻².
@@ -132,16 +135,17 @@ impl Exact {
                     let a = self.product(&voltages, *seen, p, q, index);
                     let [l, m, n1] = point.lmn1;
                     let fringe = cis_turns(-k * (turned.shift_m + u * l + v * m + w * n1));
+                    let n = 1.0 + n1;
+                    let (ul, vm) = (k * (u - w * l / n), k * (v - w * m / n));
                     let envelope = if *shape == [0.0; 3] {
                         1.0
                     } else {
-                        let n = 1.0 + n1;
-                        let (ul, vm) = (k * (u - w * l / n), k * (v - w * m / n));
                         let spread = shape[0] * ul * ul + 2.0 * shape[1] * ul * vm + shape[2] * vm * vm;
                         (-2.0 * PI * PI * spread).exp()
                     };
                     out.model.push(a * fringe * envelope);
                     out.beam_power.push(a.norm_sqr());
+                    out.phase_slopes.push([ul, vm]);
                 }
                 out.data.push(value / weight);
                 out.weight.push(weight);
