@@ -90,7 +90,6 @@ pub(super) fn measure(
             Vec::new()
         }
     };
-    read_maps(&mut sources, plates.image.view(), plates.weight.view(), &plates.geometry, plates.beam);
     let options = ListOptions {
         reference_hz: plates.reference_hz,
         index_error: settings.spectral_index_error.value,
@@ -112,6 +111,7 @@ pub(super) fn measure(
             None
         }
     };
+    read_maps(&mut sources, plates.image.view(), plates.weight.view(), &plates.geometry, plates.beam);
     let how = match (&request.positions, settings.fluxes_from) {
         (Some(_), _) => "places given, flux densities from the visibilities".to_owned(),
         (None, FluxesFrom::Visibilities) => {
@@ -141,6 +141,8 @@ fn find(settings: &Measure, plates: &Plates, beam: &FittedBeam, warnings: &mut V
         find_above_noise: settings.find_above_noise.value,
         island_above_noise: settings.island_above_noise.value,
         shapes: match settings.shape {
+            // side lobes of neighbours widen what they cover: sizes in a dirty image mean nothing
+            SourceShape::Auto if plates.name == "dirty" => Shapes::Point,
             SourceShape::Auto => Shapes::Auto,
             SourceShape::Point => Shapes::Point,
             SourceShape::Gaussian => Shapes::Gaussian,

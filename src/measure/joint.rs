@@ -45,7 +45,9 @@ pub struct JointFluxes {
     pub weight: Vec<f64>,
     /// What each pointing knows of each source.
     pub seen: Vec<Seen>,
-    /// Σ ω|v − M x|² over the number of data less that of unknowns: 1 when sources, beams and weights are right.
+    /// Σ ω|v − M x|²: χ² of the fit.
+    pub misfit: f64,
+    /// The same over the number of data less that of unknowns: 1 when sources, beams and weights are right.
     pub reduced_misfit: f64,
     /// Number of real data.
     pub data: u64,
@@ -259,6 +261,7 @@ impl State {
             widened: vec![nan; count],
             weight: holders.iter().map(|h| h.map_or(0.0, |h| equations.weight_at(h))).collect(),
             seen: equations.seen().iter().map(of_seen).collect(),
+            misfit: equations.misfit(&solution.x),
             reduced_misfit: equations.misfit(&solution.x)
                 / (equations.data_count() as f64 - solution.x.len() as f64).max(1.0),
             data: equations.data_count(),

@@ -41,8 +41,42 @@ pub struct ListFluxes {
     pub passes: usize,
     /// Sources left out because the visibilities do not confirm them.
     pub unconfirmed: usize,
+    /// Sources that the visibilities part in two where the image has one.
+    pub split: usize,
     /// Pairs that could not be told apart: (the one that holds the flux, the other).
     pub merged: Vec<(String, String)>,
+}
+
+/// Sources that are tried as two points, those of the highest signal to noise.
+const MOST_TRIED: usize = 20;
+/// By how much χ² must fall for two points to be better than a Gaussian of held shape. The two have three free numbers more,
+/// by which chance lowers it less than this in 99 of 100 cases (χ² of three degrees of freedom: 11.3).
+const BETTER: f64 = 12.0;
+
+/// Sources with a size, highest signal to noise first.
+fn wide_sources(sources: &[Source], joint: &JointFluxes) -> Vec<usize> {
+    let signal = |&index: &usize| joint.flux[index].0 / joint.flux[index].1;
+    let mut wide: Vec<usize> = (0..sources.len())
+        .filter(|&i| sources[i].method == Method::ImageGaussian && sources[i].deconvolved.is_some())
+        .filter(|i| signal(i).is_finite())
+        .collect();
+    wide.sort_by(|a, b| signal(b).total_cmp(&signal(a)).then(a.cmp(b)));
+    wide.truncate(MOST_TRIED);
+    wide
+}
+
+/// A source as two points of half its flux each, whose second moment along its major axis is the source's.
+fn two_points(source: &Source, frame: &TangentFrame) -> [Source; 2] {
+    let shape = source.deconvolved.map_or([0.0; 3], |shape| Ellipse { minor: 0.0, ..shape }.covariance());
+    let [l, m, _] = frame.lmn(source.direction);
+    let (dl, dm) = (shape[0].sqrt(), shape[2].sqrt() * if shape[1] < 0.0 { -1.0 } else { 1.0 });
+    [1.0, -1.0].map(|sign| {
+        let direction = frame.direction(l + sign * dl, m + sign * dm).unwrap_or(source.direction);
+        let mut point = Source::at(&source.name, direction, source.spectral_index);
+        point.remarks = source.remarks.iter().filter(|r| *r != "resolved").cloned().collect();
+        point.remarks.push("two points in one peak of the image".to_owned());
+        point
+    })
 }
 
 /// Factor from which on a source's error counts as widened by its neighbours.
@@ -103,8 +137,29 @@ pub fn fluxes_from_visibilities(
             }
         }
     }
-    let joint = fit(sources, options.index_error, options.wander)?;
+    let mut joint = fit(sources, options.index_error, options.wander)?;
     passes += joint.passes;
+    let mut split = 0;
+    if options.wander.is_some() {
+        for index in wide_sources(sources, &joint) {
+            let mut trial = sources.clone();
+            let [one, other] = two_points(&sources[index], &options.frame);
+            trial[index] = one;
+            trial.push(other);
+            let two = fit(&trial, options.index_error, options.wander)?;
+            passes += two.passes;
+            let last = trial.len() - 1;
+            let stands = |at: usize| {
+                let (flux, error) = two.flux[at];
+                two.merged_into[at].is_none() && flux > options.confirm.unwrap_or(0.0) * error
+            };
+            if two.misfit + BETTER < joint.misfit && stands(index) && stands(last) {
+                *sources = trial;
+                joint = two;
+                split += 1;
+            }
+        }
+    }
     for (source, place) in sources.iter_mut().zip(&joint.place) {
         if let Some((direction, [by_l, by_m])) = place {
             source.direction = *direction;
@@ -159,6 +214,7 @@ pub fn fluxes_from_visibilities(
         data: joint.data,
         passes,
         unconfirmed,
+        split,
         merged,
     })
 }
