@@ -302,7 +302,7 @@ fn sources_of_a_restored_mosaic() {
         let options = scene.list_options();
         let mut pointings = std::mem::take(&mut scene.pointings);
         let mut readings: Vec<Reading> =
-            pointings.iter_mut().map(|(exact, source)| Reading { exact, source }).collect();
+            pointings.iter_mut().map(|(exact, source)| Reading { exact, source, imager: None }).collect();
         let list = fluxes_from_visibilities(&mut found, &mut readings, &options, |_| {}).unwrap();
         println!("misfit {:.4}, {} passes, {} unconfirmed", list.reduced_misfit, list.passes, list.unconfirmed);
         for (c, source) in scene.sky.iter().zip(scene.matched(&found)) {
@@ -343,7 +343,7 @@ fn image_fluxes_are_brought_to_the_reference_frequency() {
         })
         .collect();
     let mut readings: Vec<Reading> =
-        pointings.iter_mut().map(|(exact, source)| Reading { exact, source }).collect();
+        pointings.iter_mut().map(|(exact, source)| Reading { exact, source, imager: None }).collect();
     survey_visibilities(&mut sources, &mut readings, &options, false, |_| {}).unwrap();
     // what N/W has of a source of 1 Jy at the reference frequency, by direct sums of its own prediction
     for index in [2, 11, 19] {

@@ -75,7 +75,7 @@ fn pointings(kind: &str, with_beams: bool) -> Vec<(Exact, MemorySource)> {
 }
 
 fn readings(pointings: &mut [(Exact, MemorySource)]) -> Vec<Reading<'_>> {
-    pointings.iter_mut().map(|(exact, source)| Reading { exact, source }).collect()
+    pointings.iter_mut().map(|(exact, source)| Reading { exact, source, imager: None }).collect()
 }
 
 fn units(sky: &[Component]) -> Vec<UnitSource> {
@@ -355,7 +355,8 @@ fn columns_are_the_exact_response() {
     let mut source = MemorySource::new(scene.observation, vec![block]);
     let mut equations = NormalEquations::new(sources.clone(), Vec::new(), Vec::new());
     equations.add(&exact, &mut source, |_| {}).unwrap();
-    let looked = survey(&mut [Reading { exact: &exact, source: &mut source }], &sources, |_| {}).unwrap();
+    let looked =
+        survey(&mut [Reading { exact: &exact, source: &mut source, imager: None }], &sources, |_| {}).unwrap();
     let wanted = exact.adjoint_at(&mut source, &[sky[2].direction]).unwrap()[0].1;
     assert!((looked.weight_at(2) / wanted - 1.0).abs() < 1e-12 && looked.seen() == equations.seen());
     let solution = equations.solve().unwrap();

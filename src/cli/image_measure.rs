@@ -5,8 +5,8 @@ use crate::fits::Header;
 use crate::imaging::Mosaic;
 use crate::imaging::beam_fit::FittedBeam;
 use crate::measure::{
-    Correlation, Errors, FindOptions, ListFluxes, ListOptions, Position, PositionsError, Reading, Shapes, Source,
-    find_sources, fluxes_from_visibilities, read_maps, read_positions, survey_visibilities,
+    Correlation, Errors, FindOptions, ListFluxes, ListOptions, Position, PositionsError, Reading, Search, Shapes,
+    Source, find_sources, fluxes_from_visibilities, read_maps, read_positions, survey_visibilities,
 };
 use crate::report::{
     Measured, Product, SourcesError, source_headings, write_covariance, write_source_csv, write_source_fits,
@@ -76,6 +76,8 @@ pub(super) fn measure(
 ) -> Result<Measurement, CliError> {
     let settings = &request.settings;
     let mut warnings = Vec::new();
+    let dirty = plates.name == "dirty";
+    let in_rounds = settings.fluxes_from == FluxesFrom::Visibilities && settings.rounds.value > 0;
     let mut sources = match (&request.positions, plates.beam) {
         (Some(positions), _) => positions
             .iter()
@@ -83,6 +85,8 @@ pub(super) fn measure(
                 Source::at(&p.name, p.direction, p.spectral_index.unwrap_or(settings.assumed_spectral_index.value))
             })
             .collect(),
+        // a dirty image is its own first residual: peaks come from the rounds, highest first, side lobes never
+        (None, Some(_)) if dirty && in_rounds => Vec::new(),
         (None, Some(beam)) => find(settings, plates, beam, &mut warnings),
         (None, None) => {
             warnings
@@ -97,10 +101,19 @@ pub(super) fn measure(
         // one error less than the peak had to have: the fit at the fitted place scatters about it
         wander: request.positions.is_none().then(|| plates.beam.map(|beam| 0.5 * beam.minor)).flatten(),
         frame: plates.geometry.frame(),
+        search: request.positions.is_none().then_some(Search {
+            rounds: settings.rounds.value,
+            find_above_noise: settings.find_above_noise.value,
+            geometry: plates.geometry,
+            spectral_index: settings.assumed_spectral_index.value,
+        }),
         confirm: request.positions.is_none().then(|| (settings.find_above_noise.value - 1.0).max(0.0)),
     };
-    let mut pointings: Vec<Reading> =
-        mosaic.pointings_mut().iter_mut().map(|p| Reading { exact: &p.exact, source: p.source.as_mut() }).collect();
+    let mut pointings: Vec<Reading> = mosaic
+        .pointings_mut()
+        .iter_mut()
+        .map(|p| Reading { exact: &p.exact, source: p.source.as_mut(), imager: Some(&p.gridded) })
+        .collect();
     let told = |error| CliError::Command(Box::new(error));
     let joint = match settings.fluxes_from {
         FluxesFrom::Visibilities => {

@@ -14,7 +14,7 @@ use std::f64::consts::{FRAC_PI_2, PI};
 
 /// How far a peak must rise above the saddle to a higher one: twice the noise, and a fiftieth of itself (a deconvolved
 /// image holds ripples of its bright sources). Common practice, no source.
-const RISE: Rise = Rise { noise: 2.0, fraction: 0.02 };
+pub(super) const RISE: Rise = Rise { noise: 2.0, fraction: 0.02 };
 
 /// How errors are reckoned.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]

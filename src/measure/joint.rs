@@ -3,7 +3,7 @@
 use super::MeasureError;
 use super::normal::{NormalEquations, Seen, Solution};
 use crate::observation::BlockSource;
-use crate::response::{Exact, UnitSource};
+use crate::response::{Exact, Response, UnitSource};
 use crate::sky::{Direction, TangentFrame};
 use nalgebra::DMatrix;
 
@@ -13,6 +13,8 @@ pub struct Reading<'a> {
     pub exact: &'a Exact,
     /// The visibilities.
     pub source: &'a mut dyn BlockSource,
+    /// What grids the residual for further searches; `None` to go without.
+    pub imager: Option<&'a dyn Response>,
 }
 
 /// How flux densities are fitted.

@@ -1,11 +1,15 @@
 //! A list of sources completed: flux densities from the visibilities, noise and response from the weight map, pointings.
 
 use super::fit::height_at;
+use super::found::RISE;
+use super::islands::{Peak, peaks};
 use super::joint::{JointFluxes, JointOptions, Reading, joint_fluxes, survey};
 use super::normal::Seen;
 use super::{Ellipse, MeasureError, Method, Source};
 use crate::imaging::beam_fit::FittedBeam;
-use crate::response::UnitSource;
+use crate::imaging::flat_noise;
+use crate::observation::{Block, Watched};
+use crate::response::{Sums, UnitSource};
 use crate::sky::{Direction, ImageGeometry, TangentFrame};
 use nalgebra::DMatrix;
 use ndarray::ArrayView2;
@@ -26,6 +30,21 @@ pub struct ListOptions {
     pub wander: Option<f64>,
     /// The image's frame.
     pub frame: TangentFrame,
+    /// Further searches in the residual; needs an imager in every [`Reading`].
+    pub search: Option<Search>,
+}
+
+/// Further searches in what the model leaves of the visibilities.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub struct Search {
+    /// Most rounds.
+    pub rounds: usize,
+    /// Lowest peak of the residual, in multiples of its noise.
+    pub find_above_noise: f64,
+    /// The pixel grid of the imagers.
+    pub geometry: ImageGeometry,
+    /// Spectral index that new sources are taken to have.
+    pub spectral_index: f64,
 }
 
 /// What the joint fit of a list amounts to.
@@ -43,6 +62,8 @@ pub struct ListFluxes {
     pub unconfirmed: usize,
     /// Sources that the visibilities part in two where the image has one.
     pub split: usize,
+    /// Sources found in residuals.
+    pub added: usize,
     /// Pairs that could not be told apart: (the one that holds the flux, the other).
     pub merged: Vec<(String, String)>,
 }
@@ -103,25 +124,84 @@ fn count_pointings(seen: &[Seen], source: usize, lowest: f64) -> usize {
 /// visibilities. Sources with a deconvolved size enter with it, held; the error of their flux density is then no less than
 /// the relative one of the image's fit, which knows that the size is uncertain.
 ///
+/// With `options.search`, peaks of what the model leaves are added to the list and all is fitted again, in rounds, until
+/// nothing stands out: neighbours that the beam makes one peak come apart, and what hid beside bright sources shows.
+///
 /// # Errors
 /// When the visibilities cannot be read, or sums are no numbers.
 pub fn fluxes_from_visibilities(
     sources: &mut Vec<Source>,
     pointings: &mut [Reading],
     options: &ListOptions,
-    mut rows: impl FnMut(u64),
+    rows: impl FnMut(u64),
 ) -> Result<ListFluxes, MeasureError> {
-    let mut unconfirmed = 0;
-    let mut passes = 0;
-    let mut fit = |sources: &[Source], index_error: f64, wander| -> Result<JointFluxes, MeasureError> {
-        let joint = JointOptions { index_error, wander, frame: options.frame };
-        joint_fluxes(pointings, &units(sources, options.reference_hz), joint, &mut rows)
-    };
-    if let Some(level) = options.confirm {
-        // the false ones first go, and only then are spectra fitted: one that soaks up its neighbours' flux spoils theirs
+    let mut fitter = Fitter { pointings, options, rows, passes: 0, unconfirmed: 0, split: 0 };
+    fitter.confirm(sources)?;
+    let mut joint = fitter.refine(sources)?;
+    let mut added = 0;
+    if let Some(search) = &options.search {
+        for _ in 0..search.rounds {
+            let new = fitter.residual_peaks(sources, &joint, search)?;
+            if new.is_empty() {
+                break;
+            }
+            let before = sources.clone();
+            let (old, count) = (joint, new.len());
+            sources.extend(new);
+            fitter.confirm(sources)?;
+            joint = fitter.refine(sources)?;
+            // what was added must explain something, or rounds would go on adding and dropping it
+            if joint.misfit + BETTER >= old.misfit {
+                (*sources, joint) = (before, old);
+                break;
+            }
+            added += count;
+        }
+    }
+    let (passes, unconfirmed, split) = (fitter.passes, fitter.unconfirmed, fitter.split);
+    let merged = write_fluxes(sources, &joint, options);
+    Ok(ListFluxes {
+        covariance: joint.covariance,
+        reduced_misfit: joint.reduced_misfit,
+        data: joint.data,
+        passes,
+        unconfirmed,
+        split,
+        added,
+        merged,
+    })
+}
+
+/// The steps of [`fluxes_from_visibilities`].
+struct Fitter<'a, 'p, F> {
+    pointings: &'a mut [Reading<'p>],
+    options: &'a ListOptions,
+    rows: F,
+    passes: usize,
+    unconfirmed: usize,
+    split: usize,
+}
+
+impl<F: FnMut(u64)> Fitter<'_, '_, F> {
+    fn joint(
+        &mut self,
+        sources: &[Source],
+        index_error: f64,
+        wander: Option<f64>,
+    ) -> Result<JointFluxes, MeasureError> {
+        let options = JointOptions { index_error, wander, frame: self.options.frame };
+        let units = units(sources, self.options.reference_hz);
+        let joint = joint_fluxes(self.pointings, &units, options, &mut self.rows)?;
+        self.passes += joint.passes;
+        Ok(joint)
+    }
+
+    /// Leaves out sources that the visibilities do not confirm. They go before places and spectra are fitted: a false one
+    /// that soaks up its neighbours' flux spoils theirs.
+    fn confirm(&mut self, sources: &mut Vec<Source>) -> Result<(), MeasureError> {
+        let Some(level) = self.options.confirm else { return Ok(()) };
         loop {
-            let joint = fit(sources, 0.0, None)?;
-            passes += joint.passes;
+            let joint = self.joint(sources, 0.0, None)?;
             let mut keep = joint
                 .flux
                 .iter()
@@ -131,42 +211,93 @@ pub fn fluxes_from_visibilities(
                 .into_iter();
             let before = sources.len();
             sources.retain(|_| keep.next().unwrap_or(true));
-            unconfirmed += before - sources.len();
+            self.unconfirmed += before - sources.len();
             if sources.len() == before {
-                break;
+                return Ok(());
             }
         }
     }
-    let mut joint = fit(sources, options.index_error, options.wander)?;
-    passes += joint.passes;
-    let mut split = 0;
-    if options.wander.is_some() {
-        for index in wide_sources(sources, &joint) {
-            let mut trial = sources.clone();
-            let [one, other] = two_points(&sources[index], &options.frame);
-            trial[index] = one;
-            trial.push(other);
-            let two = fit(&trial, options.index_error, options.wander)?;
-            passes += two.passes;
-            let last = trial.len() - 1;
-            let stands = |at: usize| {
-                let (flux, error) = two.flux[at];
-                two.merged_into[at].is_none() && flux > options.confirm.unwrap_or(0.0) * error
-            };
-            if two.misfit + BETTER < joint.misfit && stands(index) && stands(last) {
-                *sources = trial;
-                joint = two;
-                split += 1;
+
+    /// Fits everything that is free, tries wide sources as two points, and moves the list to the fitted places.
+    fn refine(&mut self, sources: &mut Vec<Source>) -> Result<JointFluxes, MeasureError> {
+        let (index_error, wander) = (self.options.index_error, self.options.wander);
+        let mut joint = self.joint(sources, index_error, wander)?;
+        if wander.is_some() {
+            for index in wide_sources(sources, &joint) {
+                let mut trial = sources.clone();
+                let [one, other] = two_points(&sources[index], &self.options.frame);
+                trial[index] = one;
+                trial.push(other);
+                let two = self.joint(&trial, index_error, wander)?;
+                let stands = |at: usize| {
+                    let (flux, error) = two.flux[at];
+                    two.merged_into[at].is_none() && flux > self.options.confirm.unwrap_or(0.0) * error
+                };
+                if two.misfit + BETTER < joint.misfit && stands(index) && stands(trial.len() - 1) {
+                    *sources = trial;
+                    joint = two;
+                    self.split += 1;
+                }
             }
         }
-    }
-    for (source, place) in sources.iter_mut().zip(&joint.place) {
-        if let Some((direction, [by_l, by_m])) = place {
-            source.direction = *direction;
-            // l and m are foreshortened away from the image's centre: these errors are small by 1 − n at most
-            source.place_error = Some([*by_l, *by_m]);
+        for (source, place) in sources.iter_mut().zip(&joint.place) {
+            if let Some((direction, [by_l, by_m])) = place {
+                source.direction = *direction;
+                // l and m are foreshortened away from the image's centre: these errors are small by 1 − n at most
+                source.place_error = Some([*by_l, *by_m]);
+            }
         }
+        Ok(joint)
     }
+
+    /// Peaks of the residual, those that the side lobes of the highest could not make.
+    fn residual_peaks(
+        &mut self,
+        sources: &[Source],
+        joint: &JointFluxes,
+        search: &Search,
+    ) -> Result<Vec<Source>, MeasureError> {
+        let mut sums = Sums::zero(&search.geometry);
+        let mut model = units(sources, self.options.reference_hz);
+        for (unit, index) in model.iter_mut().zip(&joint.index) {
+            unit.spectral_index = index.map_or(unit.spectral_index, |(index, _)| index);
+        }
+        let fluxes: Vec<f64> = joint.flux.iter().map(|f| if f.0.is_finite() { f.0 } else { 0.0 }).collect();
+        for Reading { exact, source, imager } in self.pointings.iter_mut() {
+            let Some(imager) = imager else { return Ok(Vec::new()) };
+            let units = exact.unit_sources(&model);
+            let rows = &mut self.rows;
+            let mut left = 0;
+            let mut residual = Watched::new(*source, |block: &mut Block| {
+                exact.subtract(&units, &fluxes, block);
+                left += block.rows() as u64;
+                Ok(())
+            });
+            imager.adjoint(&mut residual, &mut sums)?;
+            drop(residual);
+            rows(left);
+        }
+        self.passes += 1;
+        let signal_to_noise = flat_noise(&sums, self.options.lowest_response);
+        let highest = signal_to_noise.iter().copied().filter(|v| v.is_finite()).fold(0.0, f64::max);
+        let level = search.find_above_noise.max(SIDE_LOBES * highest);
+        let found = peaks(signal_to_noise.view(), search.find_above_noise.min(3.0), level, RISE);
+        let put = |peak: &Peak| {
+            let direction = search.geometry.direction_of(peak.pixel.0 as f64, peak.pixel.1 as f64)?;
+            let mut source = Source::at("", direction, search.spectral_index);
+            source.remarks.push("found in the residual".to_owned());
+            Some(source)
+        };
+        Ok(found.iter().filter_map(put).collect())
+    }
+}
+
+/// Peaks of a residual are taken down to this fraction of its highest: lower ones may be its side lobes, and wait for the
+/// next round.
+const SIDE_LOBES: f64 = 0.4;
+
+/// Puts the results of the joint fit in the list; pairs that could not be told apart.
+fn write_fluxes(sources: &mut [Source], joint: &JointFluxes, options: &ListOptions) -> Vec<(String, String)> {
     if options.wander.is_some() {
         super::name_sources(sources);
     }
@@ -208,15 +339,7 @@ pub fn fluxes_from_visibilities(
             source.remarks.push(format!("holds the flux of {other} too"));
         }
     }
-    Ok(ListFluxes {
-        covariance: joint.covariance,
-        reduced_misfit: joint.reduced_misfit,
-        data: joint.data,
-        passes,
-        unconfirmed,
-        split,
-        merged,
-    })
+    merged
 }
 
 /// Completes sources measured in the image: pointings that see them and, unless `at_reference` says that the image already

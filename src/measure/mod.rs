@@ -28,13 +28,14 @@ pub use gaussian::{Ellipse, PixelGaussian};
 pub use islands::{Peak, Rise, peaks};
 pub use joint::{JointFluxes, JointOptions, Reading, joint_fluxes, survey};
 pub use least_squares::{Fitted, fit as least_squares};
-pub use list::{ListFluxes, ListOptions, fluxes_from_visibilities, read_maps, survey_visibilities};
+pub use list::{ListFluxes, ListOptions, Search, fluxes_from_visibilities, read_maps, survey_visibilities};
 pub use names::{name_sources, position_name};
 pub use normal::{NormalEquations, Seen, Solution};
 pub use positions::{Position, PositionsError, read_positions};
 pub use source::{Method, Size, Source};
 
 use crate::observation::ObservationError;
+use crate::response::ResponseError;
 use thiserror::Error;
 
 /// Why sources could not be measured.
@@ -43,6 +44,9 @@ pub enum MeasureError {
     /// The visibilities could not be read.
     #[error(transparent)]
     Observation(#[from] ObservationError),
+    /// The residual could not be gridded.
+    #[error(transparent)]
+    Response(#[from] ResponseError),
     /// Two sources whose visibilities are the same.
     #[error(
         "sources {first} and {second} of the list (counted from 0) cannot be told apart: they lie {separation_arcsec:.3} \

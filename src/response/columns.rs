@@ -14,7 +14,8 @@ use super::Exact;
 use super::rows::{Intensity, cis_turns, rows_by_time, wavelengths_per_metre};
 use crate::observation::Block;
 use crate::sky::Direction;
-use num_complex::Complex64;
+use num_complex::{Complex32, Complex64};
+use rayon::prelude::*;
 use std::f64::consts::PI;
 
 /// A source of 1 Jy.
@@ -97,6 +98,8 @@ pub struct Columns {
     pub weight: Vec<f64>,
     /// The row of the block that each sample comes from.
     pub row: Vec<usize>,
+    /// Which group of hands, in the order of the response.
+    group: Vec<usize>,
 }
 
 impl Exact {
@@ -114,6 +117,33 @@ impl Exact {
         }
     }
 
+    /// Takes the model M S off the data of a block, wherever weights are positive; `flux_jy` has one value a source.
+    pub fn subtract(&self, sources: &UnitSources, flux_jy: &[f64], block: &mut Block) {
+        if sources.is_empty() {
+            return;
+        }
+        let times = TimeRows::of(block);
+        let tasks: Vec<(usize, usize)> =
+            (0..times.len()).flat_map(|time| (0..self.channels()).map(move |channel| (time, channel))).collect();
+        let models: Vec<Vec<(usize, usize, Complex64)>> = tasks
+            .par_iter()
+            .map(|&(time, channel)| {
+                let columns = self.columns(sources, block, &times[time], channel);
+                let strengths: Vec<f64> = flux_jy.iter().zip(&columns.spectra).map(|(f, s)| f * s).collect();
+                let sum = |row: &[Complex64]| row.iter().zip(&strengths).map(|(m, s)| m * s).sum();
+                let samples = columns.row.iter().zip(&columns.group).zip(columns.model.chunks_exact(flux_jy.len()));
+                samples.map(|((&row, &group), model)| (block.index(row, channel), group, sum(model))).collect()
+            })
+            .collect();
+        for (at, group, value) in models.into_iter().flatten() {
+            for &hand in &self.intensity.groups()[group].1 {
+                let data = &mut block.data[at + hand];
+                let left = Complex64::new(f64::from(data.re), f64::from(data.im)) - value;
+                *data = Complex32::new(left.re as f32, left.im as f32);
+            }
+        }
+    }
+
     /// The rows of M at one time and channel. All of M is the union over [`TimeRows::of`] and [`Exact::channels`]; the
     /// pieces are independent of each other.
     pub fn columns(&self, sources: &UnitSources, block: &Block, at: &TimeRows, channel: usize) -> Columns {
@@ -126,7 +156,7 @@ impl Exact {
             let turned = self.recentre.turn(block.uvw_m[row]);
             let [u, v, w] = turned.uvw_m;
             let (p, q) = (block.first[row] as usize, block.second[row] as usize);
-            for (seen, hands) in self.intensity.groups() {
+            for (group, (seen, hands)) in self.intensity.groups().iter().enumerate() {
                 let (value, weight) = Intensity::weighted(block, block.index(row, channel), hands);
                 if weight == 0.0 {
                     continue;
@@ -150,6 +180,7 @@ impl Exact {
                 out.data.push(value / weight);
                 out.weight.push(weight);
                 out.row.push(row);
+                out.group.push(group);
             }
         }
         out

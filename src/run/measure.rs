@@ -1,6 +1,6 @@
 //! `[measure]`: which sources to measure, and how.
 
-use super::document::{At, Section, number, text};
+use super::document::{At, Section, count, number, text};
 use super::{Problem, RunError, RunFile};
 use serde::Serialize;
 use std::path::PathBuf;
@@ -8,6 +8,7 @@ use toml::de::DeValue;
 
 const DEFAULT_FIND: f64 = 5.0;
 const DEFAULT_ISLAND: f64 = 3.0;
+const DEFAULT_ROUNDS: usize = 12;
 const DEFAULT_INDEX_ERROR: f64 = 0.3;
 const DEFAULT_INDEX: f64 = -0.7;
 
@@ -23,6 +24,8 @@ pub struct Measure {
     pub find_above_noise: At<f64>,
     /// Pixels above this multiple of the local noise that touch each other make one island.
     pub island_above_noise: At<f64>,
+    /// Most rounds of searching what the model leaves of the visibilities.
+    pub rounds: At<usize>,
     /// What is fitted to a source in the image.
     pub shape: SourceShape,
     /// Where flux densities come from.
@@ -103,6 +106,7 @@ pub(super) fn read_measure(section: &Section) -> Measure {
         };
         section.complain(island.line, "island_above_noise", problem);
     }
+    let rounds = section.or("rounds", DEFAULT_ROUNDS, "a number of further searches, 0 to 100", count(0, 100));
     let shapes = [("auto", SourceShape::Auto), ("point", SourceShape::Point), ("gaussian", SourceShape::Gaussian)];
     let shape = section.or("shape", SourceShape::Auto, "\"auto\", \"point\" or \"gaussian\"", word(&shapes));
     let places = [("visibilities", FluxesFrom::Visibilities), ("image", FluxesFrom::Image)];
@@ -126,7 +130,7 @@ pub(super) fn read_measure(section: &Section) -> Measure {
     let given = |key: &str| section.has(key);
     if positions.is_some() {
         // the places are given, their flux densities come from the visibilities: nothing is searched or fitted in the image
-        for key in ["find_above_noise", "island_above_noise", "shape", "errors"] {
+        for key in ["find_above_noise", "island_above_noise", "rounds", "shape", "errors"] {
             if given(key) {
                 let problem = Problem::Conflict {
                     found: format!("{key} beside positions"),
@@ -143,6 +147,12 @@ pub(super) fn read_measure(section: &Section) -> Measure {
             };
             section.complain(fluxes.line, "fluxes_from", problem);
         }
+    } else if fluxes.value == FluxesFrom::Image && given("rounds") && rounds.value > 0 {
+        let problem = Problem::Conflict {
+            found: "further rounds with fluxes_from = \"image\"".to_owned(),
+            expected: "fluxes_from = \"visibilities\", which leaves the residual that is searched".to_owned(),
+        };
+        section.complain(rounds.line, "rounds", problem);
     } else if fluxes.value == FluxesFrom::Image && given("spectral_index_error") && index_error.value > 0.0 {
         let problem = Problem::Conflict {
             found: "a spectral index with fluxes_from = \"image\"".to_owned(),
@@ -156,6 +166,7 @@ pub(super) fn read_measure(section: &Section) -> Measure {
         positions: positions.map(resolved),
         find_above_noise: find,
         island_above_noise: island,
+        rounds,
         shape: shape.value,
         fluxes_from: fluxes.value,
         errors: errors.value,

@@ -127,7 +127,7 @@ fn visibility_fits_agree_with_scipy_and_numpy() {
         .collect();
     let mut source = MemorySource::new(observation.clone(), vec![block.clone()]);
     let options = JointOptions { index_error: 0.0, wander: None, frame: geometry.frame() };
-    let mut readings = [Reading { exact: &exact, source: &mut source }];
+    let mut readings = [Reading { exact: &exact, source: &mut source, imager: None }];
     let fluxes = joint_fluxes(&mut readings, &sources, options, |_| {}).unwrap();
     let rows: Vec<Value> = (0..block.rows())
         .map(|row| {
