@@ -7,7 +7,7 @@ use evensky::imaging::{Mosaic, flat_sky};
 use evensky::measure::errors::condon;
 use evensky::measure::{
     Correlation, Ellipse, Errors, FindOptions, FittedPeak, ListOptions, Peak, PixelGaussian, Plate, Reading,
-    Shapes, Source, find_sources, fit_peaks, fluxes_from_visibilities, read_maps, survey_visibilities,
+    Search, Shapes, Source, find_sources, fit_peaks, fluxes_from_visibilities, read_maps, survey_visibilities,
 };
 use evensky::observation::{Block, MemorySource, Selection, open};
 use evensky::response::gridded::Options;
@@ -56,7 +56,8 @@ fn pixel_beam(fwhm: f64, pixel: f64) -> FittedBeam {
 /// Noise alone, 24 images of 512²: no source above 6 σ, and above 3.5 σ as many as theory has. Maxima of a smooth Gaussian
 /// field above u: area · λ/(2π)^{3/2} · u exp(−u²/2), λ = 4 ln 2/θ² the variance of the slope (Adler 1981; asymptotic in
 /// u, pixels see maxima a little low). At 6 σ that is 0.004 in all. At 3.5 σ it is about 340; peaks without a deep enough
-/// saddle merge; bound: within a fifth, five times its Poisson error less that.
+/// saddle merge; bound: within a fifth, which is four times its Poisson error. A source's height is its flux density over
+/// its error.
 #[test]
 fn noise_holds_no_sources() {
     let (fwhm, size, images) = (5.0, 512, 24);
@@ -70,14 +71,14 @@ fn noise_holds_no_sources() {
         let options = FindOptions { find_above_noise: 3.5, island_above_noise: 2.5, ..options(Shapes::Point) };
         let found =
             find_sources(image.view(), weight.view(), &geometry, &beam, &Correlation::Gaussian(ellipse), &options);
-        heights.extend(found.iter().map(|s| s.peak_jy.unwrap() / s.noise_jy.unwrap()));
+        heights.extend(found.iter().map(|s| s.flux_jy.unwrap() / s.flux_error_jy.unwrap()));
     }
     let area = (images as usize * size * size) as f64;
     let u = 3.5f64;
     let expected = area * (4.0 * LN_2 / (fwhm * fwhm)) / (2.0 * PI).powf(1.5) * u * (-0.5 * u * u).exp();
     let highest = heights.iter().copied().fold(0.0, f64::max);
     println!("{} peaks above 3.5 σ, {expected:.0} expected; the highest {highest:.2} σ", heights.len());
-    assert!(highest > 3.5 && highest < 6.0, "{highest}");
+    assert!(highest > 3.0 && highest < 6.0, "{highest}");
     assert!((heights.len() as f64 / expected - 1.0).abs() < 0.2, "{} against {expected}", heights.len());
 }
 
@@ -133,7 +134,7 @@ fn trial(fwhm: f64, height: f64, shapes: Shapes, images: u64) -> Trial {
 
 /// Errors against the scatter of 400 noise images at signal to noise 30, where first order holds (its next terms are 1/30²).
 /// Bound for the covariance: four standard errors of a scatter, 4/√800 = 0.14. The closed forms of Condon (1997) describe
-/// this fit region to 25 %: they are recipes for another one (docs/measuring.md).
+/// this fit region to 25 % (docs/measuring.md).
 #[test]
 fn errors_are_the_scatter_of_noise_images() {
     for (name, shapes) in [("point", Shapes::Point), ("gaussian", Shapes::Gaussian)] {
@@ -144,15 +145,14 @@ fn errors_are_the_scatter_of_noise_images() {
     }
 }
 
-/// Noise bias: a fit that is free to move climbs the noise. To second order the peak of a point fit rises by half the
-/// variance of its place times its curvature, twice: 8 ln 2 σ_x²/θ² · A for two axes over two, with σ_x = 0.45 θ/SNR: about
-/// 1.1 of the noise over SNR. Bound: 0.1 ± four standard errors of the mean (0.2) of 400 images at signal to noise 10; and
-/// it is not negative by more than those.
+/// Noise bias: a fit that is free to move climbs the noise. To second order its peak rises by A · 8 ln 2 σ_x²/(2 θ²) for
+/// each axis, less what its own curvature takes: with σ_x = 0.37 θ/SNR at most 0.76 of the noise over SNR. Bound: above 0 by
+/// no more than that plus four standard errors of the mean of 1600 images, 0.1.
 #[test]
 fn noise_bias_is_about_noise_over_signal_to_noise() {
     let t = trial(6.0, 10.0, Shapes::Point, 1600);
     println!("noise bias at signal to noise 10: {:.3} of the noise", t.bias);
-    assert!((t.bias - 0.1).abs() <= 0.1, "{}", t.bias);
+    assert!(t.bias > -0.1 && t.bias < 0.076 + 0.1, "{}", t.bias);
 }
 
 const RUN: &str = r#"
@@ -184,7 +184,7 @@ struct Restored {
     weight: Array2<f64>,
     psf: Array2<f64>,
     beam: FittedBeam,
-    pointings: Vec<(Exact, MemorySource)>,
+    pointings: Vec<(Exact, Gridded, MemorySource)>,
 }
 
 fn restored(seed: u64) -> Restored {
@@ -209,7 +209,7 @@ fn restored(seed: u64) -> Restored {
         let gridded = Gridded::new(&beams, geometry, 1e-4, &mut noise_only, Options::default()).unwrap();
         gridded.adjoint(&mut noise_only, &mut residual).unwrap();
         mosaic.add(Box::new(memory.clone()), beams, 1e-4, Options::default(), |_| {}).unwrap();
-        pointings.push((exact, memory));
+        pointings.push((exact, gridded, memory));
     }
     let mut image = flat_sky(&residual, 0.1);
     let psf = mosaic.point_spread(geometry.centre, &residual, &image, |_| {}).unwrap();
@@ -260,6 +260,12 @@ impl Restored {
             confirm: Some(4.0),
             wander: Some(0.5 * self.beam.minor),
             frame: self.geometry.frame(),
+            search: Some(Search {
+                rounds: 12,
+                find_above_noise: 5.0,
+                geometry: self.geometry,
+                spectral_index: -0.7,
+            }),
         }
     }
 
@@ -281,48 +287,75 @@ fn mean_and_scatter(z: &[f64]) -> (f64, f64) {
     (mean, (z.iter().map(|z| (z - mean).powi(2)).sum::<f64>() / (z.len() - 1) as f64).sqrt())
 }
 
-/// Places and flux densities of sources found, from the image and then from the visibilities, over four realisations. S01
-/// and S15 lie 51″ apart under a beam of 247″ × 167″ and make one peak: with the image alone they are one resolved source,
-/// from the visibilities they are two. Bounds: every other source is there (all are above 10 σ), no other above 6 σ;
-/// deviations of flux densities from visibilities, 96 of them, have mean within 4/√96 = 0.41 and scatter within 0.29 of 1;
-/// from the image 88, of mean within 0.43 and scatter within 0.31 of 1.
+/// Sources found in the image, and then in the visibilities, over four realisations. S01, S15 and S04 lie within 51″ and
+/// 140″ of each other under a beam of 247″ × 167″ and make one peak: the image has them as one resolved source, the rounds
+/// of searches part them. Bounds: the image has every other source (all are above 10 σ) and nothing else above 6 σ; from the
+/// visibilities all 24 are there and no other; deviations of flux densities, 96 of them, have a mean within 4/√96 = 0.41 and a
+/// scatter within 0.29 of 1; from the image, 84, of mean within 0.44 and scatter within 0.31 of 1.
 #[test]
 fn sources_of_a_restored_mosaic() {
     let (mut of_image, mut of_visibilities) = (Vec::new(), Vec::new());
     for seed in 0..4 {
         let mut scene = restored(40 + seed);
         let mut found = scene.found();
-        let blended = |name: &str| name == "S01" || name == "S15";
-        for (c, source) in scene.sky.iter().zip(scene.matched(&found)).filter(|(c, _)| !blended(&c.name)) {
-            let source = source.unwrap_or_else(|| panic!("{} was not found", c.name));
-            of_image.push((source.flux_jy.unwrap() - c.flux_at(REFERENCE_HZ)) / source.flux_error_jy.unwrap());
+        let blended = ["S01", "S15", "S04"];
+        for (c, source) in scene.sky.iter().zip(scene.matched(&found)) {
+            if !blended.contains(&c.name.as_str()) {
+                let source = source.unwrap_or_else(|| panic!("{} was not found", c.name));
+                of_image.push((source.flux_jy.unwrap() - c.flux_at(REFERENCE_HZ)) / source.flux_error_jy.unwrap());
+            }
         }
         let high = found.iter().filter(|s| s.peak_jy.unwrap() > 6.0 * s.noise_jy.unwrap()).count();
-        assert_eq!(high, 23, "sources above 6 σ");
+        assert_eq!(high, 22, "sources above 6 σ");
         let options = scene.list_options();
         let mut pointings = std::mem::take(&mut scene.pointings);
-        let mut readings: Vec<Reading> =
-            pointings.iter_mut().map(|(exact, source)| Reading { exact, source, imager: None }).collect();
+        let mut readings: Vec<Reading> = pointings
+            .iter_mut()
+            .map(|(exact, gridded, source)| Reading { exact, source, imager: Some(&*gridded) })
+            .collect();
         let list = fluxes_from_visibilities(&mut found, &mut readings, &options, |_| {}).unwrap();
-        println!("misfit {:.4}, {} passes, {} unconfirmed", list.reduced_misfit, list.passes, list.unconfirmed);
+        println!(
+            "misfit {:.4}, {} passes, {} unconfirmed, {} split, {} added",
+            list.reduced_misfit, list.passes, list.unconfirmed, list.split, list.added
+        );
+        assert_eq!(found.len(), 24);
         for (c, source) in scene.sky.iter().zip(scene.matched(&found)) {
             let source = source.unwrap_or_else(|| panic!("{} was lost", c.name));
+            assert!(source.direction.separation(c.direction) < 20.0 / 206_264.8, "{}", c.name);
             of_visibilities
                 .push((source.flux_jy.unwrap() - c.flux_at(REFERENCE_HZ)) / source.flux_error_jy.unwrap());
         }
-        assert!(
-            (list.reduced_misfit - 1.0).abs() <= 5.0 * (2.0 / list.data as f64).sqrt(),
-            "{}",
-            list.reduced_misfit
-        );
+        let scatter = (2.0 / list.data as f64).sqrt();
+        assert!((list.reduced_misfit - 1.0).abs() <= 5.0 * scatter, "{}", list.reduced_misfit);
         assert_eq!(list.covariance.nrows(), found.len());
     }
     for (what, z, mean_bound, scatter_bound) in
-        [("image", &of_image, 0.43, 0.31), ("visibilities", &of_visibilities, 0.41, 0.29)]
+        [("image", &of_image, 0.44, 0.31), ("visibilities", &of_visibilities, 0.41, 0.29)]
     {
         let (mean, scatter) = mean_and_scatter(z);
         println!("from the {what}: {} deviations, mean {mean:.3}, scatter {scatter:.3}", z.len());
         assert!(mean.abs() <= mean_bound && (scatter - 1.0).abs() <= scatter_bound, "{what}: {mean} {scatter}");
+    }
+}
+
+/// The same from nothing but the visibilities: no image, no list, rounds of searches alone.
+#[test]
+fn sources_of_a_dirty_mosaic_in_rounds() {
+    let mut scene = restored(60);
+    let options = scene.list_options();
+    let mut pointings = std::mem::take(&mut scene.pointings);
+    let mut readings: Vec<Reading> = pointings
+        .iter_mut()
+        .map(|(exact, gridded, source)| Reading { exact, source, imager: Some(&*gridded) })
+        .collect();
+    let mut found = Vec::new();
+    let list = fluxes_from_visibilities(&mut found, &mut readings, &options, |_| {}).unwrap();
+    assert_eq!((found.len(), list.added - list.unconfirmed), (24, 24));
+    for (c, source) in scene.sky.iter().zip(scene.matched(&found)) {
+        let source = source.unwrap_or_else(|| panic!("{} was not found", c.name));
+        let z = (source.flux_jy.unwrap() - c.flux_at(REFERENCE_HZ)) / source.flux_error_jy.unwrap();
+        // 24 deviations: one above 4.5 in 6000 trials
+        assert!(z.abs() < 4.5, "{}: {z}", c.name);
     }
 }
 
@@ -342,14 +375,16 @@ fn image_fluxes_are_brought_to_the_reference_frequency() {
             ..Source::at(&c.name, c.direction, c.spectral_index)
         })
         .collect();
-    let mut readings: Vec<Reading> =
-        pointings.iter_mut().map(|(exact, source)| Reading { exact, source, imager: None }).collect();
+    let mut readings: Vec<Reading> = pointings
+        .iter_mut()
+        .map(|(exact, gridded, source)| Reading { exact, source, imager: Some(&*gridded) })
+        .collect();
     survey_visibilities(&mut sources, &mut readings, &options, false, |_| {}).unwrap();
     // what N/W has of a source of 1 Jy at the reference frequency, by direct sums of its own prediction
     for index in [2, 11, 19] {
         let c = Component { flux_jy: 1.0, reference_hz: REFERENCE_HZ, ..scene.sky[index].clone() };
         let (mut n, mut w) = (0.0, 0.0);
-        for (exact, source) in &pointings {
+        for (exact, _, source) in &pointings {
             let mut blocks = source.blocks().to_vec();
             blocks.iter_mut().for_each(|block| exact.predict_exactly(std::slice::from_ref(&c), block));
             let observation = evensky::observation::BlockSource::observation(source).clone();
