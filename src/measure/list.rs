@@ -202,20 +202,20 @@ impl<F: FnMut(u64)> Fitter<'_, '_, F> {
         let Some(level) = self.options.confirm else { return Ok(()) };
         loop {
             let joint = self.joint(sources, 0.0, None)?;
-            let mut keep = joint
-                .flux
-                .iter()
-                .zip(&joint.merged_into)
-                .map(|(&(flux, error), merged)| merged.is_none() && flux >= level * error)
-                .collect::<Vec<bool>>()
-                .into_iter();
-            let before = sources.len();
-            sources.retain(|_| keep.next().unwrap_or(true));
-            self.unconfirmed += before - sources.len();
-            if sources.len() == before {
+            if !self.drop_unconfirmed(sources, &joint, level) {
                 return Ok(());
             }
         }
+    }
+
+    /// Leaves out the sources that a fit does not confirm; whether there were any.
+    fn drop_unconfirmed(&mut self, sources: &mut Vec<Source>, joint: &JointFluxes, level: f64) -> bool {
+        let confirmed = |at: usize| joint.merged_into[at].is_none() && joint.flux[at].0 >= level * joint.flux[at].1;
+        let before = sources.len();
+        let mut at = 0..before;
+        sources.retain(|_| at.next().is_none_or(confirmed));
+        self.unconfirmed += before - sources.len();
+        sources.len() < before
     }
 
     /// Fits everything that is free, tries wide sources as two points, and moves the list to the fitted places.
@@ -239,6 +239,12 @@ impl<F: FnMut(u64)> Fitter<'_, '_, F> {
                     self.split += 1;
                 }
             }
+        }
+        // what the first pass confirmed, free places may have emptied
+        while let Some(level) = self.options.confirm
+            && self.drop_unconfirmed(sources, &joint, level)
+        {
+            joint = self.joint(sources, index_error, wander)?;
         }
         for (source, place) in sources.iter_mut().zip(&joint.place) {
             if let Some((direction, [by_l, by_m])) = place {
@@ -274,7 +280,6 @@ impl<F: FnMut(u64)> Fitter<'_, '_, F> {
                 Ok(())
             });
             imager.adjoint(&mut residual, &mut sums)?;
-            drop(residual);
             rows(left);
         }
         self.passes += 1;
