@@ -404,3 +404,44 @@ fn a_gaussian_is_the_sum_of_its_points() {
     println!("largest difference {worst:.1e}; the longest baseline sees {least:.3} of it");
     assert!(worst <= 3e-4 && least < 0.8, "{worst:e}, {least}");
 }
+
+/// The noise of natural weights has the point spread function as its autocorrelation. Both are sums over visibilities by
+/// this test's own hand or the exact response; 3000 realisations know a correlation to 1/√3000 = 0.018, bound four of these.
+#[test]
+fn noise_of_natural_weights_correlates_as_the_point_spread_function() {
+    let setting = Setting { beam: Beam::Unity, stations: 6, times: 3, channels: 1, ..Setting::default() };
+    let mut scene = scene(&setting);
+    let geometry = ImageGeometry::new(setting.aim, 64, 64, 1e-4).unwrap();
+    let exact = Exact::new(&scene.observation, scene.beams.clone(), geometry);
+    let pixels = [(32.0, 32.0), (33.0, 32.0), (34.0, 31.0), (36.0, 35.0), (40.0, 28.0)];
+    let places: Vec<Direction> = pixels.iter().map(|&(x, y)| geometry.direction_of(x, y).unwrap()).collect();
+    let unit = Component {
+        name: "unit".into(),
+        direction: places[0],
+        flux_jy: 1.0,
+        reference_hz: 1.3e9,
+        spectral_index: 0.0,
+    };
+    exact.predict_exactly(std::slice::from_ref(&unit), &mut scene.block);
+    let psf: Vec<f64> =
+        exact.adjoint_at(&mut scene.source(), &places).unwrap().into_iter().map(|(n, w)| n / w).collect();
+    let mut empty = scene.block.clone();
+    empty.data.fill(Complex32::ZERO);
+    let clean = vec![(exact.clone(), MemorySource::new(scene.observation.clone(), vec![empty]))];
+    let mut products = vec![0.0; places.len()];
+    let mut squares = vec![0.0; places.len()];
+    for seed in 0..3000 {
+        let mut noisy = with_noise(&clean, seed);
+        let sums = exact.adjoint_at(&mut noisy[0].1, &places).unwrap();
+        for (k, (n, _)) in sums.iter().enumerate() {
+            products[k] += n * sums[0].0;
+            squares[k] += n * n;
+        }
+    }
+    let got: Vec<f64> = (0..places.len()).map(|k| products[k] / (squares[0] * squares[k]).sqrt()).collect();
+    println!("correlations {got:.3?}, point spread function {psf:.3?}");
+    for (got, want) in got.iter().zip(&psf) {
+        assert!((got - want).abs() <= 0.073, "{got} against {want}");
+    }
+    assert!(psf.iter().any(|p| p.abs() < 0.5) && psf[1] > 0.5, "the places try nothing: {psf:?}");
+}
