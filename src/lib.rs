@@ -25,8 +25,8 @@
 //! # The path of data
 //!
 //! ```text
-//! run file ──► observation ──► beam ──► response ──► imaging ──► report
-//!   (TOML)     visibilities   patterns   N and W      mosaic     FITS, PNG, HTML, JSON
+//! run file ──► observation ──► beam ──► response ──► imaging ──► measure ──► report
+//!   (TOML)     visibilities   patterns   N and W      mosaic     sources     FITS, PNG, HTML, JSON
 //! ```
 //!
 //! One direction, no way back: a folder imports only from folders before it, and from the ground floor.
@@ -40,6 +40,7 @@
 //! | [`beam`] | voltage patterns, and which station has which |
 //! | [`response`] | predict and adjoint: exact, gridded |
 //! | [`imaging`] | pointings summed to a mosaic, weight map, point spread function, self-check |
+//! | [`measure`] | sources found, fitted, and their flux densities straight from visibilities, with errors |
 //! | [`report`] | everything a person or another program reads |
 //! | [`cli`] | arguments, progress, one file a command |
 //!
@@ -101,6 +102,7 @@ pub mod beam;
 pub mod cli;
 pub mod fits;
 pub mod imaging;
+pub mod measure;
 pub mod observation;
 pub mod report;
 pub mod response;

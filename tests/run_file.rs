@@ -200,10 +200,10 @@ fn wrong_types_and_values_say_what_was_found_and_expected() {
         ("centre_deg = [152.678, 41.863]", "centre_deg = [10, 91]", "image.centre_deg", "[10, 91]", "-90 to 90"),
         (
             "scheme = \"natural\"",
-            "scheme = \"uniform\"",
+            "scheme = \"unifrom\"",
             "weighting.scheme",
-            "\"uniform\" is not yet available",
-            "natural",
+            "no weighting scheme is called \"unifrom\"",
+            "uniform",
         ),
         ("scheme = \"natural\"", "scheme = 3", "weighting.scheme", "found the number 3", "natural"),
         ("diameter_m = 13.0", "diameter_m = 0", "beams.dish13.diameter_m", "found the number 0", "greater than 0"),

@@ -1,6 +1,7 @@
 //! `evensky image RUN.toml`: the mosaic, its weight map and point spread function, pictures and report.
 
 use super::image_files::Images;
+use super::image_measure::{self, Measurement, Plates};
 use super::inputs::{PointingInput, open_pointings};
 use super::progress::Progress;
 use super::{CliError, Common};
@@ -43,6 +44,7 @@ pub fn run(arguments: &Arguments, common: &Common) -> Result<String, CliError> {
     let inputs = open_pointings(&run, &progress)?;
     let folder = common.out_folder(&arguments.run)?;
     check_writable(&folder)?;
+    let request = image_measure::prepare(&run)?;
 
     let mut record = RunRecord {
         title: run.title.clone().unwrap_or_else(|| stem(&arguments.run)),
@@ -55,7 +57,8 @@ pub fn run(arguments: &Arguments, common: &Common) -> Result<String, CliError> {
     };
     record.inputs = checksums(&run)?;
     record.stations = station_groups(&inputs);
-    let mut making = Making { progress: &progress, record, settings, weighting: run.weighting };
+    let mut making =
+        Making { progress: &progress, record, settings, weighting: run.weighting, request, measurement: None };
     making.timed("opening and checksums", started);
     let images = making.images(inputs)?;
     let started = Instant::now();
@@ -66,9 +69,11 @@ pub fn run(arguments: &Arguments, common: &Common) -> Result<String, CliError> {
         .tempdir_in(&folder)
         .map_err(|source| CliError::Folder { path: folder.clone(), source })?;
     let written = images.write(unfinished.path()).map_err(told)?;
+    let tables = making.measurement.as_ref().map(|m| m.write(unfinished.path())).transpose().map_err(told)?;
     making.timed("writing products", started);
     let mut record = making.record;
     record.products = written.products;
+    record.products.extend(tables.unwrap_or_default());
     for warning in &record.warnings {
         progress.warn(warning);
     }
@@ -174,6 +179,9 @@ struct Making<'a> {
     record: RunRecord,
     settings: Image,
     weighting: Weighting,
+    /// What `[measure]` asks for, and what came of it.
+    request: Option<image_measure::Request>,
+    measurement: Option<Measurement>,
 }
 
 impl Making<'_> {
@@ -272,6 +280,18 @@ impl Making<'_> {
             .fold((0.0, 0.0), |sum, p| (sum.0 + p.tally.weight, sum.1 + p.tally.weight_hz));
         let frequency_hz = weight_hz.1 / weight_hz.0;
         self.noise(&geometry, &weight, &dirty, frequency_hz);
+        self.measure(
+            &Plates {
+                name: "dirty",
+                image: &dirty,
+                weight: &weight,
+                psf: (&psf, reference),
+                geometry,
+                beam: beam.as_ref(),
+                reference_hz: frequency_hz,
+            },
+            &mut mosaic,
+        )?;
         let start = mosaic.pointings().iter().map(|p| p.tally.span.0).fold(f64::INFINITY, f64::min);
         let header = ProductHeader {
             bunit: "Jy/beam".to_owned(),
@@ -297,6 +317,23 @@ impl Making<'_> {
         stage.finish();
         self.timed("weighting", started);
         if price.imaging > 0.0 { Ok(Some(price)) } else { Err(told(NothingToImage::Weights)) }
+    }
+
+    /// Sources, when the run file asks for them.
+    fn measure(&mut self, plates: &Plates, mosaic: &mut Mosaic) -> Result<(), CliError> {
+        let Some(request) = &self.request else { return Ok(()) };
+        let started = Instant::now();
+        let stage = self.progress.stage("measuring sources", "rows", None);
+        // the estimator of least error goes by inverse variances, whatever the image is weighted by
+        let title = &self.record.title;
+        let measured = mosaic
+            .naturally(|mosaic| image_measure::measure(request, plates, mosaic, title, |rows| stage.add(rows)))?;
+        stage.finish();
+        self.record.warnings.extend(measured.warnings.iter().cloned());
+        self.record.measured = Some(measured.figures.clone());
+        self.measurement = Some(measured);
+        self.timed("measuring sources", started);
+        Ok(())
     }
 
     /// A pattern that is not round, on a mount whose turning is not known here, would be placed wrongly.

@@ -12,6 +12,7 @@
 pub mod describe;
 pub mod image;
 mod image_files;
+mod image_measure;
 pub mod inputs;
 pub mod progress;
 pub mod simulate;

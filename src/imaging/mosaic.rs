@@ -138,12 +138,23 @@ impl Mosaic {
             .map(|pointing| Weigher::new(*weighting, pointing.source.observation(), &geometry))
             .collect();
         let mut sources: Vec<&mut dyn BlockSource> =
-            self.pointings.iter_mut().map(|pointing| pointing.source.as_mut()).collect();
+            self.pointings.iter_mut().map(|pointing| &mut pointing.source as &mut dyn BlockSource).collect();
         let price = weigh(&mut weighers, &mut sources, rows)?;
         for (pointing, weigher) in self.pointings.iter_mut().zip(weighers) {
             pointing.source.weigh_by(Some(weigher));
         }
         Ok(price)
+    }
+
+    /// Does something with inverse variances as weights, and gives imaging weights back afterwards.
+    pub fn naturally<R>(&mut self, work: impl FnOnce(&mut Mosaic) -> R) -> R {
+        let weighers: Vec<Option<Weigher>> =
+            self.pointings.iter_mut().map(|pointing| pointing.source.weigh_by(None)).collect();
+        let result = work(self);
+        for (pointing, weigher) in self.pointings.iter_mut().zip(weighers) {
+            pointing.source.weigh_by(weigher);
+        }
+        result
     }
 
     /// Inverse variance of the flat sky: W² / Σ ω²/w |A|², which with natural weights is W.

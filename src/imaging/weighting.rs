@@ -216,11 +216,6 @@ impl Weighted {
         Weighted { inner, weigher: None, scale: scale as f32 }
     }
 
-    /// As a source.
-    pub fn as_mut(&mut self) -> &mut dyn BlockSource {
-        self
-    }
-
     /// Takes imaging weights, or gives them up for inverse variances again; tells those it had.
     pub fn weigh_by(&mut self, weigher: Option<Weigher>) -> Option<Weigher> {
         std::mem::replace(&mut self.weigher, weigher)
@@ -228,6 +223,12 @@ impl Weighted {
 
     pub(super) fn weigher(&self) -> Option<&Weigher> {
         self.weigher.as_ref()
+    }
+}
+
+impl AsMut<dyn BlockSource> for Weighted {
+    fn as_mut(&mut self) -> &mut (dyn BlockSource + 'static) {
+        self
     }
 }
 
@@ -293,7 +294,7 @@ mod tests {
         let (observation, block, geometry) = scene();
         let mut source = Weighted::new(Box::new(MemorySource::new(observation.clone(), vec![block.clone()])), 1.0);
         let mut weighers = vec![Weigher::new(weighting, &observation, &geometry)];
-        let price = weigh(&mut weighers, &mut [source.as_mut()], |_| ()).unwrap();
+        let price = weigh(&mut weighers, &mut [&mut source as &mut dyn BlockSource], |_| ()).unwrap();
         source.weigh_by(weighers.pop());
         source.rewind().unwrap();
         let weighted = source.next_block().unwrap().unwrap();

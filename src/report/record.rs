@@ -2,6 +2,7 @@
 //!
 //! Every number carries its unit in its name. A number that was not measured is absent (`null`), never zero.
 
+use super::measured::Measured;
 use crate::sky::ImageGeometry;
 use serde::{Deserialize, Serialize};
 use sha2::{Digest, Sha256};
@@ -43,6 +44,9 @@ pub struct RunRecord {
     pub weighting: Option<WeightingFigures>,
     /// Noise figures from the weight map.
     pub noise: Option<Noise>,
+    /// What measuring amounted to; `None` when no sources were measured.
+    #[serde(default)]
+    pub measured: Option<Measured>,
     /// Where the time went.
     pub timings: Vec<StageTime>,
     /// Files written.

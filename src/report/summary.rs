@@ -1,5 +1,6 @@
 //! The closing summary: what a person reads in ten seconds, and the same as one JSON object.
 
+use super::measured::measured_line;
 use super::record::{Accuracy, BeamFigures, RunRecord, WeightingFigures};
 
 /// The closing summary in plain text, without a newline at the end.
@@ -30,6 +31,9 @@ pub fn summary_text(record: &RunRecord, folder: &str) -> String {
     }
     if let Some(weighting) = &record.weighting {
         push(&mut text, &format!("weights    {}", weighting_line(weighting)));
+    }
+    if let Some(measured) = &record.measured {
+        push(&mut text, &format!("sources    {}", measured_line(measured)));
     }
     let seconds: f64 = record.timings.iter().map(|t| t.seconds).sum();
     if seconds > 0.0 {

@@ -17,17 +17,17 @@ const POINTS_PER_TASK: usize = 32;
 #[derive(Debug, Clone)]
 pub struct Exact {
     geometry: ImageGeometry,
-    beams: StationBeams,
-    recentre: Recentre,
+    pub(super) beams: StationBeams,
+    pub(super) recentre: Recentre,
     image_frame: TangentFrame,
-    frequencies_hz: Vec<f64>,
-    intensity: Intensity,
+    pub(super) frequencies_hz: Vec<f64>,
+    pub(super) intensity: Intensity,
 }
 
 /// A direction as the sums need it.
-struct Point {
+pub(super) struct Point {
     /// l, m, n − 1 about the image centre.
-    lmn1: [f64; 3],
+    pub(super) lmn1: [f64; 3],
     /// l, m about the aim.
     aim_lm: [f64; 2],
     /// Inside the response cut-off and in front of the stations.
@@ -48,7 +48,7 @@ impl Exact {
         }
     }
 
-    fn point(&self, direction: Direction) -> Point {
+    pub(super) fn point(&self, direction: Direction) -> Point {
         let [l, m, _] = self.image_frame.lmn(direction);
         let [al, am, an] = self.beams.aim().frame().lmn(direction);
         let r2 = l * l + m * m;
@@ -79,7 +79,7 @@ impl Exact {
     }
 
     /// Beam products of every station at `points`, `[feed][station][point]`.
-    fn station_voltages(&self, angles: &[f64], hz: f64, points: &[Point]) -> [Vec<Vec<Complex64>>; 2] {
+    pub(super) fn station_voltages(&self, angles: &[f64], hz: f64, points: &[Point]) -> [Vec<Vec<Complex64>>; 2] {
         let lm: Vec<[f64; 2]> = points.iter().map(|p| p.aim_lm).collect();
         let of_feed = |feed: usize| -> Vec<Vec<Complex64>> {
             (0..self.beams.len())
@@ -100,7 +100,14 @@ impl Exact {
         [first, second]
     }
 
-    fn product(&self, voltages: &[Vec<Vec<Complex64>>; 2], seen: Seen, p: usize, q: usize, at: usize) -> Complex64 {
+    pub(super) fn product(
+        &self,
+        voltages: &[Vec<Vec<Complex64>>; 2],
+        seen: Seen,
+        p: usize,
+        q: usize,
+        at: usize,
+    ) -> Complex64 {
         let of = |feed: usize| voltages[feed][p][at] * voltages[feed][q][at].conj();
         match seen {
             Seen::Feed(feed) => of(feed),

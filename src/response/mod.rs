@@ -9,12 +9,14 @@
 //! Two implementations: [`Exact`], the direct sums in double precision, and [`Gridded`], fast to a promised relative
 //! error. Nothing above this folder knows which it holds.
 
+mod columns;
 mod exact;
 mod fine_grid;
 pub mod gridded;
 mod rows;
 pub mod window;
 
+pub use columns::{Columns, TimeRows, UnitSource, UnitSources};
 pub use exact::Exact;
 pub use fine_grid::{FineGridError, fine_grid};
 pub use gridded::Gridded;

@@ -36,6 +36,7 @@ mod calendar;
 mod document;
 mod error;
 mod image;
+mod measure;
 mod simulate;
 mod tables;
 mod weighting;
@@ -45,6 +46,7 @@ pub use calendar::{fits_date, iso_utc, mjd_of_day};
 pub use document::At;
 pub use error::{Complaint, Problem, RunError};
 pub use image::{Image, MOST_PIXELS, Pointing, Sources, TOLERANCES};
+pub use measure::{FitErrors, FluxesFrom, Measure, SourceShape};
 pub use simulate::{Method, Simulate, SimulatedPointing};
 pub use tables::{LayoutMount, LayoutStation, StationRow, StationTable};
 pub use weighting::{DensityOf, Scheme, Weighting};
@@ -67,6 +69,8 @@ pub struct RunFile {
     pub image: Option<Image>,
     /// `[weighting]`.
     pub weighting: Weighting,
+    /// `[measure]`; see [`RunFile::measure`] for it with its files checked.
+    pub measure: Option<Measure>,
     /// Tables `[beams.NAME]`.
     pub beams: BTreeMap<String, Beam>,
     /// `station_table`, read.
@@ -141,9 +145,11 @@ impl RunFile {
         Complaint::new(&self.path, line, key, problem)
     }
 
-    /// The files besides visibilities that decide the result: the run file and its station table.
+    /// The files besides visibilities that decide the result: the run file, its station table, its list of positions.
     pub fn inputs(&self) -> Vec<PathBuf> {
-        std::iter::once(&self.path).chain(self.station_table.as_ref().map(|table| &table.path)).cloned().collect()
+        let stations = self.station_table.as_ref().map(|table| &table.path);
+        let positions = self.measure.as_ref().and_then(|m| m.positions.as_ref()).map(|at| &at.value);
+        std::iter::once(&self.path).chain(stations).chain(positions).cloned().collect()
     }
 
     fn missing(&self, key: &str, expected: &str) -> RunError {
@@ -185,6 +191,7 @@ fn read(root: &Section) -> RunFile {
     let pointings = root.tables("pointing").iter().filter_map(image::read_pointing).collect();
     let image = root.table("image").and_then(|section| image::read_image(&section));
     let weighting = root.table("weighting").map_or_else(Weighting::default, |s| weighting::read_weighting(&s));
+    let measure = root.table("measure").map(|section| measure::read_measure(&section));
     let beam_sections = root.table("beams").map(|beams| beams.named_tables()).unwrap_or_default();
     // a beam that is itself wrong is still a name that exists
     let beam_names: Vec<String> = beam_sections.iter().map(|(name, _)| name.clone()).collect();
@@ -215,6 +222,7 @@ fn read(root: &Section) -> RunFile {
         pointings,
         image,
         weighting,
+        measure,
         beams,
         station_table,
         station_rules,

@@ -9,6 +9,7 @@
 mod environment;
 #[path = "../image_support/mod.rs"]
 mod image_support;
+mod measured;
 mod products;
 mod visibilities;
 
