@@ -316,7 +316,8 @@ mod tests {
         let (_, uniform, ..) = weights(Weighting { scheme: Scheme::Uniform, ..Weighting::default() });
         let (high, low) = (difference(&robust(5.0), &natural), difference(&robust(-5.0), &uniform));
         assert!(high <= 1e-5 && low <= 1e-5, "{high:e} from natural, {low:e} from uniform");
-        let middle = robust(0.0);
+        // f² = 1
+        let middle = robust(5f64.log10());
         assert!(difference(&middle, &natural) > 0.1 && difference(&middle, &uniform) > 0.1);
     }
 
@@ -339,7 +340,7 @@ mod tests {
     #[test]
     fn the_price_is_its_closed_form_and_the_sum_is_kept() {
         for scheme in [Scheme::Natural, Scheme::Uniform, Scheme::Robust] {
-            let asked = Weighting { scheme, outer_taper_arcsec: Some(300.0), ..Weighting::default() };
+            let asked = Weighting { scheme, outer_taper_arcsec: Some(30.0), ..Weighting::default() };
             let (block, weighted, price, _) = weights(asked);
             let (mut w, mut o, mut s) = (0.0, 0.0, 0.0);
             for (&natural, &imaging) in block.weight.iter().zip(&weighted.weight) {
