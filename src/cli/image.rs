@@ -1,5 +1,6 @@
 //! `evensky image RUN.toml`: the mosaic, its weight map and point spread function, pictures and report.
 
+use super::image_deconvolve::{Deconvolved, Dirty, deconvolved};
 use super::image_files::Images;
 use super::inputs::{PointingInput, open_pointings};
 use super::progress::Progress;
@@ -54,7 +55,7 @@ pub fn run(arguments: &Arguments, common: &Common) -> Result<String, CliError> {
     };
     record.inputs = checksums(&run)?;
     record.stations = station_groups(&inputs);
-    let mut making = Making { progress: &progress, record, settings };
+    let mut making = Making { progress: &progress, run: &run, record, settings };
     making.timed("opening and checksums", started);
     let images = making.images(inputs)?;
     let started = Instant::now();
@@ -170,6 +171,7 @@ fn station_groups(inputs: &[PointingInput]) -> Vec<StationGroup> {
 /// A run under way.
 struct Making<'a> {
     progress: &'a Progress,
+    run: &'a RunFile,
     record: RunRecord,
     settings: Image,
 }
@@ -266,6 +268,10 @@ impl Making<'_> {
             .fold((0.0, 0.0), |sum, p| (sum.0 + p.tally.weight, sum.1 + p.tally.weight_hz));
         let frequency_hz = weight_hz.1 / weight_hz.0;
         self.noise(&geometry, &sums, &dirty, frequency_hz);
+        // natural weights: W is the inverse variance of N/W
+        let weight = sums.normaliser.clone();
+        let made = Dirty { sums: &sums, weight: &weight, image: &dirty, beam, frequency_hz };
+        let deconvolved = self.deconvolved(&mut mosaic, &made)?;
         let start = mosaic.pointings().iter().map(|p| p.tally.span.0).fold(f64::INFINITY, f64::min);
         let header = ProductHeader {
             bunit: "Jy/beam".to_owned(),
@@ -277,7 +283,19 @@ impl Making<'_> {
             description: String::new(),
             history: self.history(),
         };
-        Ok(Images { geometry, dirty, weight: sums.normaliser, psf, header })
+        Ok(Images { geometry, dirty, weight, psf, deconvolved, header })
+    }
+
+    fn deconvolved(&mut self, mosaic: &mut Mosaic, dirty: &Dirty) -> Result<Option<Deconvolved>, CliError> {
+        let started = Instant::now();
+        let deconvolved = deconvolved(self.run, mosaic, dirty, self.progress)?;
+        if let Some(made) = &deconvolved {
+            self.timed("deconvolving", started);
+            self.record.warnings.extend(made.warnings());
+            self.record.limits.extend(made.limits());
+            self.record.deconvolution = Some(made.figures.clone());
+        }
+        Ok(deconvolved)
     }
 
     /// A pattern that is not round, on a mount whose turning is not known here, would be placed wrongly.
@@ -376,6 +394,9 @@ impl Making<'_> {
                 "relative error of the sums: promised {:e}, measured {:.1e} (N) and {:.1e} (W) on {} pixels",
                 a.promised, a.measured_numerator, a.measured_normaliser, a.sample_pixels
             ));
+        }
+        if let Some(figures) = &record.deconvolution {
+            lines.push(figures.history());
         }
         for group in &record.stations {
             lines.push(format!("beam {}: {} ({} stations)", group.beam, group.description, group.stations.len()));

@@ -4,6 +4,7 @@
 //! Nothing here computes a result; it shows what [`RunRecord`] and the images hold. Every file appears whole or not
 //! at all ([`write_whole`]).
 
+mod deconvolution;
 mod page;
 pub mod picture;
 mod products;
@@ -11,6 +12,7 @@ mod record;
 mod summary;
 mod whole_file;
 
+pub use deconvolution::DeconvolutionFigures;
 pub use page::{PageError, PagePicture, render_page, write_page};
 pub use products::{ProductError, ProductHeader, write_image_product};
 pub use record::{

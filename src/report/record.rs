@@ -41,6 +41,9 @@ pub struct RunRecord {
     pub beam: Option<BeamFigures>,
     /// Noise figures from the weight map.
     pub noise: Option<Noise>,
+    /// What deconvolution did; `None` when there was none.
+    #[serde(default)]
+    pub deconvolution: Option<super::DeconvolutionFigures>,
     /// Where the time went.
     pub timings: Vec<StageTime>,
     /// Files written.

@@ -33,6 +33,7 @@
 
 mod beams;
 mod calendar;
+mod deconvolution;
 mod document;
 mod error;
 mod image;
@@ -41,11 +42,12 @@ mod tables;
 
 pub use beams::{Beam, SHAPES, Shape, StationRule, StationSettings};
 pub use calendar::{fits_date, iso_utc, mjd_of_day};
+pub use deconvolution::{Deconvolution, DeconvolutionMethod, NoiseSource};
 pub use document::At;
 pub use error::{Complaint, Problem, RunError};
 pub use image::{Image, MOST_PIXELS, Pointing, Sources, TOLERANCES, Weighting};
 pub use simulate::{Method, Simulate, SimulatedPointing};
-pub use tables::{LayoutMount, LayoutStation, StationRow, StationTable};
+pub use tables::{Circle, LayoutMount, LayoutStation, StationRow, StationTable};
 
 use document::{Document, Section, text};
 use serde::Serialize;
@@ -65,6 +67,8 @@ pub struct RunFile {
     pub image: Option<Image>,
     /// `[weighting]`.
     pub weighting: Weighting,
+    /// `[deconvolution]`.
+    pub deconvolution: Deconvolution,
     /// Tables `[beams.NAME]`.
     pub beams: BTreeMap<String, Beam>,
     /// `station_table`, read.
@@ -139,9 +143,11 @@ impl RunFile {
         Complaint::new(&self.path, line, key, problem)
     }
 
-    /// The files besides visibilities that decide the result: the run file and its station table.
+    /// The files besides visibilities that decide the result: the run file, its station table, and what its
+    /// `[deconvolution]` names.
     pub fn inputs(&self) -> Vec<PathBuf> {
-        std::iter::once(&self.path).chain(self.station_table.as_ref().map(|table| &table.path)).cloned().collect()
+        let table = self.station_table.as_ref().map(|table| &table.path);
+        std::iter::once(&self.path).chain(table).chain(self.deconvolution.files()).cloned().collect()
     }
 
     fn missing(&self, key: &str, expected: &str) -> RunError {
@@ -183,6 +189,8 @@ fn read(root: &Section) -> RunFile {
     let pointings = root.tables("pointing").iter().filter_map(image::read_pointing).collect();
     let image = root.table("image").and_then(|section| image::read_image(&section));
     let weighting = root.table("weighting").map_or_else(Weighting::default, |s| image::read_weighting(&s));
+    let deconvolution =
+        root.table("deconvolution").map_or_else(Deconvolution::default, |s| deconvolution::read_deconvolution(&s));
     let beam_sections = root.table("beams").map(|beams| beams.named_tables()).unwrap_or_default();
     // a beam that is itself wrong is still a name that exists
     let beam_names: Vec<String> = beam_sections.iter().map(|(name, _)| name.clone()).collect();
@@ -213,6 +221,7 @@ fn read(root: &Section) -> RunFile {
         pointings,
         image,
         weighting,
+        deconvolution,
         beams,
         station_table,
         station_rules,
