@@ -43,6 +43,7 @@ use crate::sky::ImageGeometry;
 use local_psf::{LocalPsfs, Scaling};
 use minor::{Found, Start};
 use ndarray::{Array2, Zip};
+use points::Crowd;
 use search::{Levels, Searched, Whole};
 
 /// Half width of the patches of Clark's and the multi-scale minor cycle, pixels.
@@ -53,11 +54,15 @@ const WHOLE_STEP: f64 = 0.75;
 const FALL: f64 = 0.02;
 /// So many cycles in a row without a lower peak are enough.
 const PATIENCE: usize = 5;
-/// Compact sources are fitted when the peak has fallen to this fraction since the last time, and at the end.
+/// Compact sources are fitted when the highest residual has fallen to this fraction since the last time.
 const FIT_EVERY: f64 = 0.1;
 /// Most times that compact sources are fitted.
 const MOST_FITS: usize = 8;
-/// A fitted point is kept where it leaves at most twice what its pixels left, or this multiple of the noise.
+/// At the end they are fitted when it has fallen to this fraction since the last time.
+const FIT_AT_END: f64 = 0.5;
+/// Brightness, in multiples of the highest residual, above which parts of the model are taken for sources.
+const ESTABLISHED: f64 = 3.0;
+/// A fitted point is kept where it leaves less than what is established, or this multiple of the noise.
 const FIT_KEPT: f64 = 4.0;
 
 /// What is to be deconvolved. Images are `[y][x]`.
@@ -135,6 +140,7 @@ pub fn deconvolve(mut task: Task, observer: &mut dyn Observer) -> Result<Outcome
         scaling,
         components: 0,
         cycles: Vec::new(),
+        crowds: Vec::new(),
         refused: Vec::new(),
         fits: 0,
         last_fit: None,
@@ -164,10 +170,12 @@ struct Run<'a> {
     numerator: Array2<f64>,
     components: u64,
     cycles: Vec<MajorCycle>,
+    /// The pixels that fitted points replaced.
+    crowds: Vec<Crowd>,
     /// Places (pixels) where a point was tried and did not fit.
     refused: Vec<(f64, f64)>,
     fits: usize,
-    /// The peak when compact sources were last fitted, and the cycles by then.
+    /// The highest residual when compact sources were last fitted, and the cycles by then.
     last_fit: Option<(f64, usize)>,
 }
 
@@ -214,12 +222,12 @@ impl Run<'_> {
             let whole = Whole::new(self.task.geometry.width, self.task.geometry.height, image, levels);
             let peak = whole.peak().map(|peak| f64::from(peak.value.abs()));
             let levels = whole.levels().clone();
-            if self.fit_is_due(peak) {
-                self.fit(peak.unwrap_or(0.0), observer)?;
+            let image = whole.into_image();
+            if self.fit_is_due(&image, peak) {
+                self.fit(observer)?;
                 (lowest, waited) = (f64::INFINITY, 0);
                 continue;
             }
-            let image = whole.into_image();
             let Some(peak) = peak else { break (self.reached(&image), levels) };
             if self.components >= self.settings().max_components {
                 break (Stop::Components, levels);
@@ -385,76 +393,97 @@ impl Run<'_> {
     }
 
     /// Whether compact sources are to be fitted now: `peak` is the highest above its level, if there is one.
-    fn fit_is_due(&self, peak: Option<f64>) -> bool {
+    fn fit_is_due(&self, image: &[f32], peak: Option<f64>) -> bool {
         if self.settings().fit_points_above_noise.is_none() || self.fits >= MOST_FITS || self.cycles.is_empty() {
             return false;
         }
+        let height = self.highest(image);
         let (reference, cycles) = match self.last_fit {
             Some(last) => last,
-            None => (self.first_peak(), 0),
+            None => (self.highest(&self.scaling.search_image(self.task.numerator)), 0),
         };
         let ends = peak.is_none()
             || self.cycles.len() >= self.settings().max_major_cycles
             || self.components >= self.settings().max_components;
-        self.cycles.len() > cycles && (ends || peak.is_some_and(|peak| peak <= FIT_EVERY * reference))
+        self.cycles.len() > cycles && height <= if ends { FIT_AT_END } else { FIT_EVERY } * reference
     }
 
-    /// The highest peak of the dirty image.
-    fn first_peak(&self) -> f64 {
-        let dirty = self.scaling.search_image(self.task.numerator);
-        let allowed = dirty.iter().zip(&self.allowed).filter(|(_, allowed)| **allowed);
+    /// The highest absolute value where components are allowed.
+    fn highest(&self, image: &[f32]) -> f64 {
+        let allowed = image.iter().zip(&self.allowed).filter(|(_, allowed)| **allowed);
         f64::from(allowed.map(|(value, _)| value.abs()).fold(0.0, f32::max))
     }
 
-    fn fit(&mut self, peak: f64, observer: &mut dyn Observer) -> Result<(), ResponseError> {
+    fn fit(&mut self, observer: &mut dyn Observer) -> Result<(), ResponseError> {
         let Some(above) = self.settings().fit_points_above_noise else { return Ok(()) };
+        let height = self.highest(&self.scaling.search_image(&self.numerator));
         self.fits += 1;
-        self.last_fit = Some((peak, self.cycles.len()));
-        let before = self.scaling.search_image(&self.numerator);
+        self.last_fit = Some((height, self.cycles.len()));
         let mut model = self.model.clone();
-        let crowds = points::fit_points(
-            &mut self.task.parts,
-            &self.task.geometry,
-            &self.scaling,
-            &mut model,
-            &self.numerator,
-            &self.task.beam,
-            &self.task.settings,
-            above,
-            &self.refused,
-            &mut |rows| observer.rows(rows),
-        )?;
-        let mut numerator = self.residual(&model, observer)?;
-        let after = self.scaling.search_image(&numerator);
-        let mut undone = false;
-        for crowd in &crowds {
-            let Some(at) = model.points.iter().position(|point| point.name == crowd.name) else { continue };
-            let place = self.task.geometry.pixel_of(model.points[at].direction);
-            let middle = crowd.middle();
-            let moved = place.map_or(f64::INFINITY, |(x, y)| (x - middle.0).hypot(y - middle.1));
-            let left = self.highest_around(&after, middle);
-            let kept =
-                moved <= self.beam_px() && left <= (2.0 * self.highest_around(&before, middle)).max(FIT_KEPT);
-            if !kept {
-                model.points.remove(at);
-                crowd.pixels.iter().for_each(|(pixel, flux)| model.pixels[*pixel] += flux);
-                self.refused.push(middle);
-                undone = true;
+        let established = ESTABLISHED * height;
+        let field = points::Field {
+            geometry: &self.task.geometry,
+            scaling: &self.scaling,
+            beam: &self.task.beam,
+            settings: &self.task.settings,
+            numerator: &self.numerator,
+            above: above.max(established),
+            doubtful: established,
+            refused: &self.refused,
+        };
+        let new = points::replace_crowds(&mut model, &field);
+        self.crowds.extend(new);
+        let mut numerator = self.refined(&mut model, observer)?;
+        // what one point does not describe is tried as two, and what two do not, as pixels again
+        for _ in 0..2 {
+            let image = self.scaling.search_image(&numerator);
+            let (kept, failed): (Vec<Crowd>, Vec<Crowd>) = std::mem::take(&mut self.crowds)
+                .into_iter()
+                .partition(|crowd| self.fits_well(crowd, &model, &image, established.max(FIT_KEPT)));
+            self.crowds = kept;
+            if failed.is_empty() {
+                break;
             }
-        }
-        if undone {
-            points::refine(
-                &mut self.task.parts,
-                &self.task.geometry,
-                &mut model,
-                &self.task.beam,
-                &self.task.settings,
-                &mut |rows| observer.rows(rows),
-            )?;
-            numerator = self.residual(&model, observer)?;
+            for mut crowd in failed {
+                model.points.retain(|point| !crowd.names.contains(&point.name));
+                if crowd.names.len() == 1 && crowd.pixels.len() > 1 {
+                    let number = points::next_number(&model.points);
+                    let pair = crowd.double(&self.task.geometry, &self.task.settings, number);
+                    crowd.names = pair.iter().map(|point| point.name.clone()).collect();
+                    model.points.extend(pair);
+                    self.crowds.push(crowd);
+                } else {
+                    crowd.pixels.iter().for_each(|(pixel, flux)| model.pixels[*pixel] += flux);
+                    self.refused.push(crowd.middle());
+                }
+            }
+            numerator = self.refined(&mut model, observer)?;
         }
         (self.model, self.numerator) = (model, numerator);
         Ok(())
+    }
+
+    /// Fits the points of a model; its residual.
+    fn refined(&mut self, model: &mut Model, observer: &mut dyn Observer) -> Result<Array2<f64>, ResponseError> {
+        points::refine(
+            &mut self.task.parts,
+            &self.task.geometry,
+            model,
+            &self.task.beam,
+            &self.task.settings,
+            &mut |rows| observer.rows(rows),
+        )?;
+        self.residual(model, observer)
+    }
+
+    /// Whether points leave no more than `most` where they stand, and stand where their pixels were.
+    fn fits_well(&self, crowd: &Crowd, model: &Model, image: &[f32], most: f64) -> bool {
+        let middle = crowd.middle();
+        let own = model.points.iter().filter(|point| crowd.names.contains(&point.name));
+        let near = own
+            .filter_map(|point| self.task.geometry.pixel_of(point.direction))
+            .all(|(x, y)| (x - middle.0).hypot(y - middle.1) <= self.beam_px());
+        near && self.highest_around(image, middle) <= most
     }
 
     /// Highest absolute value within a beam of a pixel.

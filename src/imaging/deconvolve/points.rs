@@ -7,8 +7,8 @@
 //! χ² = Σ_k ω_k |V_k − M_k|² + Σ_s (α_s − α_0)²/σ_α²
 //!
 //! over all such sources at once (Gauss–Newton; the model M through the exact direct sums with every station's beam; the
-//! weak second term, σ_α = 3, only keeps spectra that the data do not determine near the common one α_0). A source that
-//! is not compact leaves more behind than before, and gets its crowd back.
+//! weak second term, σ_α = 3, only keeps spectra that the data do not determine near the common one α_0). What one point
+//! does not describe is tried as two; what two do not describe gets its crowd back.
 
 use super::local_psf::Scaling;
 use super::model::Model;
@@ -35,49 +35,11 @@ const SAMPLES: usize = 1 << 14;
 /// Numbers fitted for each source.
 const EACH: usize = 4;
 
-/// A candidate: the model's crowd around a peak, as one point.
-struct Candidate {
-    component: Component,
-    /// (y, x, flux) of the pixels it replaces.
-    crowd: Vec<([usize; 2], f64)>,
-}
-
-/// Replaces the crowds of compact sources above `above` times the noise by points, and fits those and the earlier points
-/// that were made here (names beginning with `fit-`). The caller judges the result by the residual that it leaves.
-///
-/// # Errors
-/// When visibilities cannot be read or the model cannot be predicted.
-#[expect(clippy::too_many_arguments)]
-pub fn fit_points(
-    parts: &mut [Part],
-    geometry: &ImageGeometry,
-    scaling: &Scaling,
-    model: &mut Model,
-    numerator: &Array2<f64>,
-    beam: &FittedBeam,
-    settings: &Settings,
-    above: f64,
-    refused: &[(f64, f64)],
-    rows: &mut (dyn FnMut(u64) + Send),
-) -> Result<Vec<Crowd>, ResponseError> {
-    absorb(geometry, model, beam, settings);
-    let candidates = candidates(geometry, scaling, model, numerator, beam, settings, above, refused);
-    let mut crowds = Vec::new();
-    for candidate in candidates {
-        for (pixel, _) in &candidate.crowd {
-            model.pixels[*pixel] = 0.0;
-        }
-        crowds.push(Crowd { name: candidate.component.name.clone(), pixels: candidate.crowd });
-        model.points.push(candidate.component);
-    }
-    refine(parts, geometry, model, beam, settings, rows)?;
-    Ok(crowds)
-}
-
-/// The pixels that a point replaced.
+/// A point and the pixels that it replaced.
+#[derive(Debug, Clone)]
 pub struct Crowd {
-    /// Name of the point.
-    pub name: String,
+    /// Names of the points that replace it: one, or two for a double.
+    pub names: Vec<String>,
     /// ([y, x], flux density).
     pub pixels: Vec<([usize; 2], f64)>,
 }
@@ -85,12 +47,110 @@ pub struct Crowd {
 impl Crowd {
     /// The middle of the pixels, (x, y), weighted by the size of their flux.
     pub fn middle(&self) -> (f64, f64) {
-        let all: f64 = self.pixels.iter().map(|(_, flux)| flux.abs()).sum();
-        let along = |axis: usize| {
-            self.pixels.iter().map(|(pixel, flux)| pixel[axis] as f64 * flux.abs()).sum::<f64>() / all
-        };
-        (along(1), along(0))
+        let weighted = self.pixels.iter().map(|&([y, x], flux)| (x as f64, y as f64, flux.abs()));
+        middle(weighted)
     }
+
+    /// Two points in place of the pixels: the middles of their two halves, found as the two means that all pixels are
+    /// nearest to (Lloyd's iteration from the outermost pixels of their longer axis).
+    pub fn double(&self, geometry: &ImageGeometry, settings: &Settings, first_number: usize) -> Vec<Component> {
+        let all: Vec<(f64, f64, f64)> =
+            self.pixels.iter().map(|&([y, x], f)| (x as f64, y as f64, f.abs())).collect();
+        let (cx, cy) = middle(all.iter().copied());
+        let second = |f: fn(f64, f64) -> f64| all.iter().map(|(x, y, w)| w * f(x - cx, y - cy)).sum::<f64>();
+        let angle = 0.5 * (2.0 * second(|x, y| x * y)).atan2(second(|x, y| x * x - y * y));
+        let size: f64 = all.iter().map(|p| p.2).sum();
+        let along = second(|x, y| x * x + y * y) / size;
+        let offset = (angle.cos() * along.sqrt(), angle.sin() * along.sqrt());
+        let mut means = [(cx - offset.0, cy - offset.1), (cx + offset.0, cy + offset.1)];
+        let nearer = |means: &[(f64, f64); 2], x: f64, y: f64| {
+            let far = |m: (f64, f64)| (x - m.0).hypot(y - m.1);
+            usize::from(far(means[1]) < far(means[0]))
+        };
+        for _ in 0..20 {
+            for half in 0..2 {
+                let own = all.iter().copied().filter(|&(x, y, _)| nearer(&means, x, y) == half);
+                let new = middle(own);
+                if new.0.is_finite() {
+                    means[half] = new;
+                }
+            }
+        }
+        (0..2)
+            .filter_map(|half| {
+                let own = self.pixels.iter().filter(|&&([y, x], _)| nearer(&means, x as f64, y as f64) == half);
+                Some(Component {
+                    name: name(first_number + half),
+                    direction: geometry.direction_of(means[half].0, means[half].1)?,
+                    flux_jy: own.map(|(_, flux)| flux).sum(),
+                    reference_hz: settings.reference_hz,
+                    spectral_index: settings.spectral_index,
+                })
+            })
+            .collect()
+    }
+}
+
+fn middle(points: impl Iterator<Item = (f64, f64, f64)>) -> (f64, f64) {
+    let sums = points.fold((0.0, 0.0, 0.0), |s, (x, y, w)| (s.0 + w * x, s.1 + w * y, s.2 + w));
+    (sums.0 / sums.2, sums.1 / sums.2)
+}
+
+fn name(number: usize) -> String {
+    format!("fit-{number:04}")
+}
+
+/// A number that no fitted point of a list has, nor any above it.
+pub fn next_number(points: &[Component]) -> usize {
+    let numbers = points.iter().filter_map(|point| point.name.strip_prefix("fit-")?.parse::<usize>().ok());
+    numbers.max().unwrap_or(0) + 1
+}
+
+/// How far around a peak its crowd of pixels reaches, pixels.
+fn reach(geometry: &ImageGeometry, beam: &FittedBeam) -> f64 {
+    (0.5 * beam.minor / geometry.pixel).max(1.5)
+}
+
+/// What the choice of compact sources goes by.
+pub struct Field<'a> {
+    /// The pixel grid.
+    pub geometry: &'a ImageGeometry,
+    /// Scaling of the search image.
+    pub scaling: &'a Scaling,
+    /// Restoring beam.
+    pub beam: &'a FittedBeam,
+    /// Settings.
+    pub settings: &'a Settings,
+    /// Numerator of the residual.
+    pub numerator: &'a Array2<f64>,
+    /// Brightness over noise that a source must have.
+    pub above: f64,
+    /// Brightness over noise below which pixels of the model are doubtful.
+    pub doubtful: f64,
+    /// Places, in pixels, where points were tried in vain.
+    pub refused: &'a [(f64, f64)],
+}
+
+/// Puts points in place of the crowds of compact sources, and takes away what is doubtful: the pixels that are no brighter
+/// than a few times the highest residual are as likely side lobes as sources, and as fixed parts of the model they would
+/// pull the fit. Minor cycles find again what was real.
+pub fn replace_crowds(model: &mut Model, field: &Field) -> Vec<Crowd> {
+    absorb(field.geometry, model, field.beam, field.settings);
+    let on_pixels = Model { pixels: model.pixels.clone(), points: Vec::new() };
+    let restored = restored_model(&on_pixels, field.geometry, field.beam, field.settings.reference_hz);
+    let candidates = candidates(model, &restored, field);
+    let mut crowds = Vec::new();
+    for (component, pixels) in candidates {
+        pixels.iter().for_each(|(pixel, _)| model.pixels[*pixel] = 0.0);
+        crowds.push(Crowd { names: vec![component.name.clone()], pixels });
+        model.points.push(component);
+    }
+    for ((flux, brightness), per_jy) in model.pixels.iter_mut().zip(&restored).zip(&field.scaling.per_jy) {
+        if (brightness * per_jy).abs() < field.doubtful {
+            *flux = 0.0;
+        }
+    }
+    crowds
 }
 
 /// Whether this module made a point.
@@ -100,7 +160,7 @@ pub fn made_here(point: &Component) -> bool {
 
 /// Components that later minor cycles put within a beam of a fitted point belong to it.
 fn absorb(geometry: &ImageGeometry, model: &mut Model, beam: &FittedBeam, settings: &Settings) {
-    let reach = 0.75 * beam.major / geometry.pixel;
+    let reach = reach(geometry, beam);
     let Model { pixels, points } = model;
     for point in points.iter_mut().filter(|point| made_here(point)) {
         let Some((x, y)) = geometry.pixel_of(point.direction) else { continue };
@@ -125,20 +185,13 @@ fn around(pixels: &Array2<f64>, place: (f64, f64), reach: f64) -> Vec<([usize; 2
         .collect()
 }
 
-#[expect(clippy::too_many_arguments)]
-fn candidates(
-    geometry: &ImageGeometry,
-    scaling: &Scaling,
-    model: &Model,
-    numerator: &Array2<f64>,
-    beam: &FittedBeam,
-    settings: &Settings,
-    above: f64,
-    refused: &[(f64, f64)],
-) -> Vec<Candidate> {
-    let on_pixels = Model { pixels: model.pixels.clone(), points: Vec::new() };
-    let mut image = restored_model(&on_pixels, geometry, beam, settings.reference_hz);
-    for ((value, n), (w, t)) in image.iter_mut().zip(numerator).zip(scaling.normaliser.iter().zip(&scaling.noise)) {
+/// Peaks of model and residual together that are bright enough and stand alone, brightest first, each with its crowd.
+fn candidates(model: &Model, restored: &Array2<f64>, field: &Field) -> Vec<(Component, Vec<([usize; 2], f64)>)> {
+    let Field { geometry, scaling, beam, settings, .. } = *field;
+    let mut image = restored.clone();
+    for ((value, n), (w, t)) in
+        image.iter_mut().zip(field.numerator).zip(scaling.normaliser.iter().zip(&scaling.noise))
+    {
         *value = if *t > 0.0 { *value + n / w } else { 0.0 };
     }
     let (height, width) = image.dim();
@@ -147,12 +200,12 @@ fn candidates(
         .points
         .iter()
         .filter_map(|point| geometry.pixel_of(point.direction))
-        .chain(refused.iter().copied())
+        .chain(field.refused.iter().copied())
         .collect();
     let mut peaks: Vec<(f64, usize, usize)> = image
         .indexed_iter()
         .filter(|&((y, x), &value)| {
-            value * scaling.per_jy[[y, x]] > above
+            value * scaling.per_jy[[y, x]] > field.above
                 && (1..width.saturating_sub(1)).contains(&x)
                 && (1..height.saturating_sub(1)).contains(&y)
                 && taken.iter().all(|t| (x as f64 - t.0).hypot(y as f64 - t.1) > apart as f64)
@@ -166,9 +219,8 @@ fn candidates(
     peaks.sort_by(|a, b| b.0.total_cmp(&a.0));
     let earlier = model.points.iter().filter(|point| made_here(point)).count();
     peaks.truncate(MOST_POINTS.saturating_sub(earlier));
-    let highest = model.points.iter().filter_map(|point| point.name.strip_prefix("fit-")?.parse::<usize>().ok());
-    let first = highest.max().unwrap_or(0) + 1;
-    let reach = 0.75 * beam.major / geometry.pixel;
+    let first = next_number(&model.points);
+    let reach = reach(geometry, beam);
     peaks
         .into_iter()
         .filter_map(|(_, x, y)| {
@@ -186,15 +238,9 @@ fn candidates(
             (!crowd.is_empty()).then_some((direction, value, crowd))
         })
         .enumerate()
-        .map(|(number, (direction, flux_jy, crowd))| Candidate {
-            component: Component {
-                name: format!("fit-{:04}", first + number),
-                direction,
-                flux_jy,
-                reference_hz: settings.reference_hz,
-                spectral_index: settings.spectral_index,
-            },
-            crowd,
+        .map(|(number, (direction, flux_jy, crowd))| {
+            let (reference_hz, spectral_index) = (settings.reference_hz, settings.spectral_index);
+            (Component { name: name(first + number), direction, flux_jy, reference_hz, spectral_index }, crowd)
         })
         .collect()
 }
