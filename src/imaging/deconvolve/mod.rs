@@ -13,7 +13,9 @@
 //! Where the misfit would not fall well (b/q < 3/4) only the share α = b/q of the components is taken, and the residual,
 //! linear in α, with it. So χ² falls in every cycle whatever the local point spread functions err (for components of one
 //! flat spectrum, to the tolerance of the response): this is what makes a mosaic converge. How far the minor cycles may go
-//! before their errors pass for sources is bounded by the same errors, measured: see [`MajorCycle::psf_misfit`].
+//! before their errors pass for sources is bounded by the same errors, measured: see [`MajorCycle::psf_misfit`]. Where a
+//! cycle's components cannot lower the misfit at all (b ≤ 0), the minor cycle is made again with an eighth of them; the
+//! first component alone, g N(s)/W(s) at the peak, has b/q = 1/g ≥ 1.
 //!
 //! Files, in the order of a run: `local_psf`, `local_noise` (measured noise, masks that grow), `search` (inner loops),
 //! `minor` and `multi_scale` (minor cycles), `residual` (major cycles), `points` (compact sources fitted), `restore`.
@@ -62,8 +64,16 @@ const MOST_FITS: usize = 8;
 const FIT_AT_END: f64 = 0.5;
 /// Brightness, in multiples of the highest residual, above which parts of the model are taken for sources.
 const ESTABLISHED: f64 = 3.0;
-/// A fitted point is kept where it leaves less than what is established, or this multiple of the noise.
+/// A fitted point is kept where it leaves less than what is established, or this multiple of the noise,
 const FIT_KEPT: f64 = 4.0;
+/// or this fraction of itself.
+const FIT_PART: f64 = 0.1;
+/// A point that leaves more than this multiple of the noise is tried as a double,
+const SPLIT_ABOVE: f64 = 5.0;
+/// which is kept where it leaves less than this fraction of that.
+const SPLIT_GAIN: f64 = 0.6;
+/// Rounds in which the worst points are tried as doubles, in one fit.
+const MOST_ROUNDS: usize = 4;
 
 /// What is to be deconvolved. Images are `[y][x]`.
 pub struct Task<'a> {
@@ -243,13 +253,26 @@ impl Run<'_> {
                     break (Stop::Stalled, levels);
                 }
             }
-            let found = self.minor(&image, levels.clone(), &psfs, peak, misfit);
-            if found.components == 0 {
-                break (Stop::Stalled, levels);
-            }
-            match self.major(found, observer)? {
-                Some(measured) => misfit = 2.0 * measured,
-                None => break (Stop::Diverged, levels),
+            let mut most = self.settings().max_components - self.components;
+            let taken = loop {
+                let found = self.minor(&image, levels.clone(), &psfs, peak, misfit, most);
+                let count = found.components;
+                if count == 0 {
+                    break Err(Stop::Stalled);
+                }
+                let (lowered, measured) = self.major(found, observer)?;
+                misfit = 2.0 * measured;
+                if lowered {
+                    break Ok(());
+                }
+                if count == 1 {
+                    break Err(Stop::Diverged);
+                }
+                // too many components for these point spread functions; the first alone, at a peak, lowers the misfit
+                most = (count / 8).max(1);
+            };
+            if let Err(stop) = taken {
+                break (stop, levels);
             }
         };
         let points = self.model.points.iter().filter(|point| points::made_here(point)).count();
@@ -315,7 +338,7 @@ impl Run<'_> {
         if settings.stop_at_jy * per_jy > settings.stop_at_noise { Stop::FluxDensity } else { Stop::Noise }
     }
 
-    fn minor(&self, image: &[f32], levels: Levels, psfs: &LocalPsfs, peak: f64, misfit: f64) -> Found {
+    fn minor(&self, image: &[f32], levels: Levels, psfs: &LocalPsfs, peak: f64, misfit: f64, most: u64) -> Found {
         let settings = &self.task.settings;
         let start = Start {
             width: self.task.geometry.width,
@@ -326,7 +349,7 @@ impl Run<'_> {
             loop_gain: settings.loop_gain,
             level: settings.major_depth * peak,
             misfit,
-            most: settings.max_components - self.components,
+            most,
             floor: settings.non_negative.then(|| &self.model.pixels * &self.scaling.per_jy),
         };
         match &settings.minor {
@@ -336,9 +359,9 @@ impl Run<'_> {
         }
     }
 
-    /// Takes a minor cycle's components through the visibilities. Returns how much the point spread functions erred,
-    /// `None` when the misfit cannot be lowered this way (nothing is changed then).
-    fn major(&mut self, found: Found, observer: &mut dyn Observer) -> Result<Option<f64>, ResponseError> {
+    /// Takes a minor cycle's components through the visibilities. Returns whether that lowered the misfit (nothing is
+    /// changed where not), and how much the point spread functions erred.
+    fn major(&mut self, found: Found, observer: &mut dyn Observer) -> Result<(bool, f64), ResponseError> {
         let mut update = found.amplitudes;
         Zip::from(&mut update).and(&self.scaling.per_jy).for_each(|value, per_jy| {
             *value = if *per_jy > 0.0 { *value / per_jy } else { 0.0 };
@@ -351,12 +374,12 @@ impl Run<'_> {
             b += c * before;
             q += c * (before - after);
         });
-        if !(b > 0.0 && q > 0.0 && q.is_finite()) {
-            return Ok(None);
-        }
         let truth = self.scaling.search_image(&after);
         let erred = found.expected.iter().map(|&(at, value)| (truth[at] - value).abs()).fold(0.0, f32::max);
         let psf_misfit = if found.moved > 0.0 { f64::from(erred) / found.moved } else { 0.0 };
+        if !(b > 0.0 && q > 0.0 && q.is_finite()) {
+            return Ok((false, psf_misfit));
+        }
         let step = if b / q < WHOLE_STEP { b / q } else { 1.0 };
         if step == 1.0 {
             (self.model, self.numerator) = (trial, after);
@@ -368,7 +391,7 @@ impl Run<'_> {
         let cycle = self.described(found.components, step, psf_misfit);
         observer.cycle(self.cycles.len() + 1, &cycle);
         self.cycles.push(cycle);
-        Ok(Some(psf_misfit))
+        Ok((true, psf_misfit))
     }
 
     /// The state after a cycle.
@@ -432,35 +455,82 @@ impl Run<'_> {
             refused: &self.refused,
         };
         let new = points::replace_crowds(&mut model, &field);
+        self.refused.clear();
         self.crowds.extend(new);
         let mut numerator = self.refined(&mut model, observer)?;
-        // what one point does not describe is tried as two, and what two do not, as pixels again
-        for _ in 0..2 {
-            let image = self.scaling.search_image(&numerator);
-            let (kept, failed): (Vec<Crowd>, Vec<Crowd>) = std::mem::take(&mut self.crowds)
-                .into_iter()
-                .partition(|crowd| self.fits_well(crowd, &model, &image, established.max(FIT_KEPT)));
-            self.crowds = kept;
-            if failed.is_empty() {
+        let mut tried: Vec<String> = Vec::new();
+        for _ in 0..MOST_ROUNDS {
+            if !self.split_worst(&mut model, &mut numerator, &mut tried, observer)? {
                 break;
             }
-            for mut crowd in failed {
-                model.points.retain(|point| !crowd.names.contains(&point.name));
-                if crowd.names.len() == 1 && crowd.pixels.len() > 1 {
-                    let number = points::next_number(&model.points);
-                    let pair = crowd.double(&self.task.geometry, &self.task.settings, number);
-                    crowd.names = pair.iter().map(|point| point.name.clone()).collect();
-                    model.points.extend(pair);
-                    self.crowds.push(crowd);
-                } else {
-                    crowd.pixels.iter().for_each(|(pixel, flux)| model.pixels[*pixel] += flux);
-                    self.refused.push(crowd.middle());
-                }
-            }
+        }
+        // what points do not describe at all becomes pixels again
+        let image = self.scaling.search_image(&numerator);
+        let (kept, failed): (Vec<Crowd>, Vec<Crowd>) = std::mem::take(&mut self.crowds)
+            .into_iter()
+            .partition(|crowd| self.fits_well(crowd, &model, &image, established.max(FIT_KEPT)));
+        self.crowds = kept;
+        for crowd in &failed {
+            model.points.retain(|point| !crowd.names.contains(&point.name));
+            crowd.pixels.iter().for_each(|(pixel, flux)| model.pixels[*pixel] += flux);
+            self.refused.push(crowd.middle());
+        }
+        if !failed.is_empty() {
             numerator = self.refined(&mut model, observer)?;
         }
         (self.model, self.numerator) = (model, numerator);
         Ok(())
+    }
+
+    /// Tries the points that leave most as doubles, and keeps those doubles that leave much less. The others are not
+    /// touched: their residual may be the side lobes of these. False when there is nothing to try.
+    fn split_worst(
+        &mut self,
+        model: &mut Model,
+        numerator: &mut Array2<f64>,
+        tried: &mut Vec<String>,
+        observer: &mut dyn Observer,
+    ) -> Result<bool, ResponseError> {
+        let image = self.scaling.search_image(numerator);
+        let left: Vec<f64> = self.crowds.iter().map(|crowd| self.highest_around(&image, crowd.middle())).collect();
+        let open =
+            |crowd: &Crowd| crowd.names.len() == 1 && crowd.pixels.len() > 1 && !tried.contains(&crowd.names[0]);
+        let candidates = self.crowds.iter().zip(&left).filter(|(crowd, _)| open(crowd));
+        let worst = candidates.map(|(_, left)| *left).fold(0.0, f64::max);
+        if worst <= SPLIT_ABOVE {
+            return Ok(false);
+        }
+        let chosen: Vec<usize> =
+            (0..left.len()).filter(|&n| open(&self.crowds[n]) && left[n] >= 0.5 * worst).collect();
+        let mut trial = model.clone();
+        let mut pairs = Vec::new();
+        for &n in &chosen {
+            let crowd = &self.crowds[n];
+            tried.push(crowd.names[0].clone());
+            let number = points::next_number(&model.points).max(points::next_number(&trial.points));
+            let pair = crowd.double(&self.task.geometry, &self.task.settings, number);
+            trial.points.retain(|point| !crowd.names.contains(&point.name));
+            pairs.push(pair.iter().map(|point| point.name.clone()).collect::<Vec<_>>());
+            trial.points.extend(pair);
+        }
+        let refined = self.refined(&mut trial, observer)?;
+        let image = self.scaling.search_image(&refined);
+        let mut undone = false;
+        for (&n, names) in chosen.iter().zip(pairs) {
+            let now = self.highest_around(&image, self.crowds[n].middle());
+            if now < SPLIT_GAIN * left[n] {
+                tried.extend(names.iter().cloned());
+                self.crowds[n].names = names;
+            } else {
+                trial.points.retain(|point| !names.contains(&point.name));
+                let single = model.points.iter().find(|point| self.crowds[n].names.contains(&point.name));
+                trial.points.extend(single.cloned());
+                undone = true;
+            }
+        }
+        *numerator = if undone { self.refined(&mut trial, observer)? } else { refined };
+        *model = trial;
+        Ok(true)
     }
 
     /// Fits the points of a model; its residual.
@@ -476,14 +546,19 @@ impl Run<'_> {
         self.residual(model, observer)
     }
 
-    /// Whether points leave no more than `most` where they stand, and stand where their pixels were.
+    /// Whether points stand where their pixels were, and leave no more than `most` there, or a small part of themselves
+    /// (which pixels then describe).
     fn fits_well(&self, crowd: &Crowd, model: &Model, image: &[f32], most: f64) -> bool {
         let middle = crowd.middle();
-        let own = model.points.iter().filter(|point| crowd.names.contains(&point.name));
-        let near = own
-            .filter_map(|point| self.task.geometry.pixel_of(point.direction))
-            .all(|(x, y)| (x - middle.0).hypot(y - middle.1) <= self.beam_px());
-        near && self.highest_around(image, middle) <= most
+        let (mut near, mut flux) = (true, 0.0);
+        for point in model.points.iter().filter(|point| crowd.names.contains(&point.name)) {
+            let place = self.task.geometry.pixel_of(point.direction);
+            near &= place.is_some_and(|(x, y)| (x - middle.0).hypot(y - middle.1) <= self.beam_px());
+            flux += point.flux_at(self.settings().reference_hz);
+        }
+        let pixel = [middle.1.round() as usize, middle.0.round() as usize];
+        let own = flux.abs() * self.scaling.per_jy.get(pixel).copied().unwrap_or(0.0);
+        near && self.highest_around(image, middle) <= most.max(FIT_PART * own)
     }
 
     /// Highest absolute value within a beam of a pixel.

@@ -25,7 +25,7 @@ use ndarray::Array2;
 /// Most sources fitted: the normal matrix has four rows for each, and each is predicted five times a pass.
 pub const MOST_POINTS: usize = 200;
 /// Passes over the visibilities of one fit.
-const MOST_PASSES: usize = 6;
+const MOST_PASSES: usize = 10;
 /// Steps for derivatives along l and m, as a fraction of the beam's minor axis.
 const STEP: f64 = 0.05;
 /// Standard deviation of the weak term on spectral indices.
@@ -196,6 +196,7 @@ fn candidates(model: &Model, restored: &Array2<f64>, field: &Field) -> Vec<(Comp
     }
     let (height, width) = image.dim();
     let apart = (beam.major / geometry.pixel).ceil().max(1.0) as usize;
+    let reach = reach(geometry, beam);
     let taken: Vec<(f64, f64)> = model
         .points
         .iter()
@@ -208,7 +209,7 @@ fn candidates(model: &Model, restored: &Array2<f64>, field: &Field) -> Vec<(Comp
             value * scaling.per_jy[[y, x]] > field.above
                 && (1..width.saturating_sub(1)).contains(&x)
                 && (1..height.saturating_sub(1)).contains(&y)
-                && taken.iter().all(|t| (x as f64 - t.0).hypot(y as f64 - t.1) > apart as f64)
+                && taken.iter().all(|t| (x as f64 - t.0).hypot(y as f64 - t.1) > reach + 1.0)
         })
         .filter(|&((y, x), &value)| {
             (y.saturating_sub(apart)..(y + apart + 1).min(height))
@@ -220,7 +221,6 @@ fn candidates(model: &Model, restored: &Array2<f64>, field: &Field) -> Vec<(Comp
     let earlier = model.points.iter().filter(|point| made_here(point)).count();
     peaks.truncate(MOST_POINTS.saturating_sub(earlier));
     let first = next_number(&model.points);
-    let reach = reach(geometry, beam);
     peaks
         .into_iter()
         .filter_map(|(_, x, y)| {
@@ -278,7 +278,7 @@ pub fn refine(
                 points = moved(state, geometry, &last, shrink);
                 continue;
             }
-            Some((chi2, _)) if chi2 - normal.chi2 < 1e-9 * chi2.abs() => {
+            Some((chi2, _)) if chi2 - normal.chi2 < 1e-4 * normal.chi2.abs() => {
                 best = Some((normal.chi2, points.clone()));
                 break;
             }
