@@ -1,5 +1,6 @@
 //! `evensky image RUN.toml`: the mosaic, its weight map and point spread function, pictures and report.
 
+use super::image_deconvolve::{Deconvolved, Dirty, deconvolved};
 use super::image_files::Images;
 use super::image_measure::{self, Measurement, Plates};
 use super::inputs::{PointingInput, open_pointings};
@@ -57,8 +58,15 @@ pub fn run(arguments: &Arguments, common: &Common) -> Result<String, CliError> {
     };
     record.inputs = checksums(&run)?;
     record.stations = station_groups(&inputs);
-    let mut making =
-        Making { progress: &progress, record, settings, weighting: run.weighting, request, measurement: None };
+    let mut making = Making {
+        progress: &progress,
+        run: &run,
+        record,
+        settings,
+        weighting: run.weighting,
+        request,
+        measurement: None,
+    };
     making.timed("opening and checksums", started);
     let images = making.images(inputs)?;
     let started = Instant::now();
@@ -176,6 +184,7 @@ fn station_groups(inputs: &[PointingInput]) -> Vec<StationGroup> {
 /// A run under way.
 struct Making<'a> {
     progress: &'a Progress,
+    run: &'a RunFile,
     record: RunRecord,
     settings: Image,
     weighting: Weighting,
@@ -280,18 +289,23 @@ impl Making<'_> {
             .fold((0.0, 0.0), |sum, p| (sum.0 + p.tally.weight, sum.1 + p.tally.weight_hz));
         let frequency_hz = weight_hz.1 / weight_hz.0;
         self.noise(&geometry, &weight, &dirty, frequency_hz);
-        self.measure(
-            &Plates {
-                name: "dirty",
-                image: &dirty,
-                weight: &weight,
-                psf: (&psf, reference),
-                geometry,
-                beam: beam.as_ref(),
-                reference_hz: frequency_hz,
-            },
-            &mut mosaic,
-        )?;
+        let made = Dirty { sums: &sums, weight: &weight, image: &dirty, beam, frequency_hz };
+        let deconvolved = self.deconvolved(&mut mosaic, &made)?;
+        // sources are measured on the restored sky where there is one
+        let (name, image, restored) = match &deconvolved {
+            Some(made) => ("sky", &made.sky, Some(&made.beam)),
+            None => ("dirty", &dirty, beam.as_ref()),
+        };
+        let plates = Plates {
+            name,
+            image,
+            weight: &weight,
+            psf: (&psf, reference),
+            geometry,
+            beam: restored,
+            reference_hz: frequency_hz,
+        };
+        self.measure(&plates, &mut mosaic)?;
         let start = mosaic.pointings().iter().map(|p| p.tally.span.0).fold(f64::INFINITY, f64::min);
         let header = ProductHeader {
             bunit: "Jy/beam".to_owned(),
@@ -303,7 +317,7 @@ impl Making<'_> {
             description: String::new(),
             history: self.history(),
         };
-        Ok(Images { geometry, dirty, weight, psf, header })
+        Ok(Images { geometry, dirty, weight, psf, deconvolved, header })
     }
 
     /// Imaging weights, where others than natural are asked for; what they cost.
@@ -334,6 +348,18 @@ impl Making<'_> {
         self.measurement = Some(measured);
         self.timed("measuring sources", started);
         Ok(())
+    }
+
+    fn deconvolved(&mut self, mosaic: &mut Mosaic, dirty: &Dirty) -> Result<Option<Deconvolved>, CliError> {
+        let started = Instant::now();
+        let deconvolved = deconvolved(self.run, mosaic, dirty, self.progress)?;
+        if let Some(made) = &deconvolved {
+            self.timed("deconvolving", started);
+            self.record.warnings.extend(made.warnings());
+            self.record.limits.extend(made.limits());
+            self.record.deconvolution = Some(made.figures.clone());
+        }
+        Ok(deconvolved)
     }
 
     /// A pattern that is not round, on a mount whose turning is not known here, would be placed wrongly.
@@ -431,6 +457,9 @@ impl Making<'_> {
                 "relative error of the sums: promised {:e}, measured {:.1e} (N) and {:.1e} (W) on {} pixels",
                 a.promised, a.measured_numerator, a.measured_normaliser, a.sample_pixels
             ));
+        }
+        if let Some(figures) = &record.deconvolution {
+            lines.push(figures.history());
         }
         for group in &record.stations {
             lines.push(format!("beam {}: {} ({} stations)", group.beam, group.description, group.stations.len()));

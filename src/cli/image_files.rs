@@ -1,7 +1,12 @@
 //! The files of `image`: FITS images and their pictures.
 
+use super::image_deconvolve::Deconvolved;
+use crate::imaging::beam_fit::FittedBeam;
+use crate::imaging::deconvolve::write_components;
 use crate::report::picture::{PictureError, PictureSpec, paint, write_picture};
-use crate::report::{PagePicture, Product, ProductError, ProductHeader, write_image_product};
+use crate::report::{
+    PagePicture, Product, ProductError, ProductHeader, WriteError, write_image_product, write_whole,
+};
 use crate::sky::ImageGeometry;
 use ndarray::Array2;
 use std::path::Path;
@@ -13,6 +18,8 @@ pub(super) struct Images {
     pub dirty: Array2<f64>,
     pub weight: Array2<f64>,
     pub psf: Array2<f64>,
+    /// What deconvolution made of it.
+    pub deconvolved: Option<Deconvolved>,
     /// Header of the dirty image; the others differ in unit and description.
     pub header: ProductHeader,
 }
@@ -32,25 +39,28 @@ pub(super) enum FilesError {
     Picture(#[from] PictureError),
     #[error("a picture cannot be coded as PNG: {0}; this is a fault of evensky")]
     Png(#[from] png::EncodingError),
+    #[error(transparent)]
+    Table(#[from] WriteError),
 }
 
 /// One image and how it is shown.
-struct Sheet<'a> {
-    name: &'static str,
-    image: &'a Array2<f64>,
-    bunit: &'static str,
+pub(super) struct Sheet<'a> {
+    pub name: &'static str,
+    pub image: &'a Array2<f64>,
+    pub bunit: &'static str,
     /// The unit as a picture shows it.
-    unit: &'static str,
-    quantity: &'static str,
-    what: &'static str,
-    caption: &'static str,
-    with_beam: bool,
+    pub unit: &'static str,
+    pub quantity: &'static str,
+    pub what: &'static str,
+    pub caption: &'static str,
+    /// The beam that the image is seen with.
+    pub beam: Option<FittedBeam>,
 }
 
 impl Images {
     /// Writes every image as FITS and as a picture, each whole or not at all.
     pub(super) fn write(&self, folder: &Path) -> Result<Written, FilesError> {
-        let sheets = [
+        let dirty = [
             Sheet {
                 name: "dirty",
                 image: &self.dirty,
@@ -60,7 +70,7 @@ impl Images {
                 what: "dirty mosaic on the flat sky, N/W",
                 caption: "Flux density of an isolated point source at its pixel, corrected for the primary beams of all \
                           stations. Not deconvolved: side lobes of every source are still there.",
-                with_beam: true,
+                beam: self.header.beam,
             },
             Sheet {
                 name: "weight",
@@ -71,7 +81,7 @@ impl Images {
                 what: "inverse variance of the dirty image",
                 caption: "One over the square root of this number is the thermal noise at a pixel, as the weights of the \
                           visibilities state it.",
-                with_beam: false,
+                beam: None,
             },
             Sheet {
                 name: "psf",
@@ -82,15 +92,16 @@ impl Images {
                 what: "point spread function of the flat sky at its reference pixel",
                 caption: "What a source of 1 Jy at the peak, and nothing else, would look like in the dirty image. \
                           Elsewhere in a mosaic it differs.",
-                with_beam: true,
+                beam: self.header.beam,
             },
         ];
         let mut written = Written { products: Vec::new(), pictures: Vec::new() };
-        for sheet in &sheets {
+        let deconvolved = self.deconvolved.iter().flat_map(Deconvolved::sheets);
+        for sheet in deconvolved.chain(dirty) {
             let about = ProductHeader {
                 bunit: sheet.bunit.to_owned(),
                 description: sheet.what.to_owned(),
-                beam: if sheet.with_beam { self.header.beam } else { None },
+                beam: sheet.beam,
                 ..self.header.clone()
             };
             let file = format!("{}.fits", sheet.name);
@@ -101,7 +112,7 @@ impl Images {
                 quantity: sheet.quantity,
                 unit: sheet.unit,
                 geometry: self.geometry,
-                beam: if sheet.with_beam { self.header.beam } else { None },
+                beam: sheet.beam,
                 scale: None,
             };
             let canvas = paint(sheet.image.view(), &spec)?;
@@ -113,6 +124,12 @@ impl Images {
                 caption: sheet.caption.to_owned(),
                 png: canvas.png()?,
             });
+        }
+        if let Some(deconvolved) = &self.deconvolved {
+            let file = "components.csv";
+            write_whole(&folder.join(file), |out| write_components(out, &deconvolved.components))?;
+            let what = "components of the model, in a form that start_from and a simulation read".to_owned();
+            written.products.push(Product { path: file.to_owned(), what });
         }
         Ok(written)
     }

@@ -11,6 +11,7 @@
 
 pub mod describe;
 pub mod image;
+mod image_deconvolve;
 mod image_files;
 mod image_measure;
 pub mod inputs;

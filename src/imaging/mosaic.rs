@@ -17,6 +17,8 @@ pub struct Pointing {
     pub gridded: Gridded,
     /// The exact one, its judge.
     pub exact: Exact,
+    /// Where its stations aim.
+    pub aim: Direction,
     /// What its visibilities amount to.
     pub tally: Tally,
 }
@@ -106,8 +108,9 @@ impl Mosaic {
                 rows(block.rows() as u64);
             }
         }
+        let aim = beams.aim();
         let exact = Exact::new(&observation, beams, self.geometry);
-        self.pointings.push(Pointing { source, gridded, exact, tally });
+        self.pointings.push(Pointing { source, gridded, exact, aim, tally });
         Ok(())
     }
 

@@ -3,6 +3,7 @@
 //! Built with minijinja from `page.html` (kept beside this file), whose HTML escaping is on: no text of a run file or
 //! station table can become markup. Pictures are inside as data; nothing is loaded from anywhere.
 
+use super::deconvolution::deconvolution_line;
 use super::measured::{flux_with_error, measured_line};
 use super::record::RunRecord;
 use super::summary::{
@@ -90,11 +91,12 @@ pub fn render_page(record: &RunRecord, pictures: &[PagePicture]) -> Result<Strin
     let sentence = summary_sentence(record);
     let accuracy: Option<String> = record.accuracy.as_ref().map(accuracy_line);
     let broken = broken_promise(record);
+    let deconvolved: Option<String> = record.deconvolution.as_ref().map(deconvolution_line);
     let measured: Option<String> = record.measured.as_ref().map(measured_line);
     let beam_sizes: Option<String> = record.beam.as_ref().map(sizes);
     let limits: Vec<String> = limits.into_iter().map(str::to_string).collect();
     let page = environment.get_template("page.html")?.render(context! {
-        r => figures, sentence, accuracy, broken, measured, beam_sizes, pictures, settings, limits, total, longest
+        r => figures, sentence, accuracy, broken, deconvolved, measured, beam_sizes, pictures, settings, limits, total, longest
     })?;
     Ok(page)
 }

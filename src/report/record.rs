@@ -44,6 +44,9 @@ pub struct RunRecord {
     pub weighting: Option<WeightingFigures>,
     /// Noise figures from the weight map.
     pub noise: Option<Noise>,
+    /// What deconvolution did; `None` when there was none.
+    #[serde(default)]
+    pub deconvolution: Option<super::DeconvolutionFigures>,
     /// What measuring amounted to; `None` when no sources were measured.
     #[serde(default)]
     pub measured: Option<Measured>,

@@ -1,5 +1,6 @@
 //! The closing summary: what a person reads in ten seconds, and the same as one JSON object.
 
+use super::deconvolution::deconvolution_line;
 use super::measured::measured_line;
 use super::record::{Accuracy, BeamFigures, RunRecord, WeightingFigures};
 
@@ -18,6 +19,9 @@ pub fn summary_text(record: &RunRecord, folder: &str) -> String {
     }
     if let Some(noise) = &record.noise {
         push(&mut text, &format!("noise      {} at its lowest, thermal only", flux(noise.lowest_jy_per_beam)));
+    }
+    if let Some(figures) = &record.deconvolution {
+        push(&mut text, &format!("model      {}", deconvolution_line(figures)));
     }
     if let Some(beam) = &record.beam {
         push(

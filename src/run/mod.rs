@@ -33,6 +33,7 @@
 
 mod beams;
 mod calendar;
+mod deconvolution;
 mod document;
 mod error;
 mod image;
@@ -43,12 +44,13 @@ mod weighting;
 
 pub use beams::{Beam, SHAPES, Shape, StationRule, StationSettings};
 pub use calendar::{fits_date, iso_utc, mjd_of_day};
+pub use deconvolution::{Deconvolution, DeconvolutionMethod, NoiseSource};
 pub use document::At;
 pub use error::{Complaint, Problem, RunError};
 pub use image::{Image, MOST_PIXELS, Pointing, Sources, TOLERANCES};
 pub use measure::{FitErrors, FluxesFrom, Measure, SourceShape};
 pub use simulate::{Method, Simulate, SimulatedPointing};
-pub use tables::{LayoutMount, LayoutStation, StationRow, StationTable};
+pub use tables::{Circle, LayoutMount, LayoutStation, StationRow, StationTable};
 pub use weighting::{DensityOf, Scheme, Weighting};
 
 use document::{Document, Section, text};
@@ -69,6 +71,8 @@ pub struct RunFile {
     pub image: Option<Image>,
     /// `[weighting]`.
     pub weighting: Weighting,
+    /// `[deconvolution]`.
+    pub deconvolution: Deconvolution,
     /// `[measure]`; see [`RunFile::measure`] for it with its files checked.
     pub measure: Option<Measure>,
     /// Tables `[beams.NAME]`.
@@ -145,11 +149,13 @@ impl RunFile {
         Complaint::new(&self.path, line, key, problem)
     }
 
-    /// The files besides visibilities that decide the result: the run file, its station table, its list of positions.
+    /// The files besides visibilities that decide the result: the run file, its station table, what its `[deconvolution]`
+    /// names, its list of positions.
     pub fn inputs(&self) -> Vec<PathBuf> {
-        let stations = self.station_table.as_ref().map(|table| &table.path);
+        let table = self.station_table.as_ref().map(|table| &table.path);
         let positions = self.measure.as_ref().and_then(|m| m.positions.as_ref()).map(|at| &at.value);
-        std::iter::once(&self.path).chain(stations).chain(positions).cloned().collect()
+        let named = table.into_iter().chain(self.deconvolution.files()).chain(positions);
+        std::iter::once(&self.path).chain(named).cloned().collect()
     }
 
     fn missing(&self, key: &str, expected: &str) -> RunError {
@@ -192,6 +198,8 @@ fn read(root: &Section) -> RunFile {
     let image = root.table("image").and_then(|section| image::read_image(&section));
     let weighting = root.table("weighting").map_or_else(Weighting::default, |s| weighting::read_weighting(&s));
     let measure = root.table("measure").map(|section| measure::read_measure(&section));
+    let deconvolution =
+        root.table("deconvolution").map_or_else(Deconvolution::default, |s| deconvolution::read_deconvolution(&s));
     let beam_sections = root.table("beams").map(|beams| beams.named_tables()).unwrap_or_default();
     // a beam that is itself wrong is still a name that exists
     let beam_names: Vec<String> = beam_sections.iter().map(|(name, _)| name.clone()).collect();
@@ -222,6 +230,7 @@ fn read(root: &Section) -> RunFile {
         pointings,
         image,
         weighting,
+        deconvolution,
         measure,
         beams,
         station_table,

@@ -57,6 +57,15 @@ pub struct LayoutStation {
     pub diameter_m: Option<f64>,
 }
 
+/// A circle on the sky.
+#[derive(Debug, Clone, Copy, PartialEq, Serialize)]
+pub struct Circle {
+    /// Right ascension and declination of its centre (ICRS), degrees.
+    pub centre_deg: [f64; 2],
+    /// Radius, arcseconds.
+    pub radius_arcsec: f64,
+}
+
 /// A CSV file with a heading, its cells reached by column name.
 struct Csv<'p> {
     path: &'p Path,
@@ -245,4 +254,22 @@ pub(super) fn read_layout(path: &Path) -> Result<Vec<LayoutStation>, Vec<Complai
         complaints.push(Complaint::new(path, 1, "name", Problem::value("one station", "at least two stations")));
     }
     if complaints.is_empty() { Ok(rows.into_iter().map(|(_, station)| station).collect()) } else { Err(complaints) }
+}
+
+/// Reads circles: columns `ra_deg`, `dec_deg`, `radius_arcsec`; others are left alone.
+pub(super) fn read_circles(path: &Path) -> Result<Vec<Circle>, Vec<Complaint>> {
+    let known = ["ra_deg", "dec_deg", "radius_arcsec"];
+    Csv::read(path, &known, &known, |table, line, record| {
+        let mut needed = |column: &str, expected: &str, accepts: fn(f64) -> bool| {
+            let number = table.number(line, record, column, expected, accepts).ok()?;
+            if number.is_none() {
+                table.complain(line, column, Problem::value("an empty cell", expected));
+            }
+            number
+        };
+        let ra = needed("ra_deg", "a right ascension in degrees, -360 to 360", |deg| deg.abs() <= 360.0);
+        let dec = needed("dec_deg", "a declination in degrees, -90 to 90", |deg| deg.abs() <= 90.0);
+        let radius = needed("radius_arcsec", "a radius in arcseconds, greater than 0", |arcsec| arcsec > 0.0);
+        Some(Circle { centre_deg: [ra?, dec?], radius_arcsec: radius? })
+    })
 }

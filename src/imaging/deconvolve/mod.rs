@@ -1,0 +1,576 @@
+//! Deconvolution: a model sky whose predicted visibilities leave nothing but noise.
+//!
+//! **Major cycles.** Residual visibilities V − predict(model) go through the same [`Response`](crate::response::Response),
+//! with the same beams of every station at every time, that made the dirty image; their numerator N is the truth that the
+//! next minor cycle starts from. **Minor cycles** find components on the search image N/t, t the noise of N (√W for
+//! natural weights: the flat-noise image), with local point spread functions ([`local_psf`]).
+//!
+//! The misfit χ²(c) = Σ ω |V − predict(model + α c)|² of a cycle's components c is a parabola in α that costs nothing to
+//! know. With N before and N' after the cycle, at α = 1,
+//!
+//! χ²(α) = χ²(0) − 2 α b + α² q,  b = Σ_s c_s N(s),  q = Σ_s c_s (N(s) − N'(s)).
+//!
+//! Where the misfit would not fall well (b/q < 3/4) only the share α = b/q of the components is taken, and the residual,
+//! linear in α, with it. So χ² falls in every cycle whatever the local point spread functions err (for components of one
+//! flat spectrum, to the tolerance of the response): this is what makes a mosaic converge. How far the minor cycles may go
+//! before their errors pass for sources is bounded by the same errors, measured: see [`MajorCycle::psf_misfit`]. Where a
+//! cycle's components cannot lower the misfit at all (b ≤ 0), the minor cycle is made again with an eighth of them; the
+//! first component alone, g N(s)/W(s) at the peak, has b/q = 1/g ≥ 1.
+//!
+//! Files, in the order of a run: `local_psf`, `local_noise` (measured noise, masks that grow), `search` (inner loops),
+//! `minor` and `multi_scale` (minor cycles), `residual` (major cycles), `points` (compact sources fitted), `restore`.
+
+pub mod local_noise;
+pub mod local_psf;
+mod mask;
+pub mod minor;
+mod model;
+pub mod multi_scale;
+mod points;
+mod residual;
+mod restore;
+pub mod search;
+mod settings;
+
+pub use mask::{MaskError, circles_mask, read_mask};
+pub use model::{Model, write_components};
+pub use points::MOST_POINTS;
+pub use residual::{Part, ResidualSource, Sky, residual_numerator};
+pub use restore::restored_model;
+pub use settings::{MajorCycle, Minor, NoiseLevel, Settings, Stop};
+
+use super::beam_fit::FittedBeam;
+use crate::response::ResponseError;
+use crate::sky::ImageGeometry;
+use local_psf::{LocalPsfs, Scaling};
+use minor::{Found, Start};
+use ndarray::{Array2, Zip};
+use points::Crowd;
+use search::{Levels, Searched, Whole};
+
+/// Half width of the patches of Clark's and the multi-scale minor cycle, pixels.
+const PATCH_HALF: usize = 256;
+/// Share b/q below which only that share of a cycle's components is taken.
+const WHOLE_STEP: f64 = 0.75;
+/// A cycle that lowers the peak by less than this fraction has not.
+const FALL: f64 = 0.02;
+/// So many cycles in a row without a lower peak are enough.
+const PATIENCE: usize = 5;
+/// Compact sources are fitted when the highest residual has fallen to this fraction since the last time.
+const FIT_EVERY: f64 = 0.1;
+/// Most times that compact sources are fitted.
+const MOST_FITS: usize = 8;
+/// At the end they are fitted when it has fallen to this fraction since the last time.
+const FIT_AT_END: f64 = 0.5;
+/// Brightness, in multiples of the highest residual, above which parts of the model are taken for sources.
+const ESTABLISHED: f64 = 3.0;
+/// A fitted point is kept where it leaves less than what is established, or this multiple of the noise,
+const FIT_KEPT: f64 = 4.0;
+/// or this fraction of itself.
+const FIT_PART: f64 = 0.1;
+/// A point that leaves more than this multiple of the noise is tried as a double,
+const SPLIT_ABOVE: f64 = 5.0;
+/// which is kept where it leaves less than this fraction of that.
+const SPLIT_GAIN: f64 = 0.6;
+/// Rounds in which the worst points are tried as doubles, in one fit.
+const MOST_ROUNDS: usize = 4;
+
+/// What is to be deconvolved. Images are `[y][x]`.
+pub struct Task<'a> {
+    /// The pixel grid.
+    pub geometry: ImageGeometry,
+    /// The pointings.
+    pub parts: Vec<Part<'a>>,
+    /// Numerator N of the data, Jy · Jy⁻².
+    pub numerator: &'a Array2<f64>,
+    /// Normaliser W, Jy⁻².
+    pub normaliser: &'a Array2<f64>,
+    /// Weight map: inverse variance of N/W, Jy⁻² (W itself for natural weights).
+    pub weight: &'a Array2<f64>,
+    /// Pixels that are not blank.
+    pub seen: &'a Array2<bool>,
+    /// Pixels that may hold components; `None`: all that are seen.
+    pub mask: Option<Array2<bool>>,
+    /// What is known beforehand.
+    pub start: Model,
+    /// Restoring beam (a length for masks and fits).
+    pub beam: FittedBeam,
+    /// Settings.
+    pub settings: Settings,
+}
+
+/// What came of it.
+#[derive(Debug, Clone)]
+pub struct Outcome {
+    /// The model.
+    pub model: Model,
+    /// Numerator of the residual of the last major cycle.
+    pub numerator: Array2<f64>,
+    /// Components found in all minor cycles.
+    pub components: u64,
+    /// Major cycles.
+    pub cycles: Vec<MajorCycle>,
+    /// Why it ended.
+    pub stop: Stop,
+    /// Compact sources that stand as fitted points.
+    pub fitted_points: usize,
+    /// Highest side lobe of the local point spread functions.
+    pub side_lobe: f64,
+    /// Pixels where components were looked for, at the end.
+    pub searched_pixels: usize,
+}
+
+/// Who wants to know how it goes.
+pub trait Observer: Send {
+    /// Rows of visibilities have been read.
+    fn rows(&mut self, rows: u64);
+    /// A major cycle ended.
+    fn cycle(&mut self, number: usize, cycle: &MajorCycle);
+}
+
+/// Nobody.
+impl Observer for () {
+    fn rows(&mut self, _: u64) {}
+    fn cycle(&mut self, _: usize, _: &MajorCycle) {}
+}
+
+/// Deconvolves.
+///
+/// # Errors
+/// When visibilities cannot be read or the model cannot be predicted.
+pub fn deconvolve(mut task: Task, observer: &mut dyn Observer) -> Result<Outcome, ResponseError> {
+    let scaling = Scaling::new(task.normaliser, task.weight, task.seen);
+    let model = std::mem::replace(&mut task.start, Model::empty(&task.geometry));
+    let fresh = model.points.is_empty() && model.pixels.iter().all(|flux| *flux == 0.0);
+    let mut run = Run {
+        allowed: allowed(&task, &scaling),
+        grown: vec![false; task.numerator.len()],
+        numerator: task.numerator.clone(),
+        model,
+        scaling,
+        components: 0,
+        cycles: Vec::new(),
+        crowds: Vec::new(),
+        refused: Vec::new(),
+        fits: 0,
+        last_fit: None,
+        task,
+    };
+    if !fresh {
+        run.numerator = run.residual(&run.model.clone(), observer)?;
+    }
+    run.go(observer)
+}
+
+/// Pixels that may ever hold a component.
+fn allowed(task: &Task, scaling: &Scaling) -> Vec<bool> {
+    match &task.mask {
+        None => scaling.noise.iter().map(|t| *t > 0.0).collect(),
+        Some(mask) => scaling.noise.iter().zip(mask).map(|(t, open)| *t > 0.0 && *open).collect(),
+    }
+}
+
+struct Run<'a> {
+    task: Task<'a>,
+    scaling: Scaling,
+    allowed: Vec<bool>,
+    /// The automatic mask.
+    grown: Vec<bool>,
+    model: Model,
+    numerator: Array2<f64>,
+    components: u64,
+    cycles: Vec<MajorCycle>,
+    /// The pixels that fitted points replaced.
+    crowds: Vec<Crowd>,
+    /// Places (pixels) where a point was tried and did not fit.
+    refused: Vec<(f64, f64)>,
+    fits: usize,
+    /// The highest residual when compact sources were last fitted, and the cycles by then.
+    last_fit: Option<(f64, usize)>,
+}
+
+impl Run<'_> {
+    fn settings(&self) -> &Settings {
+        &self.task.settings
+    }
+
+    fn beam_px(&self) -> f64 {
+        self.task.beam.major / self.task.geometry.pixel
+    }
+
+    fn residual(&mut self, model: &Model, observer: &mut dyn Observer) -> Result<Array2<f64>, ResponseError> {
+        let settings = &self.task.settings;
+        let pixels = model.pixel_components(&self.task.geometry, settings.reference_hz, settings.spectral_index);
+        let sky = Sky { pixels, points: model.points.clone() };
+        residual_numerator(&mut self.task.parts, &self.task.geometry, &sky, &mut |rows| observer.rows(rows))
+    }
+
+    fn go(mut self, observer: &mut dyn Observer) -> Result<Outcome, ResponseError> {
+        let (most_half, copies) = match &self.settings().minor {
+            Minor::Hogbom => (usize::MAX, 1),
+            Minor::Clark => (PATCH_HALF, 1),
+            Minor::MultiScale { scales_px, .. } => (PATCH_HALF, 1 + multi_scale::copies(scales_px.len())),
+        };
+        let psfs = LocalPsfs::measure(
+            &mut self.task.parts,
+            &self.task.geometry,
+            &self.scaling,
+            most_half,
+            copies,
+            &mut |rows| observer.rows(rows),
+        )?;
+        // before anything is measured, what lies beyond the patches is what they are known to miss
+        let mut misfit = 0.5 * psfs.beyond;
+        let mut lowest = f64::INFINITY;
+        let mut waited = 0;
+        let (stop, levels) = loop {
+            let image = self.scaling.search_image(&self.numerator);
+            let levels = self.levels(&image);
+            if levels.up.iter().all(|level| level.is_infinite()) && self.settings().mask_above_noise.is_none() {
+                break (Stop::NothingToSearch, levels);
+            }
+            let whole = Whole::new(self.task.geometry.width, self.task.geometry.height, image, levels);
+            let peak = whole.peak().map(|peak| f64::from(peak.value.abs()));
+            let levels = whole.levels().clone();
+            let image = whole.into_image();
+            if self.fit_is_due(&image, peak) {
+                self.fit(observer)?;
+                (lowest, waited) = (f64::INFINITY, 0);
+                continue;
+            }
+            let Some(peak) = peak else { break (self.reached(&image), levels) };
+            if self.components >= self.settings().max_components {
+                break (Stop::Components, levels);
+            }
+            if self.cycles.len() >= self.settings().max_major_cycles {
+                break (Stop::MajorCycles, levels);
+            }
+            if peak < (1.0 - FALL) * lowest {
+                (lowest, waited) = (peak, 0);
+            } else {
+                waited += 1;
+                if waited >= PATIENCE {
+                    break (Stop::Stalled, levels);
+                }
+            }
+            let mut most = self.settings().max_components - self.components;
+            let taken = loop {
+                let found = self.minor(&image, levels.clone(), &psfs, peak, misfit, most);
+                let count = found.components;
+                if count == 0 {
+                    break Err(Stop::Stalled);
+                }
+                let (lowered, measured) = self.major(found, observer)?;
+                misfit = 2.0 * measured;
+                if lowered {
+                    break Ok(());
+                }
+                if count == 1 {
+                    break Err(Stop::Diverged);
+                }
+                // too many components for these point spread functions; the first alone, at a peak, lowers the misfit
+                most = (count / 8).max(1);
+            };
+            if let Err(stop) = taken {
+                break (stop, levels);
+            }
+        };
+        let points = self.model.points.iter().filter(|point| points::made_here(point)).count();
+        Ok(Outcome {
+            model: self.model,
+            numerator: self.numerator,
+            components: self.components,
+            cycles: self.cycles,
+            stop,
+            fitted_points: points,
+            side_lobe: psfs.side_lobe,
+            searched_pixels: levels.up.iter().filter(|level| level.is_finite()).count(),
+        })
+    }
+
+    /// Levels of all pixels now; the automatic mask grows here.
+    fn levels(&mut self, image: &[f32]) -> Levels {
+        let settings = &self.task.settings;
+        let width = self.task.geometry.width;
+        let seen: Vec<bool> = self.scaling.noise.iter().map(|t| *t > 0.0).collect();
+        let measured = (settings.noise == NoiseLevel::Measured || settings.mask_above_noise.is_some())
+            .then(|| local_noise::local_noise(image, &seen, width, self.beam_px()));
+        if let (Some(above), Some(noise)) = (settings.mask_above_noise, &measured) {
+            let reach = 0.5 * self.beam_px();
+            local_noise::grow_mask(&mut self.grown, image, noise, width, above, reach);
+        }
+        let masked = settings.mask_above_noise.is_some();
+        let up: Vec<f32> = self
+            .scaling
+            .per_jy
+            .iter()
+            .enumerate()
+            .map(|(at, per_jy)| {
+                if !self.allowed[at] || (masked && !self.grown[at]) {
+                    return f32::INFINITY;
+                }
+                let noise = match (&measured, settings.noise) {
+                    (Some(noise), NoiseLevel::Measured) => f64::from(noise[at]).max(1.0),
+                    _ => 1.0,
+                };
+                (settings.stop_at_noise * noise).max(settings.stop_at_jy * per_jy) as f32
+            })
+            .collect();
+        let mut down = up.clone();
+        if settings.non_negative {
+            down.iter_mut().zip(&self.model.pixels).filter(|(_, flux)| **flux <= 0.0).for_each(|(level, _)| {
+                *level = f32::INFINITY;
+            });
+        }
+        Levels { up, down }
+    }
+
+    /// Which of the two levels ended it: the one that binds at the highest pixel left.
+    fn reached(&self, image: &[f32]) -> Stop {
+        let settings = &self.task.settings;
+        let highest = image
+            .iter()
+            .enumerate()
+            .filter(|(at, _)| self.allowed[*at])
+            .max_by(|a, b| a.1.abs().total_cmp(&b.1.abs()))
+            .map(|(at, _)| at);
+        let per_jy = highest.and_then(|at| self.scaling.per_jy.iter().nth(at).copied()).unwrap_or(0.0);
+        if settings.stop_at_jy * per_jy > settings.stop_at_noise { Stop::FluxDensity } else { Stop::Noise }
+    }
+
+    fn minor(&self, image: &[f32], levels: Levels, psfs: &LocalPsfs, peak: f64, misfit: f64, most: u64) -> Found {
+        let settings = &self.task.settings;
+        let start = Start {
+            width: self.task.geometry.width,
+            height: self.task.geometry.height,
+            image,
+            levels,
+            psfs,
+            loop_gain: settings.loop_gain,
+            level: settings.major_depth * peak,
+            misfit,
+            most,
+            floor: settings.non_negative.then(|| &self.model.pixels * &self.scaling.per_jy),
+        };
+        match &settings.minor {
+            Minor::Hogbom => minor::hogbom(start),
+            Minor::Clark => minor::clark(start),
+            Minor::MultiScale { scales_px, bias } => multi_scale::multi_scale(start, scales_px, *bias),
+        }
+    }
+
+    /// Takes a minor cycle's components through the visibilities. Returns whether that lowered the misfit (nothing is
+    /// changed where not), and how much the point spread functions erred.
+    fn major(&mut self, found: Found, observer: &mut dyn Observer) -> Result<(bool, f64), ResponseError> {
+        let mut update = found.amplitudes;
+        Zip::from(&mut update).and(&self.scaling.per_jy).for_each(|value, per_jy| {
+            *value = if *per_jy > 0.0 { *value / per_jy } else { 0.0 };
+        });
+        let mut trial = self.model.clone();
+        trial.pixels += &update;
+        let after = self.residual(&trial, observer)?;
+        let (mut b, mut q) = (0.0, 0.0);
+        Zip::from(&update).and(&self.numerator).and(&after).for_each(|c, before, after| {
+            b += c * before;
+            q += c * (before - after);
+        });
+        let truth = self.scaling.search_image(&after);
+        let erred = found.expected.iter().map(|&(at, value)| (truth[at] - value).abs()).fold(0.0, f32::max);
+        let psf_misfit = if found.moved > 0.0 { f64::from(erred) / found.moved } else { 0.0 };
+        if !(b > 0.0 && q > 0.0 && q.is_finite()) {
+            return Ok((false, psf_misfit));
+        }
+        let step = if b / q < WHOLE_STEP { b / q } else { 1.0 };
+        if step == 1.0 {
+            (self.model, self.numerator) = (trial, after);
+        } else {
+            self.model.pixels.scaled_add(step, &update);
+            Zip::from(&mut self.numerator).and(&after).for_each(|n, after| *n += step * (after - *n));
+        }
+        self.components += found.components;
+        let cycle = self.described(found.components, step, psf_misfit);
+        observer.cycle(self.cycles.len() + 1, &cycle);
+        self.cycles.push(cycle);
+        Ok((true, psf_misfit))
+    }
+
+    /// The state after a cycle.
+    fn described(&self, components: u64, step: f64, psf_misfit: f64) -> MajorCycle {
+        let image = self.scaling.search_image(&self.numerator);
+        let mut peak = (0.0f32, 0);
+        for (at, value) in image.iter().enumerate().filter(|(at, _)| self.allowed[*at]) {
+            if value.abs() > peak.0 {
+                peak = (value.abs(), at);
+            }
+        }
+        let per_jy = self.scaling.per_jy.iter().nth(peak.1).copied().unwrap_or(0.0);
+        let peak_over_noise = f64::from(peak.0);
+        MajorCycle {
+            components,
+            model_jy: self.model.flux_at(self.settings().reference_hz),
+            peak_over_noise,
+            peak_jy_per_beam: if per_jy > 0.0 { peak_over_noise / per_jy } else { 0.0 },
+            step,
+            psf_misfit,
+        }
+    }
+
+    /// Whether compact sources are to be fitted now: `peak` is the highest above its level, if there is one.
+    fn fit_is_due(&self, image: &[f32], peak: Option<f64>) -> bool {
+        if self.settings().fit_points_above_noise.is_none() || self.fits >= MOST_FITS || self.cycles.is_empty() {
+            return false;
+        }
+        let height = self.highest(image);
+        let (reference, cycles) = match self.last_fit {
+            Some(last) => last,
+            None => (self.highest(&self.scaling.search_image(self.task.numerator)), 0),
+        };
+        let ends = peak.is_none()
+            || self.cycles.len() >= self.settings().max_major_cycles
+            || self.components >= self.settings().max_components;
+        self.cycles.len() > cycles && height <= if ends { FIT_AT_END } else { FIT_EVERY } * reference
+    }
+
+    /// The highest absolute value where components are allowed.
+    fn highest(&self, image: &[f32]) -> f64 {
+        let allowed = image.iter().zip(&self.allowed).filter(|(_, allowed)| **allowed);
+        f64::from(allowed.map(|(value, _)| value.abs()).fold(0.0, f32::max))
+    }
+
+    fn fit(&mut self, observer: &mut dyn Observer) -> Result<(), ResponseError> {
+        let Some(above) = self.settings().fit_points_above_noise else { return Ok(()) };
+        let height = self.highest(&self.scaling.search_image(&self.numerator));
+        self.fits += 1;
+        self.last_fit = Some((height, self.cycles.len()));
+        let mut model = self.model.clone();
+        let established = ESTABLISHED * height;
+        let field = points::Field {
+            geometry: &self.task.geometry,
+            scaling: &self.scaling,
+            beam: &self.task.beam,
+            settings: &self.task.settings,
+            numerator: &self.numerator,
+            above: above.max(established),
+            doubtful: established,
+            refused: &self.refused,
+        };
+        let new = points::replace_crowds(&mut model, &field);
+        self.refused.clear();
+        self.crowds.extend(new);
+        let mut numerator = self.refined(&mut model, observer)?;
+        let mut tried: Vec<String> = Vec::new();
+        for _ in 0..MOST_ROUNDS {
+            if !self.split_worst(&mut model, &mut numerator, &mut tried, observer)? {
+                break;
+            }
+        }
+        // what points do not describe at all becomes pixels again
+        let image = self.scaling.search_image(&numerator);
+        let (kept, failed): (Vec<Crowd>, Vec<Crowd>) = std::mem::take(&mut self.crowds)
+            .into_iter()
+            .partition(|crowd| self.fits_well(crowd, &model, &image, established.max(FIT_KEPT)));
+        self.crowds = kept;
+        for crowd in &failed {
+            model.points.retain(|point| !crowd.names.contains(&point.name));
+            crowd.pixels.iter().for_each(|(pixel, flux)| model.pixels[*pixel] += flux);
+            self.refused.push(crowd.middle());
+        }
+        if !failed.is_empty() {
+            numerator = self.refined(&mut model, observer)?;
+        }
+        (self.model, self.numerator) = (model, numerator);
+        Ok(())
+    }
+
+    /// Tries the points that leave most as doubles, and keeps those doubles that leave much less. The others are not
+    /// touched: their residual may be the side lobes of these. False when there is nothing to try.
+    fn split_worst(
+        &mut self,
+        model: &mut Model,
+        numerator: &mut Array2<f64>,
+        tried: &mut Vec<String>,
+        observer: &mut dyn Observer,
+    ) -> Result<bool, ResponseError> {
+        let image = self.scaling.search_image(numerator);
+        let left: Vec<f64> = self.crowds.iter().map(|crowd| self.highest_around(&image, crowd.middle())).collect();
+        let open =
+            |crowd: &Crowd| crowd.names.len() == 1 && crowd.pixels.len() > 1 && !tried.contains(&crowd.names[0]);
+        let candidates = self.crowds.iter().zip(&left).filter(|(crowd, _)| open(crowd));
+        let worst = candidates.map(|(_, left)| *left).fold(0.0, f64::max);
+        if worst <= SPLIT_ABOVE {
+            return Ok(false);
+        }
+        let chosen: Vec<usize> =
+            (0..left.len()).filter(|&n| open(&self.crowds[n]) && left[n] >= 0.5 * worst).collect();
+        let mut trial = model.clone();
+        let mut pairs = Vec::new();
+        for &n in &chosen {
+            let crowd = &self.crowds[n];
+            tried.push(crowd.names[0].clone());
+            let number = points::next_number(&model.points).max(points::next_number(&trial.points));
+            let pair = crowd.double(&self.task.geometry, &self.task.settings, number);
+            trial.points.retain(|point| !crowd.names.contains(&point.name));
+            pairs.push(pair.iter().map(|point| point.name.clone()).collect::<Vec<_>>());
+            trial.points.extend(pair);
+        }
+        let refined = self.refined(&mut trial, observer)?;
+        let image = self.scaling.search_image(&refined);
+        let mut undone = false;
+        for (&n, names) in chosen.iter().zip(pairs) {
+            let now = self.highest_around(&image, self.crowds[n].middle());
+            if now < SPLIT_GAIN * left[n] {
+                tried.extend(names.iter().cloned());
+                self.crowds[n].names = names;
+            } else {
+                trial.points.retain(|point| !names.contains(&point.name));
+                let single = model.points.iter().find(|point| self.crowds[n].names.contains(&point.name));
+                trial.points.extend(single.cloned());
+                undone = true;
+            }
+        }
+        *numerator = if undone { self.refined(&mut trial, observer)? } else { refined };
+        *model = trial;
+        Ok(true)
+    }
+
+    /// Fits the points of a model; its residual.
+    fn refined(&mut self, model: &mut Model, observer: &mut dyn Observer) -> Result<Array2<f64>, ResponseError> {
+        points::refine(
+            &mut self.task.parts,
+            &self.task.geometry,
+            model,
+            &self.task.beam,
+            &self.task.settings,
+            &mut |rows| observer.rows(rows),
+        )?;
+        self.residual(model, observer)
+    }
+
+    /// Whether points stand where their pixels were, and leave no more than `most` there, or a small part of themselves
+    /// (which pixels then describe).
+    fn fits_well(&self, crowd: &Crowd, model: &Model, image: &[f32], most: f64) -> bool {
+        let middle = crowd.middle();
+        let (mut near, mut flux) = (true, 0.0);
+        for point in model.points.iter().filter(|point| crowd.names.contains(&point.name)) {
+            let place = self.task.geometry.pixel_of(point.direction);
+            near &= place.is_some_and(|(x, y)| (x - middle.0).hypot(y - middle.1) <= self.beam_px());
+            flux += point.flux_at(self.settings().reference_hz);
+        }
+        let pixel = [middle.1.round() as usize, middle.0.round() as usize];
+        let own = flux.abs() * self.scaling.per_jy.get(pixel).copied().unwrap_or(0.0);
+        near && self.highest_around(image, middle) <= most.max(FIT_PART * own)
+    }
+
+    /// Highest absolute value within a beam of a pixel.
+    fn highest_around(&self, image: &[f32], (x, y): (f64, f64)) -> f64 {
+        let (width, height) = (self.task.geometry.width, self.task.geometry.height);
+        let reach = self.beam_px();
+        let span = |v: f64, n: usize| {
+            let low = (v - reach).max(0.0) as usize;
+            low.min(n)..((v + reach).max(0.0) as usize + 1).min(n)
+        };
+        let columns = span(x, width);
+        let around = span(y, height).flat_map(|row| columns.clone().map(move |column| row * width + column));
+        f64::from(around.map(|at| image[at].abs()).fold(0.0, f32::max))
+    }
+}
