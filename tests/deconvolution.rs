@@ -107,7 +107,7 @@ fn a_mosaic_converges_even_with_reckless_minor_cycles() {
 #[test]
 fn multi_scale_keeps_the_flux_of_a_gaussian() {
     let pixel = (50.0 / 3600f64).to_radians();
-    let setting = Setting { radius_m: 110.0, stations: 14, beam: Beam::Gaussian, channels: 2, ..setting() };
+    let setting = Setting { radius_m: 110.0, stations: 20, beam: Beam::Gaussian, channels: 2, ..setting() };
     let geometry = ImageGeometry::new(setting.aim, 96, 96, pixel).unwrap();
     let (width_px, jy, half_px) = (6.0, 2.0, 18);
     let shape = |d: f64| (-4.0 * std::f64::consts::LN_2 * (d / width_px).powi(2)).exp();
@@ -125,7 +125,8 @@ fn multi_scale_keeps_the_flux_of_a_gaussian() {
     let flux = flux_around(&outcome.model, cx, cy, 1.5 * width_px);
     let left = largest(&field.residual(&outcome));
     println!(
-        "{flux} Jy of {jy}, {} components, {} cycles, {:?}, left {left:.2e}",
+        "{flux} Jy of {jy}, {} in all, {} components, {} cycles, {:?}, left {left:.2e}",
+        outcome.model.flux_at(HZ),
         outcome.components,
         outcome.cycles.len(),
         outcome.stop

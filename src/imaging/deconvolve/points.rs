@@ -26,6 +26,8 @@ use ndarray::Array2;
 pub const MOST_POINTS: usize = 200;
 /// Passes over the visibilities of one fit.
 const MOST_PASSES: usize = 10;
+/// Brightness of pixels within a beam of a point, as a fraction of it, below which they are as likely its errors.
+const BESIDE_A_POINT: f64 = 0.1;
 /// Steps for derivatives along l and m, as a fraction of the beam's minor axis.
 const STEP: f64 = 0.05;
 /// Standard deviation of the weak term on spectral indices.
@@ -145,12 +147,32 @@ pub fn replace_crowds(model: &mut Model, field: &Field) -> Vec<Crowd> {
         crowds.push(Crowd { names: vec![component.name.clone()], pixels });
         model.points.push(component);
     }
+    drop_doubtful(model, field);
+    crowds
+}
+
+/// Takes away pixels whose brightness, without the points, is below what is established, or a small part of a point within
+/// a beam of them.
+fn drop_doubtful(model: &mut Model, field: &Field) {
+    let hz = field.settings.reference_hz;
+    let on_pixels = Model { pixels: model.pixels.clone(), points: Vec::new() };
+    let restored = restored_model(&on_pixels, field.geometry, field.beam, hz);
     for ((flux, brightness), per_jy) in model.pixels.iter_mut().zip(&restored).zip(&field.scaling.per_jy) {
         if (brightness * per_jy).abs() < field.doubtful {
             *flux = 0.0;
         }
     }
-    crowds
+    let within = field.beam.major / field.geometry.pixel;
+    let Model { pixels, points } = model;
+    for point in points.iter().filter(|point| made_here(point)) {
+        let Some(place) = field.geometry.pixel_of(point.direction) else { continue };
+        let most = BESIDE_A_POINT * point.flux_at(hz).abs();
+        for (pixel, _) in around(pixels, place, within) {
+            if restored[pixel].abs() < most {
+                pixels[pixel] = 0.0;
+            }
+        }
+    }
 }
 
 /// Whether this module made a point.
