@@ -21,6 +21,8 @@ use crate::response::{Exact, ResponseError};
 use crate::sky::{Component, ImageGeometry};
 use nalgebra::{DMatrix, DVector};
 use ndarray::Array2;
+use num_complex::{Complex32, Complex64};
+use rayon::prelude::*;
 
 /// Most sources fitted: the normal matrix has four rows for each, and each is predicted five times a pass.
 pub const MOST_POINTS: usize = 200;
@@ -31,7 +33,7 @@ const STEP: f64 = 0.05;
 /// Standard deviation of the weak term on spectral indices.
 const INDEX_SIGMA: f64 = 3.0;
 /// Samples taken into the normal matrix at a time.
-const SAMPLES: usize = 1 << 14;
+const SAMPLES: usize = 1 << 13;
 /// Numbers fitted for each source.
 const EACH: usize = 4;
 
@@ -145,12 +147,27 @@ pub fn replace_crowds(model: &mut Model, field: &Field) -> Vec<Crowd> {
         crowds.push(Crowd { names: vec![component.name.clone()], pixels });
         model.points.push(component);
     }
+    drop_doubtful(model, field);
+    crowds
+}
+
+/// Takes away pixels whose brightness, without the points, is below what is established, and all within a beam of a point:
+/// they are as likely the errors of an earlier fit as anything else.
+fn drop_doubtful(model: &mut Model, field: &Field) {
+    let hz = field.settings.reference_hz;
+    let on_pixels = Model { pixels: model.pixels.clone(), points: Vec::new() };
+    let restored = restored_model(&on_pixels, field.geometry, field.beam, hz);
     for ((flux, brightness), per_jy) in model.pixels.iter_mut().zip(&restored).zip(&field.scaling.per_jy) {
         if (brightness * per_jy).abs() < field.doubtful {
             *flux = 0.0;
         }
     }
-    crowds
+    let within = field.beam.major / field.geometry.pixel;
+    let Model { pixels, points } = model;
+    for point in points.iter().filter(|point| made_here(point)) {
+        let Some(place) = field.geometry.pixel_of(point.direction) else { continue };
+        around(pixels, place, within).iter().for_each(|(pixel, _)| pixels[*pixel] = 0.0);
+    }
 }
 
 /// Whether this module made a point.
@@ -185,8 +202,11 @@ fn around(pixels: &Array2<f64>, place: (f64, f64), reach: f64) -> Vec<([usize; 2
         .collect()
 }
 
+/// Pixels of the model and their flux densities, Jy.
+type Crowd = Vec<([usize; 2], f64)>;
+
 /// Peaks of model and residual together that are bright enough and stand alone, brightest first, each with its crowd.
-fn candidates(model: &Model, restored: &Array2<f64>, field: &Field) -> Vec<(Component, Vec<([usize; 2], f64)>)> {
+fn candidates(model: &Model, restored: &Array2<f64>, field: &Field) -> Vec<(Component, Crowd)> {
     let Field { geometry, scaling, beam, settings, .. } = *field;
     let mut image = restored.clone();
     for ((value, n), (w, t)) in
@@ -321,7 +341,25 @@ struct Normal {
     chi2: f64,
 }
 
+/// A visibility, or the mean of the hands that see the same.
+struct Sample {
+    at: usize,
+    channel: usize,
+    root_weight: f64,
+    residual: [f64; 2],
+}
+
 impl Normal {
+    fn zero(unknowns: usize) -> Normal {
+        Normal { matrix: DMatrix::zeros(unknowns, unknowns), right: DVector::zeros(unknowns), chi2: 0.0 }
+    }
+
+    fn sum(&mut self, other: Normal) {
+        self.matrix += other.matrix;
+        self.right += other.right;
+        self.chi2 += other.chi2;
+    }
+
     fn gather(
         parts: &mut [Part],
         geometry: &ImageGeometry,
@@ -332,8 +370,7 @@ impl Normal {
         rows: &mut (dyn FnMut(u64) + Send),
     ) -> Result<Normal, ResponseError> {
         let unknowns = EACH * points.len();
-        let mut normal =
-            Normal { matrix: DMatrix::zeros(unknowns, unknowns), right: DVector::zeros(unknowns), chi2: 0.0 };
+        let mut normal = Normal::zero(unknowns);
         let step_px = STEP * beam.minor / geometry.pixel;
         for part in parts {
             let exact = part.exact;
@@ -344,10 +381,18 @@ impl Normal {
             while let Some(block) = residual.next_block()? {
                 rows(block.rows() as u64);
                 let at_once = (SAMPLES / (block.channels * hands.len()).max(1)).max(1);
-                for start in (0..block.rows()).step_by(at_once) {
-                    let piece = rows_of(&block, start..(start + at_once).min(block.rows()));
-                    normal.add(&piece, exact, geometry, points, step_px, &hands, &observation.frequencies_hz);
-                }
+                let starts: Vec<usize> = (0..block.rows()).step_by(at_once).collect();
+                // in the order of the rows, so that the number of threads changes nothing
+                let pieces: Vec<Normal> = starts
+                    .par_iter()
+                    .map(|&start| {
+                        let piece = rows_of(&block, start..(start + at_once).min(block.rows()));
+                        let mut part = Normal::zero(unknowns);
+                        part.add(&piece, exact, geometry, points, step_px, &hands, &observation.frequencies_hz);
+                        part
+                    })
+                    .collect();
+                pieces.into_iter().for_each(|piece| normal.sum(piece));
             }
             residual.finish()?;
         }
@@ -372,31 +417,23 @@ impl Normal {
         hands: &[usize],
         frequencies_hz: &[f64],
     ) {
-        let used: Vec<(usize, usize)> = (0..residual.rows())
-            .flat_map(|row| (0..residual.channels).map(move |channel| (row, channel)))
-            .flat_map(|(row, channel)| {
-                let at = residual.index(row, channel);
-                hands.iter().map(move |hand| (at + hand, channel))
-            })
-            .filter(|&(at, _)| residual.weight[at] > 0.0)
-            .collect();
-        // two real rows a sample, √ω times; one column an unknown, the last for the residual
-        let mut columns = DMatrix::<f64>::zeros(2 * used.len(), EACH * points.len() + 1);
-        let fill = |column: usize, columns: &mut DMatrix<f64>, value: &dyn Fn(usize, usize) -> [f64; 2]| {
-            for (sample, &(at, channel)) in used.iter().enumerate() {
-                let root = f64::from(residual.weight[at]).sqrt();
-                let [re, im] = value(at, channel);
-                columns[(2 * sample, column)] = root * re;
-                columns[(2 * sample + 1, column)] = root * im;
-            }
-        };
-        let both = |z: num_complex::Complex32| [f64::from(z.re), f64::from(z.im)];
-        fill(EACH * points.len(), &mut columns, &|at, _| both(residual.data[at]));
         let mut scratch = residual.clone();
         let mut predict = |component: Component| {
             exact.predict_exactly(&[component], &mut scratch);
             scratch.data.clone()
         };
+        let first = points.first().map(|point| predict(point.clone())).unwrap_or_default();
+        let used = samples(residual, hands, &first);
+        let both = |z: Complex32| [f64::from(z.re), f64::from(z.im)];
+        // two real rows a sample, √ω times; one column an unknown, the last for the residual
+        let mut columns = DMatrix::<f64>::zeros(2 * used.len(), EACH * points.len() + 1);
+        let fill = |column: usize, columns: &mut DMatrix<f64>, value: &dyn Fn(&Sample) -> [f64; 2]| {
+            for (sample, pair) in used.iter().zip(columns.column_mut(column).as_mut_slice().chunks_mut(2)) {
+                let [re, im] = value(sample);
+                pair.copy_from_slice(&[sample.root_weight * re, sample.root_weight * im]);
+            }
+        };
+        fill(EACH * points.len(), &mut columns, &|sample| sample.residual);
         for (number, point) in points.iter().enumerate() {
             let unit = |dx: f64, dy: f64| {
                 let place = geometry.pixel_of(point.direction);
@@ -405,14 +442,14 @@ impl Normal {
             };
             let here = predict(unit(0.0, 0.0));
             let flux = point.flux_jy;
-            fill(EACH * number, &mut columns, &|at, _| both(here[at]));
+            fill(EACH * number, &mut columns, &|s| both(here[s.at]));
             for (k, (dx, dy)) in [(1, (step_px, 0.0)), (2, (0.0, step_px))] {
                 let (plus, minus) = (predict(unit(dx, dy)), predict(unit(-dx, -dy)));
                 let slope = flux / (2.0 * step_px);
-                fill(EACH * number + k, &mut columns, &|at, _| both(plus[at] - minus[at]).map(|v| slope * v));
+                fill(EACH * number + k, &mut columns, &|s| both(plus[s.at] - minus[s.at]).map(|v| slope * v));
             }
-            fill(EACH * number + 3, &mut columns, &|at, channel| {
-                both(here[at]).map(|v| v * flux * (frequencies_hz[channel] / point.reference_hz).ln())
+            fill(EACH * number + 3, &mut columns, &|s| {
+                both(here[s.at]).map(|v| v * flux * (frequencies_hz[s.channel] / point.reference_hz).ln())
             });
         }
         let unknowns = EACH * points.len();
@@ -438,6 +475,38 @@ impl Normal {
         let step = DVector::from_iterator(scale.len(), solved.iter().zip(&scale).map(|(v, s)| v * s));
         step.iter().all(|v| v.is_finite()).then_some(step)
     }
+}
+
+/// The usable samples of a block; hands whose prediction is the same (feeds with one beam) become one, which halves the
+/// work and changes χ² by a constant.
+fn samples(residual: &Block, hands: &[usize], prediction: &[Complex32]) -> Vec<Sample> {
+    let cells = || (0..residual.rows()).flat_map(|row| (0..residual.channels).map(move |channel| (row, channel)));
+    let alike = hands.split_first().is_some_and(|(first, others)| {
+        cells().all(|(row, channel)| {
+            let at = residual.index(row, channel);
+            others.iter().all(|hand| prediction.get(at + hand) == prediction.get(at + first))
+        })
+    });
+    let mut all = Vec::new();
+    for (row, channel) in cells() {
+        let at = residual.index(row, channel);
+        let groups = if alike { hands.chunks(hands.len()) } else { hands.chunks(1) };
+        for group in groups {
+            let (mut weight, mut sum) = (0.0, Complex64::ZERO);
+            for hand in group.iter().filter(|&hand| residual.weight[at + hand] > 0.0) {
+                let own = f64::from(residual.weight[at + hand]);
+                weight += own;
+                let z = residual.data[at + hand];
+                sum += own * Complex64::new(f64::from(z.re), f64::from(z.im));
+            }
+            if weight > 0.0 {
+                let mean = sum / weight;
+                let root_weight = weight.sqrt();
+                all.push(Sample { at: at + group[0], channel, root_weight, residual: [mean.re, mean.im] });
+            }
+        }
+    }
+    all
 }
 
 fn rows_of(block: &Block, rows: std::ops::Range<usize>) -> Block {
