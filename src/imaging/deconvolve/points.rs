@@ -203,10 +203,10 @@ fn around(pixels: &Array2<f64>, place: (f64, f64), reach: f64) -> Vec<([usize; 2
 }
 
 /// Pixels of the model and their flux densities, Jy.
-type Crowd = Vec<([usize; 2], f64)>;
+type Heap = Vec<([usize; 2], f64)>;
 
 /// Peaks of model and residual together that are bright enough and stand alone, brightest first, each with its crowd.
-fn candidates(model: &Model, restored: &Array2<f64>, field: &Field) -> Vec<(Component, Crowd)> {
+fn candidates(model: &Model, restored: &Array2<f64>, field: &Field) -> Vec<(Component, Heap)> {
     let Field { geometry, scaling, beam, settings, .. } = *field;
     let mut image = restored.clone();
     for ((value, n), (w, t)) in
