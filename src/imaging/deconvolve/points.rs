@@ -27,7 +27,9 @@ use rayon::prelude::*;
 /// Most sources fitted: the normal matrix has four rows for each, and each is predicted five times a pass.
 pub const MOST_POINTS: usize = 200;
 /// Passes over the visibilities of one fit.
-const MOST_PASSES: usize = 10;
+const MOST_PASSES: usize = 8;
+/// A pass that lowers χ² by less than this fraction is the last.
+const CONVERGED: f64 = 0.01;
 /// Steps for derivatives along l and m, as a fraction of the beam's minor axis.
 const STEP: f64 = 0.05;
 /// Standard deviation of the weak term on spectral indices.
@@ -298,7 +300,7 @@ pub fn refine(
                 points = moved(state, geometry, &last, shrink);
                 continue;
             }
-            Some((chi2, _)) if chi2 - normal.chi2 < 1e-4 * normal.chi2.abs() => {
+            Some((chi2, _)) if chi2 - normal.chi2 < CONVERGED * normal.chi2.abs() => {
                 best = Some((normal.chi2, points.clone()));
                 break;
             }
