@@ -188,7 +188,7 @@ fn hollin_fell_without_noise_leaves_less_than_a_ten_thousandth() {
     for n in 1..=3 {
         text += &format!("[[pointing]]\nvisibilities = \"{FELL}/fell-{n}-clean.uvfits\"\n");
     }
-    text += "[image]\ncentre_deg = [152.678, 41.863]\nsize_px = [256, 256]\npixel_arcsec = 40.0\ntolerance = 1e-5\n\
+    text += "[image]\ncentre_deg = [152.678, 41.863]\nsize_px = [176, 176]\npixel_arcsec = 60.0\ntolerance = 1e-5\n\
              [beams.dish13]\nshape = \"airy\"\ndiameter_m = 13.0\nblockage_m = 1.3\n\
              [beams.dish8]\nshape = \"gaussian\"\nhalf_power_deg = 1.58\nat_hz = 1.36e9\n\
              [deconvolution]\nmethod = \"clark\"\nstop_at_jy = 4e-5\nmax_components = 1000000\nmax_major_cycles = 60\n\
