@@ -17,14 +17,12 @@ const ESTABLISHED: f64 = 3.0;
 const FIT_KEPT: f64 = 4.0;
 /// or this fraction of itself.
 const FIT_PART: f64 = 0.1;
-/// A point that leaves more than this multiple of the noise,
+/// A point that leaves more than this multiple of the noise is tried as a double,
 const SPLIT_ABOVE: f64 = 5.0;
-/// and more than this fraction of itself, is tried as a double,
-const SPLIT_PART: f64 = 0.02;
 /// which is kept where it leaves less than this fraction of that.
 const SPLIT_GAIN: f64 = 0.6;
 /// Rounds in which the worst points are tried as doubles, in one fit.
-const MOST_ROUNDS: usize = 2;
+const MOST_ROUNDS: usize = 4;
 
 impl Run<'_> {
     /// Whether compact sources are to be fitted now: `peak` is the highest above its level, if there is one.
@@ -108,7 +106,7 @@ impl Run<'_> {
         let left: Vec<f64> = self.crowds.iter().map(|crowd| self.highest_around(&image, crowd.middle())).collect();
         let open = |n: &usize| {
             let crowd = &self.crowds[*n];
-            let worth = left[*n] > SPLIT_ABOVE.max(SPLIT_PART * self.own_height(crowd, model));
+            let worth = left[*n] > SPLIT_ABOVE;
             worth && crowd.names.len() == 1 && crowd.pixels.len() > 1 && !tried.contains(&crowd.names[0])
         };
         let worst = (0..left.len()).filter(open).map(|n| left[n]).fold(0.0, f64::max);

@@ -27,9 +27,9 @@ use rayon::prelude::*;
 /// Most sources fitted: the normal matrix has four rows for each, and each is predicted five times a pass.
 pub const MOST_POINTS: usize = 200;
 /// Passes over the visibilities of one fit.
-const MOST_PASSES: usize = 8;
+const MOST_PASSES: usize = 10;
 /// A pass that lowers χ² by less than this fraction is the last.
-const CONVERGED: f64 = 0.01;
+const CONVERGED: f64 = 1e-4;
 /// Steps for derivatives along l and m, as a fraction of the beam's minor axis.
 const STEP: f64 = 0.05;
 /// Standard deviation of the weak term on spectral indices.
