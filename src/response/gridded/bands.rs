@@ -1,10 +1,11 @@
 //! Bands and spans: runs of channels and stretches of time through which kernel coefficients are interpolated.
 //!
 //! For one station pair the coefficients c_k(ν, t) are smooth: a few nodes in frequency and time make all of them,
-//! c_k(ν, t) = Σ_j L_j(ν, t) c_k(ν_j, t_j). A visibility then has to meet the nodes only, and their sums meet the many terms
-//! (see [`super::vector::Scrap`]). The polynomials are T_a(ν) T_b(t) with a < n_b, n_0 ≥ n_1 ≥ … (a lower set, on which
-//! interpolation through as many nodes of a grid is always possible), chosen so that most error goes for least cost: by the
-//! Chebyshev coefficients of products of station pairs drawn from the visibilities, and then measured again.
+//! c_k(ν, t) = Σ_j L_j(ν, t) c_k(ν_j, t_j). Values at the nodes are turned to coefficients of polynomials, the modes; a
+//! visibility has to meet the modes only, and their sums meet the many terms (see [`super::vector::Scrap`]). The polynomials
+//! are T_a(ν) T_b(t) with a < n_b, n_0 ≥ n_1 ≥ … (a lower set, on which interpolation through as many nodes of a grid is
+//! always possible), chosen so that most error goes for least cost: by the Chebyshev coefficients of products of station
+//! pairs drawn from the visibilities, and then measured again.
 
 use super::smooth::chebyshev_points;
 use super::survey::SampleRow;
@@ -45,7 +46,11 @@ pub(super) struct Band<T> {
     pub ends_k: (f64, f64),
     /// `[channel][power of time]`: what T_b(t) adds to each node's weight.
     pub weights: Vec<Vec<f64>>,
-    /// The same in cells, each weight twice; empty where there are more nodes than a cell has lanes.
+    /// `[mode][node]`: the coefficients of the polynomials T_a T_b, in an order of falling importance, of a function known at
+    /// the nodes.
+    pub of_nodes: Vec<T>,
+    /// `[channel][power of time]`: T_a of each mode that has this power, twice over; empty where there are more modes than
+    /// a cell has lanes.
     pub profiles: Vec<Cell<T>>,
 }
 
@@ -179,8 +184,8 @@ impl Costs {
         let (along, across) = (self.distance * run.width, self.distance * run.turn * (run.rows - 1.0));
         let cells = support * support + 1.3 * support * (along + across) + along * across;
         let (nodes, blocks) = (run.nodes as f64, self.blocks as f64);
-        let expanding = 1.2 * cells * (0.4 * nodes * blocks + 1.4 * blocks + 3.0);
-        let coefficients = nodes * self.directions as f64 * (1.5 + 0.6 * blocks);
+        let expanding = 1.2 * cells * (0.2 * nodes * blocks + 1.4 * blocks + 3.0);
+        let coefficients = nodes * self.directions as f64 * (0.5 + 0.5 * blocks);
         50.0 + 0.6 * support * support + (expanding + coefficients) / (run.channels * run.rows)
     }
 }
@@ -382,18 +387,27 @@ impl<T: GridReal> Band<T> {
                 }
             }
         }
-        let profiles = if count > LANES {
-            Vec::new()
-        } else {
-            let twice = |weights: &Vec<f64>| {
-                let mut cell = Cell::zero();
-                for (node, &weight) in weights.iter().enumerate() {
-                    (cell[node], cell[node + LANES]) = (real(weight), real(weight));
+        // modes: the polynomials, those first that matter most as a rule
+        let mut order: Vec<usize> = (0..count).collect();
+        let degree = |&(a, b): &(usize, usize)| a as f64 / shape[0] as f64 + b as f64 / degrees as f64;
+        order.sort_by(|&i, &j| degree(&nodes[i]).total_cmp(&degree(&nodes[j])));
+        let of_nodes = order
+            .iter()
+            .flat_map(|&row| (0..count).map(move |node| (row, node)))
+            .map(|at| real(inverse[at]))
+            .collect();
+        let mut profiles = Vec::new();
+        if count <= LANES {
+            profiles = vec![Cell::zero(); hz.len() * degrees];
+            for (channel, &hz) in hz.iter().enumerate() {
+                let polynomials = chebyshev(x_of(hz), shape[0]);
+                for (mode, &row) in order.iter().enumerate() {
+                    let (a, b) = nodes[row];
+                    let cell = &mut profiles[channel * degrees + b];
+                    (cell[mode], cell[mode + LANES]) = (real(polynomials[a]), real(polynomials[a]));
                 }
-                cell
-            };
-            weights.iter().map(twice).collect()
-        };
+            }
+        }
         let nodes_hz: Vec<f64> = if exact { hz.to_vec() } else { xs.iter().map(|x| middle + half * x).collect() };
         Band {
             channels: first..first + hz.len(),
@@ -404,6 +418,7 @@ impl<T: GridReal> Band<T> {
             middle_k: wavelengths_per_metre(middle),
             ends_k: (wavelengths_per_metre(low), wavelengths_per_metre(high)),
             weights,
+            of_nodes,
             profiles,
         }
     }
@@ -572,6 +587,18 @@ mod tests {
                             }
                             let error = (got - value(at, x)).abs();
                             assert!(error <= 1e-11, "{shape:?}, T{a} T{b}: {error:e}");
+                            // and by way of the modes
+                            let count = band.nodes.len();
+                            let through = |mode: usize| -> f64 {
+                                let nodes = band.nodes.iter().zip(&band.of_nodes[mode * count..]);
+                                let of_mode: f64 =
+                                    nodes.map(|(&(i, j), c)| c * value(band.hz[i], band.times[j])).sum();
+                                let profiles = &band.profiles[channel * band.degrees()..];
+                                let profile: f64 = powers.iter().zip(profiles).map(|(p, c)| p * c[mode]).sum();
+                                of_mode * profile
+                            };
+                            let error = ((0..count).map(through).sum::<f64>() - value(at, x)).abs();
+                            assert!(error <= 1e-11, "{shape:?}, T{a} T{b}, modes: {error:e}");
                         }
                     }
                 }

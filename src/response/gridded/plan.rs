@@ -23,16 +23,18 @@ use std::time::Instant;
 /// Shares of the tolerance. Errors of different origin add, so the shares sum to at most 1.
 mod share {
     /// Aliasing of the window (largest over the field, both axes).
-    pub const WINDOW: f64 = 0.2;
+    pub const WINDOW: f64 = 0.17;
     /// Difference between kernels and their terms, w included, relative to the products' root mean square: root mean
     /// square over the field and over all members; no member alone passes [`super::terms::WORST_MEMBER`] times it.
-    pub const TERMS: f64 = 0.55;
+    pub const TERMS: f64 = 0.53;
     /// Interpolation of products in frequency, within a band of channels: root mean square as for the terms.
-    pub const BANDS: f64 = 0.15;
+    pub const BANDS: f64 = 0.12;
+    /// Modes of that interpolation that are left out, run by run: root mean square over the field.
+    pub const MODES: f64 = 0.1;
     /// Beam products beyond a patch's edge.
-    pub const EDGE: f64 = 0.05;
+    pub const EDGE: f64 = 0.04;
     /// Curvature left out where w is ignored.
-    pub const FLAT: f64 = 0.05;
+    pub const FLAT: f64 = 0.04;
 }
 
 /// Below this tolerance grids and tables are kept in double precision.
@@ -103,6 +105,8 @@ pub(crate) struct Plan {
     /// Errors allowed in interpolating products, and their powers, within a band.
     pub error: f64,
     pub power_error: f64,
+    /// Error allowed in leaving out modes of a run.
+    pub mode_error: f64,
     pub middle_bend: f64,
     pub partitions: Vec<Partition>,
     /// Index of the first partition of a pair's class; its channel groups follow.
@@ -303,6 +307,7 @@ impl Plan {
             middle_bend,
             mean_reach: survey.mean_uv_m * k_high * patch_pixel,
             error: share::BANDS * tolerance * rms,
+            mode_error: share::MODES * tolerance * rms,
             power_error: share::BANDS * tolerance * power_rms,
             partitions,
             class_of_pair,

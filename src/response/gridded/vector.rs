@@ -1,6 +1,6 @@
 //! The inner loops: visibilities onto scraps, scraps onto the grid of all terms, and back.
 //!
-//! A cell holds eight terms (or nodes, on a scrap): eight real parts then eight imaginary parts: 64 bytes in single precision, one vector
+//! A cell holds eight terms (or modes, on a scrap): eight real parts then eight imaginary parts: 64 bytes in single precision, one vector
 //! register of AVX-512 or two of AVX2. The same body is compiled for each instruction set and chosen at run time, since
 //! released binaries are built for plain x86-64, where a fused multiply-add is a library call.
 //!
@@ -133,10 +133,10 @@ pub(crate) struct Sample<T> {
     pub im: T,
 }
 
-/// A small part of the grid with at most eight numbers a cell, one a node: visibilities that are close in u, v meet here,
+/// A small part of the grid with at most eight numbers a cell, one a mode: visibilities that are close in u, v meet here,
 /// and only what they sum to meets the many terms of the grid.
 pub(crate) struct Scrap<'a, T> {
-    /// How much of a visibility each node gets, for each power of time: `[channel][power]`, every weight twice.
+    /// How much of a visibility each mode gets, for each power of time: `[channel][power]`, every weight twice.
     pub profiles: &'a [Cell<T>],
     /// Powers of time.
     pub degrees: usize,
@@ -161,7 +161,7 @@ pub(crate) struct Piece {
 
 /// Two station voltages at the terms' directions, and w, of one node of a run.
 pub(crate) struct Look<'a, T> {
-    /// Station voltages, first and second station, one cell for eight directions.
+    /// Station voltages, first and second station: real parts in sixteen directions in one cell, imaginary parts in the next.
     pub p: &'a [Cell<T>],
     /// See `p`.
     pub q: &'a [Cell<T>],
@@ -171,149 +171,215 @@ pub(crate) struct Look<'a, T> {
 
 /// What makes kernel coefficients of looks.
 pub(crate) struct Mixing<'a, T> {
-    /// Bend of each direction, turns per wavelength of w.
-    pub bends: &'a [[T; LANES]],
-    /// `[direction][block of terms]`: what each direction's value adds to each term, twice over.
+    /// Bend of sixteen directions a cell, turns per wavelength of w.
+    pub bends: &'a [Cell<T>],
+    /// `[direction][sixteen terms]`: what each direction's value adds to each term.
     pub mix: &'a [Cell<T>],
     /// Blocks of terms.
     pub blocks: usize,
 }
 
-#[inline(always)]
-fn fma<T: Real, const FUSED: bool>(a: T, b: T, c: T) -> T {
-    if FUSED { a.mul_add(b, c) } else { a * b + c }
+/// What coefficients at a run's nodes become: those of its modes.
+pub(crate) struct Modes<'a, T> {
+    /// `[mode][node]`.
+    pub of_nodes: &'a [T],
+    /// The last modes of a block are left out while the sum of their squares is at most this.
+    pub negligible: T,
 }
 
-/// Half a cell: what the compiler makes one vector of.
-type Half<T> = [T; LANES];
-
+/// Σ coefficients[n] xⁿ in sixteen lanes.
 #[inline(always)]
-fn halves<T: Copy>(cell: &Cell<T>) -> (Half<T>, Half<T>) {
-    (std::array::from_fn(|j| cell.0[j]), std::array::from_fn(|j| cell.0[j + LANES]))
-}
-
-#[inline(always)]
-fn each<T: Copy + Default>(a: &Half<T>, b: &Half<T>, f: impl Fn(T, T) -> T) -> Half<T> {
-    let mut out = [T::default(); LANES];
-    for j in 0..LANES {
-        out[j] = f(a[j], b[j]);
-    }
-    out
-}
-
-#[inline(always)]
-fn plus_product<T: GridReal, const FUSED: bool>(a: &Half<T>, b: &Half<T>, c: &Half<T>) -> Half<T> {
-    let mut out = [T::default(); LANES];
-    for j in 0..LANES {
-        out[j] = fma::<T, FUSED>(a[j], b[j], c[j]);
-    }
-    out
-}
-
-#[inline(always)]
-fn polynomial<T: GridReal, const FUSED: bool>(coefficients: &[f64], x: &Half<T>) -> Half<T> {
-    let mut sum = [T::default(); LANES];
+fn polynomial<T: GridReal, R: Register<T>>(coefficients: &[f64], x: R) -> R {
+    let mut sum = R::load(&Cell::zero());
     for &c in coefficients.iter().rev() {
-        sum = plus_product::<T, FUSED>(&sum, x, &[<T as Real>::from_f64(c); LANES]);
+        sum = sum.product_plus(x, R::load(&Cell([real(c); 2 * LANES])));
     }
     sum
 }
 
-/// conj(g_p) g_q exp(2πi δw κ) in eight directions.
+/// conj(g_p) g_q exp(2πi δw κ) in sixteen directions: real parts and imaginary parts.
 #[inline(always)]
-fn kernel_values<T: GridReal, const FUSED: bool>(
-    gp: &Cell<T>,
-    gq: &Cell<T>,
+fn kernel_values<T: GridReal, R: Register<T>>(
+    gp: &[Cell<T>],
+    gq: &[Cell<T>],
     dw: Option<T>,
-    bend: &Half<T>,
-) -> (Half<T>, Half<T>) {
-    let ((pr, pi), (qr, qi)) = (halves(gp), halves(gq));
-    let re = plus_product::<T, FUSED>(&pr, &qr, &each(&pi, &qi, |a, b| a * b));
-    let im = each(&each(&pr, &qi, |a, b| a * b), &each(&pi, &qr, |a, b| a * b), |a, b| a - b);
-    let Some(dw) = dw else { return (re, im) };
-    let turns = each(bend, &[dw; LANES], |bend, dw| bend * dw);
-    let t = each(&turns, &turns, |turns, _| turns - ((turns + T::WHOLE) - T::WHOLE));
-    let t2 = each(&t, &t, |a, b| a * b);
-    let cos = polynomial::<T, FUSED>(T::COS, &t2);
-    let sin = each(&polynomial::<T, FUSED>(T::SIN, &t2), &t, |a, b| a * b);
-    let turned_re = each(&each(&re, &cos, |a, b| a * b), &each(&im, &sin, |a, b| a * b), |a, b| a - b);
-    (turned_re, plus_product::<T, FUSED>(&re, &sin, &each(&im, &cos, |a, b| a * b)))
+    bend: &Cell<T>,
+    values: &mut [Cell<T>; 2],
+) {
+    let minus: T = real(-1.0);
+    let zero = R::load(&Cell::zero());
+    let ((pr, pi), (qr, qi)) = ((R::load(&gp[0]), R::load(&gp[1])), (R::load(&gq[0]), R::load(&gq[1])));
+    let (mut re, mut im) = (
+        pr.product_plus(qr, pi.product_plus(qi, zero)),
+        pr.product_plus(qi, pi.times(minus).product_plus(qr, zero)),
+    );
+    if let Some(dw) = dw {
+        let turns = R::load(bend).times(dw);
+        let (one, whole): (T, T) = (real(1.0), T::WHOLE);
+        let up = turns.times_plus(one, R::load(&Cell([whole; 2 * LANES])));
+        let nearest = up.times_plus(one, R::load(&Cell([minus * whole; 2 * LANES])));
+        let t = nearest.times_plus(minus, turns);
+        let t2 = t.product_plus(t, zero);
+        let cos = polynomial::<T, R>(T::COS, t2);
+        let sin = polynomial::<T, R>(T::SIN, t2).product_plus(t, zero);
+        let turned = re.product_plus(cos, im.times(minus).product_plus(sin, zero));
+        im = re.product_plus(sin, im.product_plus(cos, zero));
+        re = turned;
+    }
+    re.store(&mut values[0]);
+    im.store(&mut values[1]);
 }
 
 /// Blocks of terms that are summed at once, in registers, at most.
-const AT_ONCE: usize = 6;
+const AT_ONCE: usize = 4;
 
-/// Runs of blocks summed at once, as even as they go: one block alone waits for itself.
+/// Runs of blocks summed at once, as even as they go.
 pub(crate) fn block_runs(blocks: usize) -> impl Iterator<Item = std::ops::Range<usize>> {
     let runs = blocks.div_ceil(AT_ONCE).max(1);
     (0..runs).map(move |run| run * blocks / runs..(run + 1) * blocks / runs)
 }
 
-/// Calls a body compiled for the number of blocks in a run.
-macro_rules! by_blocks {
-    ($body:ident, $register:ty, $run:expr, ($($arg:expr),*)) => {
-        match $run.len() {
-            1 => $body::<T, $register, 1>($($arg),*),
-            2 => $body::<T, $register, 2>($($arg),*),
-            3 => $body::<T, $register, 3>($($arg),*),
-            4 => $body::<T, $register, 4>($($arg),*),
-            5 => $body::<T, $register, 5>($($arg),*),
-            _ => $body::<T, $register, 6>($($arg),*),
+/// Calls a body compiled for a number of things done at once, 1 to 4.
+macro_rules! by_number {
+    ($body:ident, $register:ty, $number:expr, [$($more:literal),*], ($($arg:expr),*)) => {
+        match $number {
+            1 => $body::<T, $register, 1, $($more),*>($($arg),*),
+            2 => $body::<T, $register, 2, $($more),*>($($arg),*),
+            3 => $body::<T, $register, 3, $($more),*>($($arg),*),
+            _ => $body::<T, $register, 4, $($more),*>($($arg),*),
         }
     };
 }
 
 /// Directions whose values are computed together before they are mixed into terms.
-const DIRECTIONS: usize = 8 * LANES;
+pub(crate) const DIRECTIONS: usize = 2 * LANES;
 
-/// The coefficients of all terms for each look, `[look][block]`.
+/// The coefficients of all terms in each mode, `[mode][block]`, and how many modes of each block are kept.
 #[inline(always)]
-fn coefficients_body<T: GridReal, R: Register<T>, const FUSED: bool>(
+fn coefficients_body<T: GridReal, R: Register<T>>(
     looks: &[Look<T>],
     mixing: &Mixing<T>,
+    modes: &Modes<T>,
     out: &mut [Cell<T>],
+    kept: &mut [usize],
 ) {
     let zero = Cell::<T>::zero();
-    let mut values = [zero; DIRECTIONS];
-    for (look, out) in looks.iter().zip(out.chunks_exact_mut(mixing.blocks)) {
-        out.fill(zero);
-        let chunks = look.p.chunks(DIRECTIONS / LANES).zip(look.q.chunks(DIRECTIONS / LANES));
-        let bends = mixing.bends.chunks(DIRECTIONS / LANES);
-        let mix = mixing.mix.chunks(DIRECTIONS * mixing.blocks);
-        for (((p, q), bends), mix) in chunks.zip(bends).zip(mix) {
-            for (block, ((gp, gq), bend)) in p.iter().zip(q).zip(bends).enumerate() {
-                let (re, im) = kernel_values::<T, FUSED>(gp, gq, look.dw, bend);
-                for (lane, value) in values[block * LANES..(block + 1) * LANES].iter_mut().enumerate() {
-                    value[..LANES].fill(re[lane]);
-                    value[LANES..].fill(im[lane]);
+    let blocks = mixing.blocks;
+    let pairs = blocks.div_ceil(2);
+    let mut values = [[zero; 2]; LANES];
+    // pairs of blocks that are summed before the next are: what eight looks come to stays in the first cache
+    const AT_ONCE: usize = 8;
+    for first in (0..pairs).step_by(AT_ONCE) {
+        let end = pairs.min(first + AT_ONCE);
+        let mut sums = [[[zero; 2]; AT_ONCE]; LANES];
+        let rows = mixing.mix.chunks(DIRECTIONS * pairs);
+        for (chunk, (bend, mix)) in mixing.bends.iter().zip(rows).enumerate() {
+            for (look, values) in looks.iter().zip(&mut values) {
+                let at = 2 * chunk..2 * chunk + 2;
+                kernel_values::<T, R>(&look.p[at.clone()], &look.q[at], look.dw, bend, values);
+            }
+            // kept in memory: a value is then broadcast by the load, instead of shuffled out of a register
+            let values = std::hint::black_box(&values);
+            for (values, sums) in values[..looks.len()].chunks(2).zip(sums.chunks_mut(2)) {
+                for pair in (first..end).step_by(2) {
+                    let at = pair - first;
+                    match (values.len(), end - pair) {
+                        (2, 1) => mix_terms::<T, R, 2, 1>(values, mix, pairs, pair, sums, at),
+                        (2, _) => mix_terms::<T, R, 2, 2>(values, mix, pairs, pair, sums, at),
+                        (_, 1) => mix_terms::<T, R, 1, 1>(values, mix, pairs, pair, sums, at),
+                        _ => mix_terms::<T, R, 1, 2>(values, mix, pairs, pair, sums, at),
+                    }
                 }
             }
-            for run in block_runs(mixing.blocks) {
-                by_blocks!(mix_blocks, R, run, (&values, mix, mixing.blocks, run.start, out));
+        }
+        for (sums, out) in sums.iter().zip(out.chunks_exact_mut(blocks)) {
+            for (block, out) in out.iter_mut().enumerate().take(2 * end).skip(2 * first) {
+                let [re, im] = &sums[block / 2 - first];
+                let start = block % 2 * LANES;
+                out[..LANES].copy_from_slice(&re[start..start + LANES]);
+                out[LANES..].copy_from_slice(&im[start..start + LANES]);
             }
+        }
+    }
+    for (block, kept) in kept.iter_mut().enumerate() {
+        into_modes::<T, R>(modes.of_nodes, looks.len(), blocks, block, out);
+        *kept = cut_modes(modes.negligible, looks.len(), blocks, block, out);
+    }
+}
+
+/// Adds what sixteen directions' values of L looks make of N pairs of blocks of terms.
+// loops, not closures: those are not always compiled for the instructions of the function they stand in
+#[inline(always)]
+fn mix_terms<T: GridReal, R: Register<T>, const L: usize, const N: usize>(
+    values: &[[Cell<T>; 2]],
+    mix: &[Cell<T>],
+    pairs: usize,
+    pair: usize,
+    out: &mut [[[Cell<T>; 2]; 8]],
+    at: usize,
+) {
+    let Some(values) = values.first_chunk::<L>() else { return };
+    let mut sums = [[[R::load(&Cell::zero()); 2]; N]; L];
+    for (sums, out) in sums.iter_mut().zip(out.iter()) {
+        for (sums, out) in sums.iter_mut().zip(&out[at..at + N]) {
+            *sums = [R::load(&out[0]), R::load(&out[1])];
+        }
+    }
+    for (direction, row) in mix.chunks_exact(pairs).enumerate().take(DIRECTIONS) {
+        let row = &row[pair..pair + N];
+        for (values, sums) in values.iter().zip(&mut sums) {
+            let (re, im) = (values[0].0[direction], values[1].0[direction]);
+            for (sums, mix) in sums.iter_mut().zip(row) {
+                let mix = R::load(mix);
+                *sums = [mix.times_plus(re, sums[0]), mix.times_plus(im, sums[1])];
+            }
+        }
+    }
+    for (sums, out) in sums.iter().zip(out) {
+        for ([re, im], out) in sums.iter().zip(&mut out[at..at + N]) {
+            re.store(&mut out[0]);
+            im.store(&mut out[1]);
         }
     }
 }
 
+/// Turns a block's values at the nodes into coefficients of the modes, in place.
 #[inline(always)]
-fn mix_blocks<T: GridReal, R: Register<T>, const N: usize>(
-    values: &[Cell<T>],
-    mix: &[Cell<T>],
+fn into_modes<T: GridReal, R: Register<T>>(
+    of_nodes: &[T],
+    count: usize,
     blocks: usize,
-    first: usize,
+    block: usize,
     out: &mut [Cell<T>],
 ) {
-    let out = &mut out[first..first + N];
-    let mut sums: [R; N] = std::array::from_fn(|n| R::load(&out[n]));
-    for (value, row) in values.iter().zip(mix.chunks_exact(blocks)) {
-        let value = R::load(value);
-        for (sum, mix) in sums.iter_mut().zip(&row[first..first + N]) {
-            *sum = value.product_plus(R::load(mix), *sum);
+    let mut nodes = [Cell::<T>::zero(); LANES];
+    for (node, value) in nodes[..count].iter_mut().enumerate() {
+        *value = out[node * blocks + block];
+    }
+    for (mode, weights) in of_nodes.chunks_exact(count).enumerate() {
+        let mut sum = R::load(&Cell::zero());
+        for (node, &weight) in nodes[..count].iter().zip(weights) {
+            sum = R::load(node).times_plus(weight, sum);
         }
+        sum.store(&mut out[mode * blocks + block]);
     }
-    for (sum, out) in sums.iter().zip(out) {
-        sum.store(out);
+}
+
+/// Sets the last modes of a block to 0 as long as the sum of their squares is negligible; says how many are left.
+#[inline(always)]
+fn cut_modes<T: GridReal>(negligible: T, count: usize, blocks: usize, block: usize, out: &mut [Cell<T>]) -> usize {
+    let mut squares = Cell::<T>::zero();
+    for mode in (0..count).rev() {
+        let cell = &mut out[mode * blocks + block];
+        squares.iter_mut().zip(cell.iter()).for_each(|(sum, &c)| *sum = *sum + c * c);
+        let sum = double(squares.iter().fold(T::zero(), |sum, &c| sum + c));
+        // a NaN must stay
+        if sum.is_nan() || sum > double(negligible) {
+            return mode + 1;
+        }
+        *cell = Cell::zero();
     }
+    0
 }
 
 #[inline(always)]
@@ -420,7 +486,7 @@ fn gather_body<T: GridReal, R: Register<T>, const W: usize, const FUSED: bool>(
     }
 }
 
-/// Adds a scrap to the grid: at each cell the sum over nodes of what they hold times their coefficients.
+/// Adds a scrap to the grid: at each cell the sum over modes of what they hold times their coefficients.
 #[inline(always)]
 fn expand_body<T: GridReal, R: Register<T>>(
     scrap: &[Cell<T>],
@@ -432,75 +498,113 @@ fn expand_body<T: GridReal, R: Register<T>>(
     for piece in pieces {
         let from = &scrap[piece.from..piece.from + piece.length];
         let to = &mut grid[piece.to * blocks..(piece.to + piece.length) * blocks];
-        for (cell, out) in from.iter().zip(to.chunks_exact_mut(blocks)) {
-            for run in block_runs(blocks) {
-                by_blocks!(expand_blocks, R, run, (cell, coefficients, run.start, out));
+        // two cells at once: what is loaded of the coefficients serves both
+        for (cells, out) in from.chunks(2).zip(to.chunks_mut(2 * blocks)) {
+            for run in &coefficients.runs {
+                let with = &coefficients.cells[run.cells.clone()];
+                if cells.len() == 2 {
+                    by_number!(
+                        expand_blocks,
+                        R,
+                        run.blocks.len(),
+                        [2],
+                        (cells, with, run.blocks.start, blocks, out)
+                    );
+                } else {
+                    by_number!(
+                        expand_blocks,
+                        R,
+                        run.blocks.len(),
+                        [1],
+                        (cells, with, run.blocks.start, blocks, out)
+                    );
+                }
             }
         }
     }
 }
 
 #[inline(always)]
-fn expand_blocks<T: GridReal, R: Register<T>, const N: usize>(
-    cell: &Cell<T>,
-    coefficients: &Expansion<T>,
+fn expand_blocks<T: GridReal, R: Register<T>, const N: usize, const C: usize>(
+    cells: &[Cell<T>],
+    coefficients: &[[Cell<T>; 2]],
     first: usize,
+    blocks: usize,
     out: &mut [Cell<T>],
 ) {
-    let Some(out) = out[first..].first_chunk_mut::<N>() else { return };
-    // `first` blocks of all nodes lie before these
-    let nodes = coefficients.cells[first * coefficients.nodes..].as_chunks::<N>().0;
-    let mut sums: [R; N] = std::array::from_fn(|n| R::load(&out[n]));
-    let mut others: [R; N] = [R::load(&Cell::zero()); N];
-    for ((node, &re), &im) in nodes[..coefficients.nodes].iter().zip(&cell.0[..LANES]).zip(&cell.0[LANES..]) {
-        for n in 0..N {
-            sums[n] = R::load(&node[n][0]).times_plus(re, sums[n]);
-            others[n] = R::load(&node[n][1]).times_plus(im, others[n]);
+    let Some(cells) = cells.first_chunk::<C>() else { return };
+    let mut sums = [[R::load(&Cell::zero()); N]; C];
+    for (cell, sums) in sums.iter_mut().enumerate() {
+        for (n, sum) in sums.iter_mut().enumerate() {
+            *sum = R::load(&out[cell * blocks + first + n]);
         }
     }
-    for n in 0..N {
-        sums[n].times_plus(<T as Real>::from_f64(1.0), others[n]).store(&mut out[n]);
+    for (mode, coefficients) in coefficients.as_chunks::<N>().0.iter().enumerate().take(LANES) {
+        for (n, [plain, turned]) in coefficients.iter().enumerate() {
+            let (plain, turned) = (R::load(plain), R::load(turned));
+            for (cell, sums) in cells.iter().zip(&mut sums) {
+                sums[n] = turned.times_plus(cell.0[mode + LANES], plain.times_plus(cell.0[mode], sums[n]));
+            }
+        }
+    }
+    for (cell, sums) in sums.iter().enumerate() {
+        for (n, sum) in sums.iter().enumerate() {
+            sum.store(&mut out[cell * blocks + first + n]);
+        }
     }
 }
 
-/// Coefficients c of a run ready for [`expand`]: (c, i c), `[node][block]` for each of [`block_runs`].
+/// Coefficients c of a run ready for [`expand`].
 pub(crate) struct Expansion<T> {
-    /// See the type.
-    pub cells: Vec<[Cell<T>; 2]>,
+    /// (c, i c): `[mode][block]` of each run of blocks.
+    cells: Vec<[Cell<T>; 2]>,
+    runs: Vec<BlockRun>,
     /// Blocks of terms.
-    pub blocks: usize,
-    /// Nodes.
-    pub nodes: usize,
+    blocks: usize,
+}
+
+/// Blocks that are summed at once, and where their coefficients lie.
+struct BlockRun {
+    blocks: std::ops::Range<usize>,
+    cells: std::ops::Range<usize>,
 }
 
 impl<T: GridReal> Expansion<T> {
     /// For so many blocks, still empty.
     pub(crate) fn new(blocks: usize) -> Self {
-        Expansion { cells: Vec::new(), blocks, nodes: 0 }
+        Expansion { cells: Vec::new(), runs: Vec::new(), blocks }
     }
 
-    /// Takes coefficients `[node][block]`.
-    pub(crate) fn take(&mut self, coefficients: &[Cell<T>]) {
-        self.nodes = coefficients.len() / self.blocks;
+    /// Takes coefficients `[mode][block]`, of which `kept` modes of each block are not 0.
+    pub(crate) fn take(&mut self, coefficients: &[Cell<T>], kept: &[usize]) {
         self.cells.clear();
-        for run in block_runs(self.blocks) {
-            for node in coefficients.chunks_exact(self.blocks) {
-                self.cells.extend(node[run.clone()].iter().map(|c| {
+        self.runs.clear();
+        for blocks in block_runs(self.blocks) {
+            let start = self.cells.len();
+            let modes = kept[blocks.clone()].iter().copied().max().unwrap_or(0);
+            for mode in coefficients.chunks_exact(self.blocks).take(modes) {
+                self.cells.extend(mode[blocks.clone()].iter().map(|c| {
                     let turned = std::array::from_fn(|at| if at < LANES { -c[at + LANES] } else { c[at - LANES] });
                     [*c, Cell(turned)]
                 }));
+            }
+            if modes > 0 {
+                self.runs.push(BlockRun { blocks, cells: start..self.cells.len() });
             }
         }
     }
 }
 
-/// Coefficients c of a run ready for [`collect`]: `[term]`, (conj c, i conj c), a lane a node.
+/// Coefficients c of a run ready for [`collect`]: `[term]`, (conj c, i conj c), a lane a mode.
 pub(crate) struct Collection<T> {
     /// See the type.
     pub cells: Vec<[Cell<T>; 2]>,
 }
 
-/// Makes a scrap of the grid: at each cell and node the sum over terms of the grid times conjugate coefficients.
+/// Cells that are collected at once.
+const COLLECTED: usize = 4;
+
+/// Makes a scrap of the grid: at each cell and mode the sum over terms of the grid times conjugate coefficients.
 #[inline(always)]
 fn collect_body<T: GridReal, R: Register<T>>(
     grid: &[Cell<T>],
@@ -509,23 +613,35 @@ fn collect_body<T: GridReal, R: Register<T>>(
     scrap: &mut [Cell<T>],
 ) {
     let blocks = coefficients.cells.len() / LANES;
-    let zero = R::load(&Cell::zero());
     for piece in pieces {
         let from = &grid[piece.to * blocks..(piece.to + piece.length) * blocks];
         let to = &mut scrap[piece.from..piece.from + piece.length];
-        for (terms, out) in from.chunks_exact(blocks).zip(to) {
-            // several sums side by side: each alone would wait for itself
-            let mut sums = [zero; 4];
-            for (cell, coefficients) in terms.iter().zip(coefficients.cells.chunks_exact(LANES)) {
-                for (lane, pair) in coefficients.iter().enumerate() {
-                    let sum = &mut sums[lane % 4];
-                    *sum = R::load(&pair[1])
-                        .times_plus(cell[lane + LANES], R::load(&pair[0]).times_plus(cell[lane], *sum));
-                }
-            }
-            let one = <T as Real>::from_f64(1.0);
-            sums[0].times_plus(one, sums[1]).times_plus(one, sums[2].times_plus(one, sums[3])).store(out);
+        for (terms, out) in from.chunks(COLLECTED * blocks).zip(to.chunks_mut(COLLECTED)) {
+            by_number!(collect_cells, R, out.len(), [], (terms, coefficients, out));
         }
+    }
+}
+
+#[inline(always)]
+fn collect_cells<T: GridReal, R: Register<T>, const C: usize>(
+    terms: &[Cell<T>],
+    coefficients: &Collection<T>,
+    out: &mut [Cell<T>],
+) {
+    let Some(out) = out.first_chunk_mut::<C>() else { return };
+    let blocks = terms.len() / C;
+    let mut sums = [R::load(&Cell::zero()); C];
+    for (block, coefficients) in coefficients.cells.chunks_exact(LANES).enumerate() {
+        for (lane, [plain, turned]) in coefficients.iter().enumerate() {
+            let (plain, turned) = (R::load(plain), R::load(turned));
+            for (number, sum) in sums.iter_mut().enumerate() {
+                let cell = &terms[number * blocks + block];
+                *sum = turned.times_plus(cell.0[lane + LANES], plain.times_plus(cell.0[lane], *sum));
+            }
+        }
+    }
+    for (sum, out) in sums.iter().zip(out) {
+        sum.store(out);
     }
 }
 
@@ -565,18 +681,21 @@ fn accumulate_body<T: GridReal, R: Register<T>>(
 /// Asks for the cells of a grid that a scrap will meet, so that they are on their way while the scrap is filled.
 #[inline]
 pub(crate) fn fetch<T>(grid: &[Cell<T>], pieces: &[Piece], blocks: usize) {
-    #[cfg(target_arch = "x86_64")]
     for piece in pieces {
-        let cells = &grid[piece.to * blocks..(piece.to + piece.length) * blocks];
-        for cell in cells {
-            // SAFETY: a hint that reads nothing; the address is that of a cell at hand.
-            unsafe {
-                std::arch::x86_64::_mm_prefetch::<{ std::arch::x86_64::_MM_HINT_T1 }>(cell.0.as_ptr().cast())
-            };
-        }
+        fetch_cells(&grid[piece.to * blocks..(piece.to + piece.length) * blocks]);
+    }
+}
+
+/// Asks for cells that will be wanted soon.
+#[inline]
+pub(crate) fn fetch_cells<T>(cells: &[Cell<T>]) {
+    #[cfg(target_arch = "x86_64")]
+    for cell in cells {
+        // SAFETY: a hint that reads nothing; the address is that of a cell at hand.
+        unsafe { std::arch::x86_64::_mm_prefetch::<{ std::arch::x86_64::_MM_HINT_T1 }>(cell.0.as_ptr().cast()) };
     }
     #[cfg(not(target_arch = "x86_64"))]
-    let _ = (grid, pieces, blocks);
+    let _ = cells;
 }
 
 /// Which compiled body runs.
@@ -687,8 +806,8 @@ mod compiled {
     );
     for_both!(
         coefficients_avx2, coefficients_avx512,
-        (looks: &[Look<T>], mixing: &Mixing<T>, out: &mut [Cell<T>]),
-        |R| coefficients_body::<T, R<T>, true>(looks, mixing, out)
+        (looks: &[Look<T>], mixing: &Mixing<T>, modes: &Modes<T>, out: &mut [Cell<T>], kept: &mut [usize]),
+        |R| coefficients_body::<T, R<T>>(looks, mixing, modes, out, kept)
     );
     for_both!(
         accumulate_avx2, accumulate_avx512,
@@ -730,7 +849,7 @@ dispatched!(
     gather_body::<T, Plain<T>, 0, false>(samples, with, cells, out)
 );
 dispatched!(
-    /// Adds a scrap to the grid: at each cell the sum over nodes of what they hold times their coefficients.
+    /// Adds a scrap to the grid: at each cell the sum over modes of what they hold times their coefficients.
     expand, expand_avx2, expand_avx512,
     (scrap: &[Cell<T>], pieces: &[Piece], coefficients: &Expansion<T>, grid: &mut [Cell<T>]),
     expand_body::<T, Plain<T>>(scrap, pieces, coefficients, grid)
@@ -742,10 +861,11 @@ dispatched!(
     collect_body::<T, Plain<T>>(grid, pieces, coefficients, scrap)
 );
 dispatched!(
-    /// The coefficients of all terms for each look, `[look][block]`.
+    /// The coefficients of all terms in each mode, `[mode][block]`, from looks at the nodes, and how many modes of each block
+    /// are kept; the rest are 0.
     coefficients, coefficients_avx2, coefficients_avx512,
-    (looks: &[Look<T>], mixing: &Mixing<T>, out: &mut [Cell<T>]),
-    coefficients_body::<T, Plain<T>, false>(looks, mixing, out)
+    (looks: &[Look<T>], mixing: &Mixing<T>, modes: &Modes<T>, out: &mut [Cell<T>], kept: &mut [usize]),
+    coefficients_body::<T, Plain<T>>(looks, mixing, modes, out, kept)
 );
 dispatched!(
     /// Adds to `out` the sums over `shares` of weight times the product of both stations' sixteen powers.

@@ -19,7 +19,7 @@ use super::plan::{Partition, Plan, kernel_feeds};
 use super::survey::SampleRow;
 use super::terms::Terms;
 use super::transform::{Scratch, Transform};
-use super::vector::{Cell, GridReal, Instructions, LANES, Mixing, real};
+use super::vector::{Cell, DIRECTIONS, GridReal, Instructions, LANES, Mixing, real};
 use super::{Options, Sums};
 use crate::beam::StationBeams;
 use crate::observation::{BlockSource, Observation};
@@ -77,8 +77,8 @@ struct Bands<T> {
     power: Vec<Band<T>>,
     /// Step in wavelengths per metre between channels, where it is the same for all.
     step: Option<f64>,
-    /// Bend of the terms' directions, by blocks of eight.
-    bends: Vec<[T; LANES]>,
+    /// As [`Mixing::bends`].
+    bends: Vec<Cell<T>>,
     /// As [`Mixing::mix`].
     mix: Vec<Cell<T>>,
     /// Blocks of terms.
@@ -402,13 +402,13 @@ impl<T: GridReal> Bands<T> {
         let power_demand =
             Demand { lm: &power_lm, bends: &[], error: plan.power_error, power: true, fewest: 1, ..demand };
         let (power_bands, _) = bands::choose(&power_demand, hz, first, costs, Some(rows));
-        let mut mix = vec![Cell::zero(); kernel.points.len() * blocks];
+        let pairs = blocks.div_ceil(2);
+        let mut mix = vec![Cell::zero(); kernel.points.len() * pairs];
         for ((term, point), &value) in kernel.mix.indexed_iter() {
-            let cell = &mut mix[point * blocks + term / LANES];
-            (cell[term % LANES], cell[term % LANES + LANES]) = (real(value), real(value));
+            mix[point * pairs + term / (2 * LANES)][term % (2 * LANES)] = real(value);
         }
-        let bends = kernel.points.chunks(LANES).map(|chunk| {
-            let mut bend = [T::zero(); LANES];
+        let bends = kernel.points.chunks(DIRECTIONS).map(|chunk| {
+            let mut bend = Cell::zero();
             bend.iter_mut().zip(chunk).for_each(|(b, point)| *b = real(point.bend));
             bend
         });

@@ -7,8 +7,8 @@ use super::{Engine, Task};
 use crate::observation::Block;
 use crate::response::gridded::bands::{Band, MOST_DEGREES, chebyshev};
 use crate::response::gridded::vector::{
-    Cell, Collection, Expansion, GridReal, LANES, Look, Piece, Sample, Scrap, coefficients, collect, expand, fetch,
-    gather, real, spread,
+    Cell, Collection, Expansion, GridReal, LANES, Look, Modes, Piece, Sample, Scrap, coefficients, collect, expand,
+    fetch, gather, real, spread,
 };
 use crate::response::rows::{Intensity, Seen, cis_turns};
 use crate::response::window::locate;
@@ -66,6 +66,8 @@ pub(super) struct Scratch<T> {
     touched: Vec<(u32, u32)>,
     pieces: Vec<Piece>,
     coefficients: Vec<Cell<T>>,
+    /// Modes of each block that are not 0.
+    kept: Vec<usize>,
     times: Vec<[T; MOST_DEGREES]>,
     /// w at the places of a run's nodes, metres.
     node_w: Vec<f64>,
@@ -82,6 +84,7 @@ impl<T: GridReal> Scratch<T> {
             touched: Vec::new(),
             pieces: Vec::new(),
             coefficients: Vec::new(),
+            kept: Vec::new(),
             times: Vec::new(),
             node_w: Vec::new(),
             got: Vec::new(),
@@ -194,7 +197,7 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
         (-pixel * shape.fft.0 as f64, pixel * shape.fft.1 as f64)
     }
 
-    /// The coefficients of a run's nodes, `[node][block]`, into `scratch`.
+    /// The coefficients of a run's modes, `[mode][block]`, and how many are kept, into `scratch`.
     fn run_coefficients(&self, view: &View<T>, run: &Run<T>, scratch: &mut Scratch<T>) {
         let layer_w = self.plan.layers.w(view.task.layer);
         let row = &view.prepared.rows[view.prepared.order[run.rows.start] as usize];
@@ -209,9 +212,15 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
                 Look { p: at(row.pair.0), q: at(row.pair.1), dw }
             })
             .collect();
+        // most often the next run is that of the next span
+        view.table.fetch(row.span + 1, run.share.slot, row.pair.0);
+        view.table.fetch(row.span + 1, run.share.slot, row.pair.1);
         let mixing = self.bands[view.task.partition].mixing();
         scratch.coefficients.resize(looks.len() * mixing.blocks, Cell::zero());
-        coefficients(self.instructions, &looks, &mixing, &mut scratch.coefficients);
+        scratch.kept.resize(mixing.blocks, 0);
+        let negligible = real(self.plan.mode_error.powi(2) / mixing.blocks as f64);
+        let modes = Modes { of_nodes: &run.of.of_nodes, negligible };
+        coefficients(self.instructions, &looks, &mixing, &modes, &mut scratch.coefficients, &mut scratch.kept);
     }
 
     /// Calls `each` with every scrap of a run that has samples: they, their places and the scrap's cells are in `scratch`.
@@ -407,7 +416,7 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
             self.scraps(view, run, true, scratch, |scratch| {
                 if !ready {
                     self.run_coefficients(view, run, scratch);
-                    expansion.take(&scratch.coefficients);
+                    expansion.take(&scratch.coefficients, &scratch.kept);
                     ready = true;
                 }
                 fetch(grid, &scratch.pieces, blocks);
@@ -437,11 +446,11 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
                     self.run_coefficients(view, run, scratch);
                     collection.cells.clear();
                     collection.cells.resize(blocks * LANES, [Cell::zero(); 2]);
-                    for (node, coefficients) in scratch.coefficients.chunks_exact(blocks).enumerate() {
+                    for (mode, coefficients) in scratch.coefficients.chunks_exact(blocks).enumerate() {
                         let terms = coefficients.iter().flat_map(|c| (0..LANES).map(move |j| (c[j], c[j + LANES])));
                         for ((re, im), [plain, turned]) in terms.zip(&mut collection.cells) {
-                            (plain[node], plain[node + LANES]) = (re, -im);
-                            (turned[node], turned[node + LANES]) = (im, re);
+                            (plain[mode], plain[mode + LANES]) = (re, -im);
+                            (turned[mode], turned[mode + LANES]) = (im, re);
                         }
                     }
                     ready = true;

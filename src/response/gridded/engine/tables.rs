@@ -4,7 +4,7 @@ use super::{Engine, POWER_LANES, Power, Prepared};
 use crate::response::gridded::bands::Band;
 use crate::response::gridded::plan::Partition;
 use crate::response::gridded::terms::Terms;
-use crate::response::gridded::vector::{Cell, GridReal, LANES, real};
+use crate::response::gridded::vector::{Cell, DIRECTIONS, GridReal, fetch_cells, real};
 use ndarray::LinalgScalar;
 use num_complex::Complex64;
 use rayon::prelude::*;
@@ -13,8 +13,8 @@ use rayon::prelude::*;
 struct Quantities<'a, T> {
     terms: &'a Terms,
     bands: &'a [Band<T>],
-    /// Directions a cell holds.
-    lanes: usize,
+    /// Cells for the quantities of a station in all directions.
+    cells: usize,
     slots: usize,
 }
 
@@ -45,6 +45,14 @@ impl<T> Table<T> {
         &self.cells[start..start + self.per_station]
     }
 
+    /// Asks for a station's cells at all nodes in a span, if there is such a span.
+    pub(super) fn fetch(&self, span: u32, slot: usize, station: u32) {
+        if (span as usize) < self.spans {
+            let start = self.start(span, (0, 0), slot, station);
+            fetch_cells(&self.cells[start..start + self.nodes * self.per_station]);
+        }
+    }
+
     /// All cells.
     pub(super) fn cells(&self) -> &[Cell<T>] {
         &self.cells
@@ -60,9 +68,8 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
         of: Quantities<T>,
         write: impl Fn(usize, &[Vec<Complex64>; 2], usize, &mut [Cell<T>]) + Sync,
     ) -> Table<T> {
-        let Quantities { terms, bands, lanes, slots } = of;
+        let Quantities { terms, bands, cells: per_station, slots } = of;
         let lm: Vec<[f64; 2]> = terms.points.iter().map(|p| p.aim_lm).collect();
-        let per_station = lm.len().div_ceil(lanes);
         // frequency and place in the span of every node
         let place_of = |x: f64| self.places.iter().position(|&place| place == x).unwrap_or(0);
         let at: Vec<(f64, usize)> = bands
@@ -120,12 +127,13 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
         let feeds = self.feeds.clone();
         let write = |slot: usize, voltages: &[Vec<Complex64>; 2], count: usize, cells: &mut [Cell<T>]| {
             for (j, value) in voltages[feeds[slot]][..count].iter().enumerate() {
-                cells[j / LANES][j % LANES] = real(value.re);
-                cells[j / LANES][j % LANES + LANES] = real(value.im);
+                let (pair, lane) = (j / DIRECTIONS, j % DIRECTIONS);
+                (cells[2 * pair][lane], cells[2 * pair + 1][lane]) = (real(value.re), real(value.im));
             }
         };
         let bands = &self.bands[index].kernel;
-        let of = Quantities { terms: &partition.kernel, bands, lanes: LANES, slots: self.feeds.len() };
+        let cells = 2 * partition.kernel.points.len().div_ceil(DIRECTIONS);
+        let of = Quantities { terms: &partition.kernel, bands, cells, slots: self.feeds.len() };
         self.table(prepared, partition, of, write)
     }
 
@@ -143,7 +151,8 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
             }
         };
         let bands = &self.bands[index].power;
-        let of = Quantities { terms: &partition.power, bands, lanes: POWER_LANES, slots: self.powers.len() };
+        let cells = partition.power.points.len().div_ceil(POWER_LANES);
+        let of = Quantities { terms: &partition.power, bands, cells, slots: self.powers.len() };
         self.table(prepared, partition, of, write)
     }
 }
