@@ -682,20 +682,20 @@ fn accumulate_body<T: GridReal, R: Register<T>>(
 #[inline]
 pub(crate) fn fetch<T>(grid: &[Cell<T>], pieces: &[Piece], blocks: usize) {
     for piece in pieces {
-        fetch_cells(&grid[piece.to * blocks..(piece.to + piece.length) * blocks]);
+        fetch_soon(&grid[piece.to * blocks..(piece.to + piece.length) * blocks]);
     }
 }
 
-/// Asks for cells that will be wanted soon.
+/// Asks for memory that will be wanted soon.
 #[inline]
-pub(crate) fn fetch_cells<T>(cells: &[Cell<T>]) {
+pub(crate) fn fetch_soon<T>(wanted: &[T]) {
     #[cfg(target_arch = "x86_64")]
-    for cell in cells {
-        // SAFETY: a hint that reads nothing; the address is that of a cell at hand.
-        unsafe { std::arch::x86_64::_mm_prefetch::<{ std::arch::x86_64::_MM_HINT_T1 }>(cell.0.as_ptr().cast()) };
+    for start in wanted.chunks((64 / size_of::<T>()).max(1)) {
+        // SAFETY: a hint that reads nothing; the address is that of values at hand.
+        unsafe { std::arch::x86_64::_mm_prefetch::<{ std::arch::x86_64::_MM_HINT_T1 }>(start.as_ptr().cast()) };
     }
     #[cfg(not(target_arch = "x86_64"))]
-    let _ = cells;
+    let _ = wanted;
 }
 
 /// Which compiled body runs.

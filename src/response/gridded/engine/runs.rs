@@ -8,7 +8,7 @@ use crate::observation::Block;
 use crate::response::gridded::bands::{Band, MOST_DEGREES, chebyshev};
 use crate::response::gridded::vector::{
     Cell, Collection, Expansion, GridReal, LANES, Look, Modes, Piece, Sample, Scrap, coefficients, collect, expand,
-    fetch, gather, real, spread,
+    fetch, fetch_soon, gather, real, spread,
 };
 use crate::response::rows::{Intensity, Seen, cis_turns};
 use crate::response::window::locate;
@@ -153,6 +153,14 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
                             powers.iter_mut().zip(polynomials).for_each(|(power, value)| *power = real(value));
                             powers
                         }));
+                        // rows of a pair lie far apart in the block: those of the next run are asked for now
+                        for next in end..of_pair.end.min(end + (end - start)) {
+                            let row = view.prepared.order[next] as usize;
+                            let from = view.block.index(row, band.channels.start);
+                            let cells = from..from + band.channels.len() * view.block.hands;
+                            fetch_soon(&view.block.data[cells.clone()]);
+                            fetch_soon(&view.block.weight[cells]);
+                        }
                         each(&Run { rows: start..end, band: index, of: band, share }, scratch);
                         start = end;
                     }

@@ -4,7 +4,7 @@ use super::{Engine, POWER_LANES, Power, Prepared};
 use crate::response::gridded::bands::Band;
 use crate::response::gridded::plan::Partition;
 use crate::response::gridded::terms::Terms;
-use crate::response::gridded::vector::{Cell, DIRECTIONS, GridReal, fetch_cells, real};
+use crate::response::gridded::vector::{Cell, DIRECTIONS, GridReal, fetch_soon, real};
 use ndarray::LinalgScalar;
 use num_complex::Complex64;
 use rayon::prelude::*;
@@ -49,7 +49,7 @@ impl<T> Table<T> {
     pub(super) fn fetch(&self, span: u32, slot: usize, station: u32) {
         if (span as usize) < self.spans {
             let start = self.start(span, (0, 0), slot, station);
-            fetch_cells(&self.cells[start..start + self.nodes * self.per_station]);
+            fetch_soon(&self.cells[start..start + self.nodes * self.per_station]);
         }
     }
 
