@@ -297,12 +297,15 @@ impl WeightingFigures {
 
     /// Price and side lobes for the HISTORY of products, in ASCII.
     pub fn history(&self) -> Vec<String> {
-        let mut noise =
-            format!("noise {:.4} times that of natural weights over all visibilities", self.relative_noise);
-        if let Some(there) = self.relative_noise_at_centre {
-            noise += &format!(", {there:.4} where psf.fits has its peak");
+        let mut lines = Vec::new();
+        if self.relative_noise != 1.0 {
+            let all = self.relative_noise;
+            let mut noise = format!("noise {all:.4} times that of natural weights over all visibilities");
+            if let Some(there) = self.relative_noise_at_centre {
+                noise += &format!(", {there:.4} where psf.fits has its peak");
+            }
+            lines.push(noise);
         }
-        let mut lines = vec![noise];
         if let (Some(high), Some(low)) = (self.highest_side_lobe, self.lowest_side_lobe) {
             lines.push(format!(
                 "point spread function from 1.2 to 10 beam widths: highest {high:.4}, lowest {low:.4} of the peak"
