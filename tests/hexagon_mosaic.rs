@@ -208,15 +208,16 @@ fn noise_of_robust_weights_over_unlike_fields() {
             *weight *= if (at / 2 + n) % 5 == 0 { 0.0 } else { (1 + (3 * n) % 7) as f32 };
         }
     }
-    let cell = |at: f64, pixels: usize| (at * HZ / 299_792_458.0 * pixels as f64 * geometry.pixel).round() as i64;
+    // wide enough that fields and baselines share cells
+    const CELL: f64 = 150.0;
+    let cell = |at: f64| (at * HZ / 299_792_458.0 / CELL).round() as i64;
     for (scheme, robustness) in [(Scheme::Robust, 0.0), (Scheme::Robust, -1.0), (Scheme::Uniform, 0.0)] {
         for density in [DensityOf::All, DensityOf::Pointing] {
             // samples of each field: cell and w of both hands together
             let samples: Vec<Vec<((i64, i64), f64)>> = fields
                 .iter()
                 .map(|(_, block)| {
-                    let cells =
-                        block.uvw_m.iter().map(|&[u, v, _]| (cell(u, geometry.width), cell(v, geometry.height)));
+                    let cells = block.uvw_m.iter().map(|&[u, v, _]| (cell(u), cell(v)));
                     cells.zip(block.weight.chunks(2).map(|w| f64::from(w[0]) + f64::from(w[1]))).collect()
                 })
                 .collect();
@@ -244,7 +245,8 @@ fn noise_of_robust_weights_over_unlike_fields() {
                 factors.push((omega, square, own.iter().map(|(_, w)| w).sum::<f64>()));
             }
             let mut mosaic = mosaic(geometry, fields.clone());
-            let asked = Weighting { scheme, robustness, density, ..Weighting::default() };
+            let cell_wavelengths = Some(CELL);
+            let asked = Weighting { scheme, robustness, density, cell_wavelengths, ..Weighting::default() };
             mosaic.weigh(&asked, |_| ()).unwrap();
             let sums = mosaic.sums(|_| ()).unwrap();
             let weight = mosaic.weight_map(&sums, |_| ()).unwrap();
