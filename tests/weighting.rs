@@ -11,7 +11,7 @@ use evensky::observation::{Block, BlockSource, MemorySource, Watched};
 use evensky::response::gridded::Options;
 use evensky::response::{Response, Sums};
 use evensky::run::{Scheme, Weighting};
-use evensky::sky::ImageGeometry;
+use evensky::sky::{Direction, ImageGeometry};
 use ndarray::Array2;
 use num_complex::Complex32;
 use rand::SeedableRng;
@@ -306,6 +306,55 @@ fn the_frequency_is_that_of_the_imaging_weights() {
         let (share, tally) = (mosaic.pointings()[0].share, mosaic.pointings()[0].tally);
         assert_eq!((share.used, share.used + share.excluded), (used, tally.used));
     }
+}
+
+/// What the usual ends R = ±2 give where the plane is filled unevenly: ω is off natural by up to 2.5e-3 D/⟨D⟩, off uniform by
+/// up to 4e-6 ⟨D⟩/D. Bounds for cells of twenty times the mean and of a five-hundredth of it; the documentation states what is
+/// printed here.
+#[test]
+fn robustness_of_two_is_nearly_natural_and_minus_two_nearly_uniform() {
+    // cells of 250 and of 33 wavelengths
+    for field in [0.004, 0.03] {
+        let weights = |asked: &Weighting| -> Vec<f32> {
+            let (mut mosaic, ..) = without_beams(&setting(), None, field, asked);
+            blocks(&mut mosaic).iter().flat_map(|block| block.weight.clone()).collect()
+        };
+        let off = |a: Weighting, b: Weighting| {
+            let (a, b) = (weights(&a), weights(&b));
+            let pairs = a.iter().zip(&b).filter(|(_, b)| **b > 0.0);
+            pairs.map(|(a, b)| (f64::from(*a) / f64::from(*b) - 1.0).abs()).fold(0.0, f64::max)
+        };
+        let natural = off(robust(2.0), Weighting::default());
+        let uniform = off(robust(-2.0), Weighting { scheme: Scheme::Uniform, ..Weighting::default() });
+        println!(
+            "field {field}: R = 2 at most {natural:.1e} off natural, R = -2 at most {uniform:.1e} off uniform"
+        );
+        assert!(natural > 1e-3 && natural <= 5e-2, "{natural:e}");
+        assert!(uniform > 1e-6 && uniform <= 2e-3, "{uniform:e}");
+    }
+}
+
+/// A pointing whose beams do not reach the image adds nothing to it, and so has no part in the density, the price or the
+/// frequency.
+#[test]
+fn pointings_out_of_sight_have_no_part_in_the_weights() {
+    let near = setting();
+    let far = Setting { aim: Direction::from_deg(182.3, 41.7), first_hz: 1.6e9, seed: 5, ..setting() };
+    let made = |settings: &[&Setting]| {
+        let mut mosaic = Mosaic::new(geometry(near.aim, 48, 48, 0.004));
+        for setting in settings {
+            let scene = scene(setting);
+            mosaic
+                .add(Box::new(scene.source()), scene.beams.clone(), 1e-3, Options::default(), |_| ())
+                .expect("planned");
+        }
+        let price = mosaic.weigh(&robust(0.0), |_| ()).unwrap();
+        let first = blocks(&mut mosaic)[0].weight.clone();
+        (mosaic.pointings().iter().map(Pointing::reaches).collect::<Vec<_>>(), price, mosaic.frequency_hz(), first)
+    };
+    let (alone, both) = (made(&[&near]), made(&[&near, &far]));
+    assert_eq!((alone.0, both.0), (vec![true], vec![true, false]));
+    assert_eq!((alone.1, alone.2, alone.3), (both.1, both.2, both.3));
 }
 
 /// Flux densities are fitted with inverse variances, and never to what a range excludes.
