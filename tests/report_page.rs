@@ -35,6 +35,7 @@ fn record() -> RunRecord {
                 aim_dec_deg: -12.4,
                 stations: 14,
                 visibilities_used: 1_209_600,
+                visibilities_excluded: 0,
                 visibilities_flagged: 800,
                 window_width_px: 300,
                 window_height_px: 310,

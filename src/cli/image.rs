@@ -8,7 +8,7 @@ use super::progress::Progress;
 use super::{CliError, Common};
 use crate::beam::StationBeams;
 use crate::imaging::beam_fit::fit_beam;
-use crate::imaging::{Mosaic, Price, flat_sky, response_map, self_check, side_lobes};
+use crate::imaging::{Mosaic, Pointing, Price, flat_sky, response_map, self_check, side_lobes};
 use crate::observation::{Mount, Observation};
 use crate::report::{
     Accuracy, BeamFigures, ImageFigures, InputFile, KernelFigures, Noise, PointingRecord, Product, ProductHeader,
@@ -257,7 +257,14 @@ impl Making<'_> {
         };
         self.record.beam = beam.as_ref().map(BeamFigures::from);
         let lobes = beam.as_ref().map(|beam| side_lobes(psf.view(), reference, beam, geometry.pixel));
-        self.record.weighting = Some(WeightingFigures::new(&self.weighting, price, lobes));
+        let at_centre = match price {
+            Some(_) => {
+                let natural = mosaic.natural_weight_at(place)?;
+                Some((natural / weight[[reference.1, reference.0]]).sqrt()).filter(|noise| noise.is_finite())
+            }
+            None => None,
+        };
+        self.record.weighting = Some(WeightingFigures::new(&self.weighting, price, at_centre, lobes));
 
         let started = Instant::now();
         let stage = self.progress.stage("checking against exact sums", "", None);
@@ -283,11 +290,7 @@ impl Making<'_> {
             self.record.accuracy = Some(accuracy);
         }
 
-        let weight_hz: (f64, f64) = mosaic
-            .pointings()
-            .iter()
-            .fold((0.0, 0.0), |sum, p| (sum.0 + p.tally.weight, sum.1 + p.tally.weight_hz));
-        let frequency_hz = weight_hz.1 / weight_hz.0;
+        let frequency_hz = mosaic.frequency_hz().ok_or_else(|| told(NothingToImage::Weights))?;
         self.noise(&geometry, &weight, &dirty, frequency_hz);
         let made = Dirty { sums: &sums, weight: &weight, image: &dirty, beam, frequency_hz };
         let deconvolved = self.deconvolved(&mut mosaic, &made)?;
@@ -327,10 +330,26 @@ impl Making<'_> {
         }
         let started = Instant::now();
         let stage = self.progress.stage("weighting", "rows", None);
-        let price = mosaic.weigh(&self.weighting, |rows| stage.add(rows))?;
+        let price = mosaic.weigh(&self.weighting, |rows| stage.add(rows)).map_err(told)?;
         stage.finish();
         self.timed("weighting", started);
-        if price.imaging > 0.0 { Ok(Some(price)) } else { Err(told(NothingToImage::Weights)) }
+        if !mosaic.pointings().iter().any(Pointing::reaches) {
+            return Err(told(NothingToImage::Pixels));
+        }
+        if price.imaging.is_nan() || price.imaging <= 0.0 {
+            return Err(told(NothingToImage::Weights));
+        }
+        for (pointing, record) in mosaic.pointings().iter().zip(&mut self.record.pointings) {
+            record.visibilities_used = pointing.share.used;
+            record.visibilities_excluded = pointing.share.excluded;
+            if pointing.share.used == 0 && pointing.share.excluded > 0 {
+                self.record.warnings.push(format!(
+                    "[weighting] excludes all visibilities of pointing {}; it adds nothing",
+                    record.name
+                ));
+            }
+        }
+        Ok(Some(price))
     }
 
     /// Sources, when the run file asks for them.
@@ -338,7 +357,8 @@ impl Making<'_> {
         let Some(request) = &self.request else { return Ok(()) };
         let started = Instant::now();
         let stage = self.progress.stage("measuring sources", "rows", None);
-        // the estimator of least error goes by inverse variances, whatever the image is weighted by
+        // the estimator of least error goes by inverse variances, whatever the image is weighted by; what a range of u, v
+        // excludes was not meant to be used, and is not
         let title = &self.record.title;
         let measured = mosaic
             .naturally(|mosaic| image_measure::measure(request, plates, mosaic, title, |rows| stage.add(rows)))?;
@@ -400,6 +420,7 @@ impl Making<'_> {
                 aim_dec_deg: dec,
                 stations: *stations,
                 visibilities_used: pointing.tally.used,
+                visibilities_excluded: 0,
                 visibilities_flagged: pointing.tally.flagged,
                 window_width_px: report.patch_px.0,
                 window_height_px: report.patch_px.1,
@@ -452,6 +473,7 @@ impl Making<'_> {
             format!("weights: {}; Stokes I from all parallel hands or Stokes I data", self.weighting.describe()),
             format!("pixels below {} of the largest response are blank", self.settings.lowest_response.value),
         ];
+        lines.extend(record.weighting.iter().flat_map(WeightingFigures::history));
         if let Some(a) = &record.accuracy {
             lines.push(format!(
                 "relative error of the sums: promised {:e}, measured {:.1e} (N) and {:.1e} (W) on {} pixels",
@@ -483,8 +505,8 @@ enum NothingToImage {
     )]
     Visibilities,
     #[error(
-        "[weighting] leaves no visibility: uv_range_wavelengths or outer_cosine_wavelengths exclude all; compare them with \
-         the baselines that `evensky describe` shows"
+        "[weighting] leaves no visibility: uv_range_wavelengths, uv_range_m or tapers exclude all; compare them with the \
+         baselines that `evensky describe` shows"
     )]
     Weights,
     #[error(

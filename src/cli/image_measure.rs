@@ -12,7 +12,7 @@ use crate::report::{
     Measured, Product, SourcesError, source_headings, write_covariance, write_source_csv, write_source_fits,
     write_source_votable,
 };
-use crate::run::{FitErrors, FluxesFrom, Measure, RunFile, SourceShape};
+use crate::run::{FitErrors, FluxesFrom, Measure, RunFile, SourceShape, Weighting};
 use crate::sky::ImageGeometry;
 use nalgebra::DMatrix;
 use ndarray::Array2;
@@ -23,6 +23,7 @@ pub(super) struct Request {
     settings: Measure,
     positions: Option<Vec<Position>>,
     lowest_response: f64,
+    weighting: Weighting,
 }
 
 /// The images that sources are sought in.
@@ -59,7 +60,7 @@ pub(super) fn prepare(run: &RunFile) -> Result<Option<Request>, CliError> {
         Some(file) => Some(read_positions(&file.value, &source_headings()).map_err(list)?),
         None => None,
     };
-    Ok(Some(Request { settings, positions, lowest_response }))
+    Ok(Some(Request { settings, positions, lowest_response, weighting: run.weighting }))
 }
 
 fn list(error: PositionsError) -> CliError {
@@ -125,13 +126,19 @@ pub(super) fn measure(
         }
     };
     read_maps(&mut sources, plates.image.view(), plates.weight.view(), &plates.geometry, plates.beam);
-    let how = match (&request.positions, settings.fluxes_from) {
+    let mut how = match (&request.positions, settings.fluxes_from) {
         (Some(_), _) => "places given, flux densities from the visibilities".to_owned(),
         (None, FluxesFrom::Visibilities) => {
             format!("found in {}.fits, flux densities from the visibilities", plates.name)
         }
         (None, FluxesFrom::Image) => format!("found and measured in {}.fits", plates.name),
     };
+    if settings.fluxes_from == FluxesFrom::Visibilities && !request.weighting.is_natural() {
+        how += ", weighted by inverse variances";
+        if let Some(ranges) = request.weighting.ranges() {
+            how += &format!(" ({})", ranges.describe());
+        }
+    }
     let mut figures = Measured::of(&sources, &how);
     if let Some(joint) = &joint {
         figures.unconfirmed = joint.unconfirmed;

@@ -12,4 +12,4 @@ pub use flat::{flat_noise, flat_sky, response_map};
 pub use mosaic::{Mosaic, Pointing, Tally};
 pub use self_check::{SelfCheck, self_check};
 pub use side_lobes::{SideLobes, side_lobes};
-pub use weighting::{Price, Weigher, Weighted};
+pub use weighting::{Price, Share, Weigher, WeighingError, Weighted};

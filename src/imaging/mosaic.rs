@@ -1,6 +1,6 @@
 //! Pointings summed into one mosaic.
 
-use super::weighting::{Price, Weigher, Weighted, weigh};
+use super::weighting::{Price, Share, Weigher, WeighingError, Weighted, most_cells, weigh};
 use crate::beam::StationBeams;
 use crate::observation::{Block, BlockSource, Watched};
 use crate::response::gridded::Options;
@@ -21,6 +21,15 @@ pub struct Pointing {
     pub aim: Direction,
     /// What its visibilities amount to.
     pub tally: Tally,
+    /// What it gives to the sums with the weights it has.
+    pub share: Share,
+}
+
+impl Pointing {
+    /// Whether its beams reach the image; otherwise it adds nothing.
+    pub fn reaches(&self) -> bool {
+        self.gridded.report().patch_px.0 > 0
+    }
 }
 
 /// What the visibilities of a pointing amount to: total-intensity hands only.
@@ -41,6 +50,11 @@ pub struct Tally {
 }
 
 impl Tally {
+    /// What natural weights give to the sums.
+    fn share(&self) -> Share {
+        Share { used: self.used, excluded: 0, weight: self.weight, weight_hz: self.weight_hz }
+    }
+
     fn add(&mut self, block: &Block, hands: &[usize], frequencies_hz: &[f64]) {
         self.rows += block.rows() as u64;
         for row in 0..block.rows() {
@@ -110,7 +124,7 @@ impl Mosaic {
         }
         let aim = beams.aim();
         let exact = Exact::new(&observation, beams, self.geometry);
-        self.pointings.push(Pointing { source, gridded, exact, aim, tally });
+        self.pointings.push(Pointing { source, gridded, exact, aim, tally, share: tally.share() });
         Ok(())
     }
 
@@ -129,32 +143,75 @@ impl Mosaic {
         &self.geometry
     }
 
-    /// Gives every pointing imaging weights; what they cost.
+    /// Gives every pointing that reaches the image imaging weights; what they cost.
     ///
     /// # Errors
-    /// When visibilities cannot be read.
-    pub fn weigh(&mut self, weighting: &Weighting, rows: impl FnMut(u64)) -> Result<Price, ResponseError> {
+    /// When visibilities cannot be read, or the density of uniform or robust weights would take too much memory.
+    pub fn weigh(&mut self, weighting: &Weighting, rows: impl FnMut(u64)) -> Result<Price, WeighingError> {
         let geometry = self.geometry;
-        let mut weighers: Vec<Weigher> = self
-            .pointings
-            .iter()
-            .map(|pointing| Weigher::new(*weighting, pointing.source.observation(), &geometry))
-            .collect();
+        // what adds nothing to the image has no part in its density either
+        let mut seen: Vec<&mut Pointing> =
+            self.pointings.iter_mut().filter(|pointing| pointing.reaches()).collect();
+        let mut weighers = Vec::with_capacity(seen.len());
+        for pointing in &mut seen {
+            pointing.source.weigh_by(None);
+            weighers.push(Weigher::new(*weighting, pointing.source.observation(), &geometry));
+        }
         let mut sources: Vec<&mut dyn BlockSource> =
-            self.pointings.iter_mut().map(|pointing| &mut pointing.source as &mut dyn BlockSource).collect();
-        let price = weigh(&mut weighers, &mut sources, rows)?;
-        for (pointing, weigher) in self.pointings.iter_mut().zip(weighers) {
+            seen.iter_mut().map(|pointing| &mut pointing.source as &mut dyn BlockSource).collect();
+        let (price, shares) = weigh(&mut weighers, &mut sources, most_cells(&geometry), rows)?;
+        for ((pointing, weigher), share) in seen.into_iter().zip(weighers).zip(shares) {
             pointing.source.weigh_by(Some(weigher));
+            pointing.share = share;
         }
         Ok(price)
     }
 
-    /// Does something with inverse variances as weights, and gives imaging weights back afterwards.
+    /// Mean frequency of the visibilities in the sums by the weights they have there, Hz; `None` when there are none.
+    pub fn frequency_hz(&self) -> Option<f64> {
+        let seen = self.pointings.iter().filter(|pointing| pointing.reaches());
+        let (weight, weight_hz) =
+            seen.fold((0.0, 0.0), |sum, p| (sum.0 + p.share.weight, sum.1 + p.share.weight_hz));
+        (weight > 0.0).then(|| weight_hz / weight)
+    }
+
+    /// Does something with inverse variances as weights, within the ranges of u, v that the imaging weights have, and gives
+    /// the imaging weights back afterwards.
     pub fn naturally<R>(&mut self, work: impl FnOnce(&mut Mosaic) -> R) -> R {
-        let weighers: Vec<Option<Weigher>> =
-            self.pointings.iter_mut().map(|pointing| pointing.source.weigh_by(None)).collect();
+        self.weighed_by(|weigher| weigher.ranges(), work)
+    }
+
+    /// The normaliser W of natural weights and all usable visibilities in a direction, by direct sums, Jy⁻².
+    ///
+    /// # Errors
+    /// When visibilities cannot be read.
+    pub fn natural_weight_at(&mut self, direction: Direction) -> Result<f64, ResponseError> {
+        self.weighed_by(
+            |_| None,
+            |mosaic| {
+                let mut sum = 0.0;
+                for Pointing { source, exact, .. } in &mut mosaic.pointings {
+                    sum += exact.adjoint_at(source.as_mut(), &[direction])?.iter().map(|(_, w)| w).sum::<f64>();
+                }
+                Ok(sum)
+            },
+        )
+    }
+
+    /// Does something with other weights, and gives the imaging weights back afterwards.
+    fn weighed_by<R>(
+        &mut self,
+        other: impl Fn(&Weigher) -> Option<Weigher>,
+        work: impl FnOnce(&mut Mosaic) -> R,
+    ) -> R {
+        let exchange = |source: &mut Weighted| {
+            let lent = source.weigher().and_then(&other);
+            source.weigh_by(lent)
+        };
+        let own: Vec<Option<Weigher>> =
+            self.pointings.iter_mut().map(|pointing| exchange(&mut pointing.source)).collect();
         let result = work(self);
-        for (pointing, weigher) in self.pointings.iter_mut().zip(weighers) {
+        for (pointing, weigher) in self.pointings.iter_mut().zip(own) {
             pointing.source.weigh_by(weigher);
         }
         result

@@ -3,7 +3,10 @@
 use super::beam_fit::FittedBeam;
 use ndarray::ArrayView2;
 
-/// Largest and most negative value of a point spread function outside its main lobe, relative to its peak.
+/// Largest and most negative value of a point spread function in a plain annulus around its peak, relative to the peak.
+///
+/// The annulus knows nothing of nulls: a first side lobe that lies nearer than its inner edge is not seen, and a shoulder of
+/// a main lobe that is far from Gaussian counts where it reaches further.
 #[derive(Debug, Clone, Copy, PartialEq)]
 pub struct SideLobes {
     /// Largest, 0 where none is positive.
@@ -18,7 +21,8 @@ const FROM: f64 = 1.2;
 /// Up to where.
 const TO: f64 = 10.0;
 
-/// Side lobes around `peak` (column, row), between 1.2 and 10 fitted widths from it. `pixel` is a pixel's side, radians.
+/// Side lobes around `peak` (column, row), between 1.2 and 10 fitted widths from it or as far as the image goes; blank pixels
+/// are passed over. `pixel` is a pixel's side, radians.
 pub fn side_lobes(psf: ArrayView2<f64>, peak: (usize, usize), beam: &FittedBeam, pixel: f64) -> SideLobes {
     let top = psf[[peak.1, peak.0]];
     let (sin, cos) = beam.position_angle.sin_cos();

@@ -149,6 +149,9 @@ pub struct PointingRecord {
     pub stations: usize,
     /// Visibilities that went into the sums.
     pub visibilities_used: u64,
+    /// Usable visibilities that ranges or tapers of `[weighting]` exclude.
+    #[serde(default)]
+    pub visibilities_excluded: u64,
     /// Visibilities left out (weight not positive, or value or weight not finite).
     pub visibilities_flagged: u64,
     /// Columns of this pointing's window on the pixel grid.
@@ -259,28 +262,56 @@ impl From<&crate::imaging::beam_fit::FittedBeam> for BeamFigures {
 pub struct WeightingFigures {
     /// Scheme, tapers and ranges, in words.
     pub scheme: String,
-    /// Noise relative to natural weights, √(Σ ω²/w · Σ w) / Σ ω over all visibilities: 1 for natural.
+    /// Noise relative to natural weights of all usable visibilities, √(Σ ω²/w · Σ w) / Σ ω over them as if every beam were 1:
+    /// 1 for natural.
     pub relative_noise: f64,
-    /// Largest side lobe of the point spread function between 1.2 and 10 widths from its peak, relative to the peak; `None`
-    /// without a fitted beam.
+    /// The same where the point spread function is (the image centre unless it is blank), with the beams: of the weight map
+    /// against W of natural weights there.
+    #[serde(default)]
+    pub relative_noise_at_centre: Option<f64>,
+    /// Largest value of the point spread function in the plain annulus from 1.2 to 10 fitted widths around its peak, or as far
+    /// as the image goes, relative to the peak. A side lobe nearer than that is not seen, and a shoulder of the main lobe
+    /// that reaches further is. `None` without a fitted beam.
     pub highest_side_lobe: Option<f64>,
-    /// Most negative one.
+    /// Most negative one there.
     pub lowest_side_lobe: Option<f64>,
 }
 
 impl WeightingFigures {
-    /// From the price (`None`: natural weights) and side lobes measured on the point spread function.
+    /// From the price (`None`: natural weights), the noise relative to natural weights at the place of the point spread
+    /// function, and side lobes measured on it.
     pub fn new(
         weighting: &crate::run::Weighting,
         price: Option<crate::imaging::Price>,
+        at_centre: Option<f64>,
         lobes: Option<crate::imaging::SideLobes>,
     ) -> Self {
         WeightingFigures {
             scheme: weighting.describe(),
             relative_noise: price.map_or(1.0, |price| price.relative_noise()),
+            relative_noise_at_centre: if price.is_none() { Some(1.0) } else { at_centre },
             highest_side_lobe: lobes.map(|lobes| lobes.highest),
             lowest_side_lobe: lobes.map(|lobes| lobes.lowest),
         }
+    }
+
+    /// Price and side lobes for the HISTORY of products, in ASCII.
+    pub fn history(&self) -> Vec<String> {
+        let mut lines = Vec::new();
+        if self.relative_noise != 1.0 {
+            let all = self.relative_noise;
+            let mut noise = format!("noise {all:.4} times that of natural weights over all visibilities");
+            if let Some(there) = self.relative_noise_at_centre {
+                noise += &format!(", {there:.4} where psf.fits has its peak");
+            }
+            lines.push(noise);
+        }
+        if let (Some(high), Some(low)) = (self.highest_side_lobe, self.lowest_side_lobe) {
+            lines.push(format!(
+                "point spread function from 1.2 to 10 beam widths: highest {high:.4}, lowest {low:.4} of the peak"
+            ));
+        }
+        lines
     }
 }
 

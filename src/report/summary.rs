@@ -54,10 +54,13 @@ pub(super) fn weighting_line(weighting: &WeightingFigures) -> String {
     let mut line = weighting.scheme.clone();
     if weighting.relative_noise > 1.0 {
         line += &format!("; noise {:.2} times that of natural weights", weighting.relative_noise);
+        if let Some(there) = weighting.relative_noise_at_centre {
+            line += &format!(", {there:.2} at the peak of the point spread function");
+        }
     }
     if let (Some(high), Some(low)) = (weighting.highest_side_lobe, weighting.lowest_side_lobe) {
-        line +=
-            &format!("; side lobes up to {:.1} % and down to {:.1} %", 100.0 * high, 100.0 * low).replace('-', "−");
+        line += "; side lobes beyond 1.2 beams ";
+        line += &format!("up to {:.1} % and down to {:.1} %", 100.0 * high, 100.0 * low).replace('-', "−");
     }
     line
 }
@@ -115,6 +118,7 @@ fn made(record: &RunRecord) -> String {
 fn what(record: &RunRecord) -> String {
     let used: u64 = record.pointings.iter().map(|p| p.visibilities_used).sum();
     let flagged: u64 = record.pointings.iter().map(|p| p.visibilities_flagged).sum();
+    let excluded: u64 = record.pointings.iter().map(|p| p.visibilities_excluded).sum();
     let mut parts = Vec::new();
     if let Some(image) = &record.image {
         parts.push(format!("{} × {} pixels of {}", image.width_px, image.height_px, arcsec(image.pixel_arcsec)));
@@ -122,8 +126,16 @@ fn what(record: &RunRecord) -> String {
     if !record.pointings.is_empty() {
         let pointings = record.pointings.len();
         let plural = if pointings == 1 { "" } else { "s" };
-        let left_out =
-            if flagged > 0 { format!(" ({} more were flagged)", thousands(flagged)) } else { String::new() };
+        let left_out = match (flagged, excluded) {
+            (0, 0) => String::new(),
+            (_, 0) => format!(" ({} more were flagged)", thousands(flagged)),
+            (0, _) => format!(" ({} more were excluded by [weighting])", thousands(excluded)),
+            _ => format!(
+                " ({} more were flagged, {} excluded by [weighting])",
+                thousands(flagged),
+                thousands(excluded)
+            ),
+        };
         parts.push(format!("from {pointings} pointing{plural}, {} visibilities{left_out}", thousands(used)));
     }
     parts.join(" ")

@@ -29,7 +29,7 @@ pub struct Pointing {
     pub sources: Sources,
     /// Angle from the aim, degrees, beyond which every response is 0; overrides that of `[image]`.
     pub response_radius_deg: Option<At<f64>>,
-    /// The file's inverse variances are multiplied by this.
+    /// The file's inverse variances are multiplied by this, 1e-12 to 1e12.
     pub weight_scale: f64,
 }
 
@@ -81,6 +81,9 @@ pub(super) fn response_radius(section: &Section) -> Option<At<f64>> {
     section.optional("response_radius_deg", RADIUS, number(|deg| deg > 0.0 && deg < 90.0))
 }
 
+/// Limits of `weight_scale`: weights stated in MJy⁻² to µJy⁻² become Jy⁻²; single precision holds the products of any sensible weights.
+const WEIGHT_SCALES: (f64, f64) = (1e-12, 1e12);
+
 pub(super) fn read_pointing(section: &Section) -> Option<Pointing> {
     let visibilities = section.required("visibilities", "the name of a visibility file (FITS)", text);
     let aim = section.optional("aim_deg", DIRECTION, direction);
@@ -97,8 +100,13 @@ pub(super) fn read_pointing(section: &Section) -> Option<Pointing> {
         section.complain(aim.line, "aim_deg", problem);
     }
     let response_radius_deg = response_radius(section);
-    let expected = "a number greater than 0 that the file's weights are multiplied by";
-    let weight_scale = section.or("weight_scale", 1.0, expected, number(|scale| scale > 0.0)).value;
+    let (low, high) = WEIGHT_SCALES;
+    let expected = format!(
+        "a number from {low:e} to {high:e} that the file's weights are multiplied by, so that they are inverse variances in \
+         Jy⁻²"
+    );
+    let weight_scale =
+        section.or("weight_scale", 1.0, &expected, number(|scale| (low..=high).contains(&scale))).value;
     section.finish();
     let visibilities = visibilities?;
     let path = section.document.resolve(&visibilities.value);

@@ -23,6 +23,8 @@ pub struct Weighting {
     pub inner_taper_wavelengths: Option<f64>,
     /// Distances outside this range are not used, wavelengths.
     pub uv_range_wavelengths: Option<[f64; 2]>,
+    /// Lengths √(u² + v²) outside this range are not used, metres.
+    pub uv_range_m: Option<[f64; 2]>,
 }
 
 /// How weights go by the density of visibilities.
@@ -60,6 +62,7 @@ impl Default for Weighting {
             outer_cosine_wavelengths: None,
             inner_taper_wavelengths: None,
             uv_range_wavelengths: None,
+            uv_range_m: None,
         }
     }
 }
@@ -69,6 +72,13 @@ impl Weighting {
     pub fn is_natural(&self) -> bool {
         Weighting { robustness: 0.0, density: DensityOf::All, cell_wavelengths: None, ..*self }
             == Weighting::default()
+    }
+
+    /// The ranges alone, of natural weights; `None` where there are none.
+    pub fn ranges(&self) -> Option<Weighting> {
+        let (uv_range_wavelengths, uv_range_m) = (self.uv_range_wavelengths, self.uv_range_m);
+        let any = uv_range_wavelengths.is_some() || uv_range_m.is_some();
+        any.then(|| Weighting { uv_range_wavelengths, uv_range_m, ..Weighting::default() })
     }
 
     /// In words, for records.
@@ -96,74 +106,108 @@ impl Weighting {
         if let Some([from, to]) = self.uv_range_wavelengths {
             words += &format!(", only {from} to {to} wavelengths");
         }
+        if let Some([from, to]) = self.uv_range_m {
+            words += &format!(", only {from} to {to} m");
+        }
         words
     }
 }
 
 const SCHEMES: [&str; 3] = ["natural", "uniform", "robust"];
 
+/// Least side of a cell, wavelengths: 1 over 2, the width of the whole hemisphere in direction cosines. No image is wider, and
+/// what smaller cells tell apart no image shows.
+const LEAST_CELL: f64 = 0.5;
+
 pub(super) fn read_weighting(section: &Section) -> Weighting {
     let expected = "the name of a weighting scheme: \"natural\", \"uniform\" or \"robust\"";
-    let scheme = section
-        .optional("scheme", expected, text)
-        .map(|at| match at.value.as_str() {
-            "natural" => Scheme::Natural,
-            "uniform" => Scheme::Uniform,
-            "robust" => Scheme::Robust,
-            _ => {
-                section.complain(
-                    at.line,
-                    "scheme",
-                    Problem::unknown_name("weighting scheme", &at.value, SCHEMES.map(String::from).to_vec()),
-                );
-                Scheme::Natural
-            }
-        })
-        .unwrap_or_default();
+    let named = section.optional("scheme", expected, text).and_then(|at| match at.value.as_str() {
+        "natural" => Some(Scheme::Natural),
+        "uniform" => Some(Scheme::Uniform),
+        "robust" => Some(Scheme::Robust),
+        _ => {
+            let known = SCHEMES.map(String::from).to_vec();
+            section.complain(at.line, "scheme", Problem::unknown_name("weighting scheme", &at.value, known));
+            None
+        }
+    });
+    let scheme = named.unwrap_or_default();
     let robustness = section.optional(
         "robustness",
         "a number from -5 (uniform) to 5 (natural)",
         number(|r| (-5.0..=5.0).contains(&r)),
     );
-    if let Some(robustness) = robustness
-        && scheme != Scheme::Robust
-    {
-        let problem = Problem::Conflict {
-            found: "a robustness without robust weights".to_owned(),
-            expected: "scheme = \"robust\"".to_owned(),
-        };
-        section.complain(robustness.line, "robustness", problem);
-    }
-    let density = section
-        .optional("density", "\"all\" pointings together or each \"pointing\" by itself", |value| {
-            match text(value)?.as_str() {
-                "all" => Some(DensityOf::All),
-                "pointing" => Some(DensityOf::Pointing),
-                _ => None,
+    let density = section.optional(
+        "density",
+        "\"all\" pointings together or each \"pointing\" by itself",
+        |value| match text(value)?.as_str() {
+            "all" => Some(DensityOf::All),
+            "pointing" => Some(DensityOf::Pointing),
+            _ => None,
+        },
+    );
+    let cell = section.optional(
+        "cell_wavelengths",
+        &format!(
+            "the side of a cell of the density in wavelengths, at least {LEAST_CELL}: such cells tell apart all that a \
+             hemisphere can show"
+        ),
+        number(|side| side >= LEAST_CELL),
+    );
+    // a key that would do nothing is a misunderstanding; not told beside a scheme that is wrong itself
+    if named.is_some() || !section.has("scheme") {
+        let by_density = "scheme = \"uniform\" or \"robust\"";
+        for (line, key, idle, found, expected) in [
+            (
+                robustness.map(|at| at.line),
+                "robustness",
+                scheme != Scheme::Robust,
+                "a robustness without robust weights",
+                "scheme = \"robust\"",
+            ),
+            (
+                density.map(|at| at.line),
+                "density",
+                scheme == Scheme::Natural,
+                "a density, which natural weights do not go by",
+                by_density,
+            ),
+            (
+                cell.map(|at| at.line),
+                "cell_wavelengths",
+                scheme == Scheme::Natural,
+                "cells of a density, which natural weights do not go by",
+                by_density,
+            ),
+        ] {
+            if let Some(line) = line.filter(|_| idle) {
+                let problem = Problem::Conflict { found: found.to_owned(), expected: expected.to_owned() };
+                section.complain(line, key, problem);
             }
-        })
-        .map_or(DensityOf::All, |at| at.value);
+        }
+    }
     let positive = |key: &'static str, what: &str| {
         section.optional(key, &format!("{what}, greater than 0"), number(|value| value > 0.0)).map(|at| at.value)
     };
-    let range = |key: &'static str, low_may_be_zero: bool| {
-        let expected = "[from, to]: two distances in wavelengths, the second greater than the first";
+    let range = |key: &'static str, unit: &str| {
+        let expected = format!("[from, to]: two distances in {unit}, the second greater than the first");
         section
-            .optional(key, expected, |value| {
+            .optional(key, &expected, |value| {
                 let [from, to] = pair(number(|value| value >= 0.0))(value)?;
-                (to > from && (low_may_be_zero || from > 0.0)).then_some([from, to])
+                (to > from).then_some([from, to])
             })
             .map(|at| at.value)
     };
     let weighting = Weighting {
         scheme,
         robustness: robustness.map_or(0.0, |at| at.value),
-        density,
-        cell_wavelengths: positive("cell_wavelengths", "the side of a cell of the density in wavelengths"),
+        density: density.map_or(DensityOf::All, |at| at.value),
+        cell_wavelengths: cell.map(|at| at.value),
         outer_taper_arcsec: positive("outer_taper_arcsec", "a full width at half maximum in arcseconds"),
-        outer_cosine_wavelengths: range("outer_cosine_wavelengths", true),
+        outer_cosine_wavelengths: range("outer_cosine_wavelengths", "wavelengths"),
         inner_taper_wavelengths: positive("inner_taper_wavelengths", "a distance in wavelengths"),
-        uv_range_wavelengths: range("uv_range_wavelengths", true),
+        uv_range_wavelengths: range("uv_range_wavelengths", "wavelengths"),
+        uv_range_m: range("uv_range_m", "metres"),
     };
     section.finish();
     weighting
