@@ -3,6 +3,7 @@
 use super::image_deconvolve::{Deconvolved, Dirty, deconvolved};
 use super::image_files::Images;
 use super::image_measure::{self, Measurement, Plates};
+use super::image_state::Keeper;
 use super::inputs::{PointingInput, open_pointings};
 use super::progress::Progress;
 use super::{CliError, Common};
@@ -31,6 +32,9 @@ pub struct Arguments {
     /// The run file (TOML)
     #[arg(value_name = "RUN.toml")]
     pub run: PathBuf,
+    /// Go on with a deconvolution that was stopped, from its last major cycle
+    #[arg(long = "continue")]
+    pub go_on: bool,
 }
 
 /// Makes the mosaic.
@@ -58,7 +62,9 @@ pub fn run(arguments: &Arguments, common: &Common) -> Result<String, CliError> {
     };
     record.inputs = checksums(&run)?;
     record.stations = station_groups(&inputs);
+    let keeper = Keeper::new(&folder, &arguments.run, &record, arguments.go_on, &progress)?;
     let mut making = Making {
+        keeper,
         progress: &progress,
         run: &run,
         record,
@@ -90,6 +96,7 @@ pub fn run(arguments: &Arguments, common: &Common) -> Result<String, CliError> {
     write_page(&unfinished.path().join("report.html"), &record, &written.pictures).map_err(told)?;
     write_json(&unfinished.path().join("run.json"), &record).map_err(told)?;
     hand_over(unfinished.path(), &folder, &record.products)?;
+    making.keeper.done();
     let place = folder.display().to_string();
     let said = summary_json(&record, &place);
     common.conclusion(&said, || summary_text(&record, &place) + "\n")
@@ -183,6 +190,7 @@ fn station_groups(inputs: &[PointingInput]) -> Vec<StationGroup> {
 
 /// A run under way.
 struct Making<'a> {
+    keeper: Keeper,
     progress: &'a Progress,
     run: &'a RunFile,
     record: RunRecord,
@@ -372,7 +380,7 @@ impl Making<'_> {
 
     fn deconvolved(&mut self, mosaic: &mut Mosaic, dirty: &Dirty) -> Result<Option<Deconvolved>, CliError> {
         let started = Instant::now();
-        let deconvolved = deconvolved(self.run, mosaic, dirty, self.progress)?;
+        let deconvolved = deconvolved(self.run, mosaic, dirty, &mut self.keeper, self.progress)?;
         if let Some(made) = &deconvolved {
             self.timed("deconvolving", started);
             self.record.warnings.extend(made.warnings());

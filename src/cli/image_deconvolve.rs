@@ -2,11 +2,12 @@
 
 use super::CliError;
 use super::image_files::Sheet;
+use super::image_state::Keeper;
 use super::progress::{Progress, Stage};
 use crate::imaging::beam_fit::FittedBeam;
 use crate::imaging::deconvolve::{
-    MajorCycle, Minor, Model, NoiseLevel, Observer, Part, Settings, Task, circles_mask, deconvolve, read_mask,
-    restored_model,
+    MajorCycle, Minor, Model, NoiseLevel, Observer, Part, Settings, State, Task, circles_mask, deconvolve,
+    read_mask, restored_model,
 };
 use crate::imaging::{Mosaic, Pointing};
 use crate::report::{BeamFigures, DeconvolutionFigures};
@@ -57,6 +58,7 @@ pub(super) fn deconvolved(
     run: &RunFile,
     mosaic: &mut Mosaic,
     dirty: &Dirty,
+    keeper: &mut Keeper,
     progress: &Progress,
 ) -> Result<Option<Deconvolved>, CliError> {
     let asked = &run.deconvolution;
@@ -74,10 +76,13 @@ pub(super) fn deconvolved(
     };
     let settings = settings(asked, &geometry, dirty.beam.as_ref().unwrap_or(&beam), dirty.frequency_hz);
     let seen = dirty.image.mapv(|value| !value.is_nan());
+    let state = keeper.take();
+    let continued = state.as_ref().map(State::cycles);
     let task = Task {
         geometry,
         mask: mask(run, &geometry)?,
         start: start(run, &geometry, &settings)?,
+        state,
         parts: mosaic
             .pointings_mut()
             .iter_mut()
@@ -96,7 +101,7 @@ pub(super) fn deconvolved(
         settings: settings.clone(),
     };
     let stage = progress.stage("deconvolving", "rows", None);
-    let outcome = deconvolve(task, &mut Telling { progress, stage: &stage })?;
+    let outcome = deconvolve(task, &mut Telling { progress, stage: &stage, keeper })?;
     stage.finish();
 
     let mut residual = outcome.numerator;
@@ -128,6 +133,7 @@ pub(super) fn deconvolved(
         side_lobe: outcome.side_lobe,
         searched_pixels: outcome.searched_pixels,
         restoring_beam: BeamFigures::from(&beam),
+        continued_after_cycle: continued,
         cycles: outcome.cycles,
     };
     let model = outcome.model.image(&geometry, settings.reference_hz);
@@ -244,6 +250,7 @@ fn start(run: &RunFile, geometry: &ImageGeometry, settings: &Settings) -> Result
 struct Telling<'a> {
     progress: &'a Progress,
     stage: &'a Stage<'a>,
+    keeper: &'a mut Keeper,
 }
 
 impl Observer for Telling<'_> {
@@ -256,6 +263,10 @@ impl Observer for Telling<'_> {
             "major cycle {number}: {} components, {:.4} Jy, residual at most {:.3e} Jy/beam ({:.1} × noise)",
             cycle.components, cycle.model_jy, cycle.peak_jy_per_beam, cycle.peak_over_noise
         ));
+    }
+
+    fn state(&mut self, state: &State) {
+        self.keeper.keep(state, self.progress);
     }
 }
 

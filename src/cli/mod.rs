@@ -14,6 +14,7 @@ pub mod image;
 mod image_deconvolve;
 mod image_files;
 mod image_measure;
+mod image_state;
 pub mod inputs;
 pub mod progress;
 pub mod simulate;

@@ -38,6 +38,9 @@ pub struct DeconvolutionFigures {
     pub searched_pixels: usize,
     /// Restoring beam.
     pub restoring_beam: BeamFigures,
+    /// Major cycles that an earlier run, stopped on its way, had made.
+    #[serde(default)]
+    pub continued_after_cycle: Option<usize>,
     /// Major cycles.
     pub cycles: Vec<MajorCycle>,
 }

@@ -93,6 +93,7 @@ impl Field {
             weight: &self.sums.normaliser,
             seen: &seen,
             mask: given.mask,
+            state: None,
             start: given.start.unwrap_or_else(|| Model::empty(&geometry)),
             beam: self.beam,
             settings: settings.clone(),

@@ -18,7 +18,8 @@
 //! first component alone, g N(s)/W(s) at the peak, has b/q = 1/g ≥ 1.
 //!
 //! Files, in the order of a run: `local_psf`, `local_noise` (measured noise, masks that grow), `search` (inner loops),
-//! `minor` and `multi_scale` (minor cycles), `residual` (major cycles), `points` and `fitting` (compact sources), `restore`.
+//! `minor` and `multi_scale` (minor cycles), `residual` (major cycles), `points` and `fitting` (compact sources), `state`
+//! (going on after a stop), `restore`.
 
 mod fitting;
 pub mod local_noise;
@@ -32,6 +33,7 @@ mod residual;
 mod restore;
 pub mod search;
 mod settings;
+mod state;
 
 pub use mask::{MaskError, circles_mask, read_mask};
 pub use model::{Model, write_components};
@@ -39,6 +41,7 @@ pub use points::MOST_POINTS;
 pub use residual::{Part, ResidualSource, Sky, residual_numerator};
 pub use restore::restored_model;
 pub use settings::{MajorCycle, Minor, NoiseLevel, Settings, Stop};
+pub use state::State;
 
 use super::beam_fit::FittedBeam;
 use crate::response::ResponseError;
@@ -48,6 +51,7 @@ use minor::{Found, Start};
 use ndarray::{Array2, Zip};
 use points::Crowd;
 use search::{Levels, Searched, Whole};
+use state::Pace;
 
 /// Half width of the patches of Clark's and the multi-scale minor cycle, pixels.
 const PATCH_HALF: usize = 256;
@@ -75,6 +79,8 @@ pub struct Task<'a> {
     pub mask: Option<Array2<bool>>,
     /// What is known beforehand.
     pub start: Model,
+    /// A state of the same deconvolution, to go on from; one of another image is passed over.
+    pub state: Option<State>,
     /// Restoring beam (a length for masks and fits).
     pub beam: FittedBeam,
     /// Settings.
@@ -108,12 +114,15 @@ pub trait Observer: Send {
     fn rows(&mut self, rows: u64);
     /// A major cycle ended.
     fn cycle(&mut self, number: usize, cycle: &MajorCycle);
+    /// A state that can be gone on from, as [`Task::state`].
+    fn state(&mut self, state: &State);
 }
 
 /// Nobody.
 impl Observer for () {
     fn rows(&mut self, _: u64) {}
     fn cycle(&mut self, _: usize, _: &MajorCycle) {}
+    fn state(&mut self, _: &State) {}
 }
 
 /// Deconvolves.
@@ -138,10 +147,11 @@ pub fn deconvolve(mut task: Task, observer: &mut dyn Observer) -> Result<Outcome
         last_fit: None,
         task,
     };
-    if !fresh {
+    let pace = run.task.state.take().and_then(|state| run.take_up(state));
+    if !fresh && pace.is_none() {
         run.numerator = run.residual(&run.model.clone(), observer)?;
     }
-    run.go(observer)
+    run.go(pace, observer)
 }
 
 /// Pixels that may ever hold a component.
@@ -187,7 +197,7 @@ impl Run<'_> {
         residual_numerator(&mut self.task.parts, &self.task.geometry, &sky, &mut |rows| observer.rows(rows))
     }
 
-    fn go(mut self, observer: &mut dyn Observer) -> Result<Outcome, ResponseError> {
+    fn go(mut self, pace: Option<Pace>, observer: &mut dyn Observer) -> Result<Outcome, ResponseError> {
         let (most_half, copies) = match &self.settings().minor {
             Minor::Hogbom => (usize::MAX, 1),
             Minor::Clark => (PATCH_HALF, 1),
@@ -202,9 +212,8 @@ impl Run<'_> {
             &mut |rows| observer.rows(rows),
         )?;
         // before anything is measured, what lies beyond the patches is what they are known to miss
-        let mut misfit = 0.5 * psfs.beyond;
-        let mut lowest = f64::INFINITY;
-        let mut waited = 0;
+        let fresh = Pace { misfit: 0.5 * psfs.beyond, lowest: f64::INFINITY, waited: 0 };
+        let Pace { mut misfit, mut lowest, mut waited } = pace.unwrap_or(fresh);
         let (stop, levels) = loop {
             let image = self.scaling.search_image(&self.numerator);
             let levels = self.levels(&image);
@@ -218,6 +227,7 @@ impl Run<'_> {
             if self.fit_is_due(&image, peak) {
                 self.fit(observer)?;
                 (lowest, waited) = (f64::INFINITY, 0);
+                observer.state(&self.state(Pace { misfit, lowest, waited }));
                 continue;
             }
             let Some(peak) = peak else { break (self.reached(&image), levels) };
@@ -256,6 +266,7 @@ impl Run<'_> {
             if let Err(stop) = taken {
                 break (stop, levels);
             }
+            observer.state(&self.state(Pace { misfit, lowest, waited }));
         };
         let points = self.model.points.iter().filter(|point| points::made_here(point)).count();
         Ok(Outcome {

@@ -23,6 +23,7 @@ use nalgebra::{DMatrix, DVector};
 use ndarray::Array2;
 use num_complex::{Complex32, Complex64};
 use rayon::prelude::*;
+use serde::{Deserialize, Serialize};
 
 /// Most sources fitted: the normal matrix has four rows for each, and each is predicted five times a pass.
 pub const MOST_POINTS: usize = 200;
@@ -40,7 +41,7 @@ const SAMPLES: usize = 1 << 13;
 const EACH: usize = 4;
 
 /// A point and the pixels that it replaced.
-#[derive(Debug, Clone)]
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
 pub struct Crowd {
     /// Names of the points that replace it: one, or two for a double.
     pub names: Vec<String>,
