@@ -242,3 +242,27 @@ fn hollin_fell_without_noise_leaves_less_than_a_ten_thousandth() {
 fn largest(image: &Array2<f64>) -> f64 {
     image.iter().filter(|v| !v.is_nan()).map(|v| v.abs()).reduce(f64::max).unwrap_or(f64::NAN)
 }
+
+/// Frequency terms as a person asks for them: the maps are there, and sources that are flat have an index of 0 within what the level
+/// of 5 mJy leaves of 1 Jy over the root mean square of the band of ξ (here below 0.04 of ν₀: 0.2).
+#[test]
+fn frequency_terms_make_maps_of_the_spectrum() {
+    let folder = observed();
+    folder.run_file(&text(&format!("{TABLE}frequency_terms = 3\n")));
+    let ended = folder.imaged(&[]);
+    let names = names_in(&folder.out());
+    for name in ["spectral-index", "spectral-index-error", "spectral-curvature", "spectral-curvature-error"] {
+        assert!(names.contains(&format!("{name}.fits")) && names.contains(&format!("{name}.png")), "{names:?}");
+        let (header, image) = folder.product(&format!("{name}.fits"));
+        assert_eq!(header.text("BUNIT").unwrap().unwrap_or_default(), "", "{name}");
+        assert_eq!(image.dim(), (90, 100));
+    }
+    let (index, error) = (folder.product("spectral-index.fits").1, folder.product("spectral-index-error.fits").1);
+    for (x, y, _) in SOURCES {
+        let at = [y as usize, x as usize];
+        println!("index {} ± {}", index[at], error[at]);
+        assert!(index[at].abs() <= 0.2 && error[at] > 0.0, "{}", index[at]);
+    }
+    assert!(index[[3, 3]].is_nan());
+    assert!(folder.record()["limits"].to_string().contains("Spectral indices"), "{}", ended.out);
+}

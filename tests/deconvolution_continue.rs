@@ -105,6 +105,13 @@ fn a_killed_run_goes_on_to_the_same_products() {
 #[test]
 fn a_state_of_another_run_is_refused_and_none_is_no_error() {
     let folder = observed();
+    // with frequency terms, which are part of a state
+    let table = TABLE.replace("fit_points_above_noise = 10", "frequency_terms = 2");
+    let text = run_text(&["data.idifits"], &geometry(), 1e-4) + &table;
+    folder.run_file(&text);
+    let whole = observed();
+    whole.run_file(&text);
+    whole.imaged(&THREADS);
     let ended = folder.imaged(&["--threads", "2", "--continue"]);
     assert!(ended.err.contains("is not there") && ended.err.contains("starts from the beginning"), "{}", ended.err);
 
@@ -115,7 +122,6 @@ fn a_state_of_another_run_is_refused_and_none_is_no_error() {
     let kept = std::fs::read(&state).unwrap();
 
     // settings that change the result
-    let text = run_text(&["data.idifits"], &geometry(), 1e-4) + TABLE;
     folder.run_file(&text.replace("max_major_cycles = 12", "max_major_cycles = 13"));
     let refused = folder.image(&["--continue"]);
     assert_eq!(refused.status, Some(1), "{}", refused.err);
@@ -131,5 +137,8 @@ fn a_state_of_another_run_is_refused_and_none_is_no_error() {
     let ended = folder.imaged(&["--threads", "2", "--continue"]);
     assert!(ended.err.contains("going on after major cycle"), "{}", ended.err);
     assert!(folder.record()["deconvolution"]["continued_after_cycle"].as_u64() >= Some(1));
+    assert_same_products(&folder, &whole);
+    let (got, want) = (folder.product("spectral-index.fits").1, whole.product("spectral-index.fits").1);
+    assert!(got.iter().zip(&want).all(|(a, b)| a.to_bits() == b.to_bits()));
     assert!(names_in(&folder.out()).iter().all(|name| name != STATE));
 }

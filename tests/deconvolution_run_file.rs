@@ -48,10 +48,22 @@ fn a_flux_density_alone_is_the_only_level() {
     assert_eq!(of("stop_at_jy = 0\n").stop_at_noise, 3.0);
 }
 
+#[test]
+fn frequency_terms_are_for_pixels() {
+    let of = |keys: &str| parse(&format!("[deconvolution]\nmethod = \"clark\"\n{keys}"));
+    assert_eq!(of("frequency_terms = 2\n").unwrap().deconvolution.frequency_terms, 2);
+    let refused = of("frequency_terms = 2\nfit_points_above_noise = 9\n").unwrap_err().to_string();
+    assert!(refused.contains("run.toml:9: deconvolution.frequency_terms"), "{refused}");
+    assert!(refused.contains("or no fit_points_above_noise"), "{refused}");
+}
+
 /// Each bad value is the only complaint, on its line (8: after the table's line 7 and method) and with its key.
 #[test]
 fn every_key_refuses_what_it_cannot_mean() {
     for (line, key, part) in [
+        ("frequency_terms = 0", "frequency_terms", "1 (one spectrum for all)"),
+        ("frequency_terms = 4", "frequency_terms", "1 (one spectrum for all)"),
+        ("frequency_terms = 2", "frequency_terms", "\"clark\" or \"hogbom\""),
         ("loop_gain = 0", "loop_gain", "greater than 0, at most 1"),
         ("loop_gain = 1.01", "loop_gain", "greater than 0, at most 1"),
         ("loop_gain = nan", "loop_gain", "greater than 0, at most 1"),

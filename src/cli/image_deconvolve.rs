@@ -5,9 +5,10 @@ use super::image_files::Sheet;
 use super::image_state::Keeper;
 use super::progress::{Progress, Stage};
 use crate::imaging::beam_fit::FittedBeam;
+use crate::imaging::deconvolve::local_psf::Scaling;
 use crate::imaging::deconvolve::{
-    MajorCycle, Minor, Model, NoiseLevel, Observer, Part, Settings, State, Task, circles_mask, deconvolve,
-    read_mask, restored_model,
+    MajorCycle, Minor, Model, NoiseLevel, Observer, Part, Settings, Spectrum, State, Task, circles_mask,
+    deconvolve, read_mask, restored_model, spectrum,
 };
 use crate::imaging::{Mosaic, Pointing};
 use crate::report::{BeamFigures, DeconvolutionFigures};
@@ -26,6 +27,8 @@ pub(super) struct Deconvolved {
     pub model: Array2<f64>,
     /// Noise of the flat sky, Jy/beam.
     pub noise: Array2<f64>,
+    /// Spectral index and curvature, with frequency terms.
+    pub spectrum: Option<Spectrum>,
     /// All components.
     pub components: Vec<Component>,
     /// The restoring beam.
@@ -104,6 +107,8 @@ pub(super) fn deconvolved(
     let outcome = deconvolve(task, &mut Telling { progress, stage: &stage, keeper })?;
     stage.finish();
 
+    let scaling = Scaling::new(&dirty.sums.normaliser, dirty.weight, &seen);
+    let spectrum = spectrum(&outcome, &scaling, &geometry, &beam, &settings);
     let mut residual = outcome.numerator;
     Zip::from(&mut residual).and(&dirty.sums.normaliser).and(&seen).for_each(|value, w, seen| {
         *value = if *seen { *value / w } else { f64::NAN };
@@ -137,7 +142,7 @@ pub(super) fn deconvolved(
         cycles: outcome.cycles,
     };
     let model = outcome.model.image(&geometry, settings.reference_hz);
-    Ok(Some(Deconvolved { sky, residual, model, noise, components, beam, figures }))
+    Ok(Some(Deconvolved { sky, residual, model, noise, spectrum, components, beam, figures }))
 }
 
 /// The residual in figures.
@@ -201,6 +206,7 @@ fn settings(asked: &Deconvolution, geometry: &ImageGeometry, beam: &FittedBeam, 
         mask_above_noise: asked.mask_above_noise,
         fit_points_above_noise: asked.fit_points_above_noise,
         spectral_index: asked.spectral_index,
+        frequency_terms: asked.frequency_terms,
         ..Settings::new(minor, reference_hz)
     }
 }
@@ -284,7 +290,7 @@ impl Deconvolved {
 
     /// What the images cannot tell.
     pub(super) fn limits(&self) -> Vec<String> {
-        vec![
+        let mut limits = vec![
             "The sky is in Jy per restoring beam where the model holds the flux, and in Jy per dirty beam where the \
              residual does: flux below the level at which deconvolution stopped is not on the same scale for extended \
              sources."
@@ -292,12 +298,20 @@ impl Deconvolved {
             "Components outside the mask or below lowest_response are not looked for; the side lobes of such sources are \
              still there."
                 .to_owned(),
-        ]
+        ];
+        if self.spectrum.is_some() {
+            limits.push(
+                "Spectral indices are those of the polynomial in frequency that was fitted: over wide bands a power law is \
+                 not one. Their errors hold the thermal noise only. components.csv has the constant terms alone."
+                    .to_owned(),
+            );
+        }
+        limits
     }
 
     /// The images, to be written.
-    pub(super) fn sheets(&self) -> [Sheet<'_>; 4] {
-        [
+    pub(super) fn sheets(&self) -> Vec<Sheet<'_>> {
+        let mut sheets = vec![
             Sheet {
                 name: "sky",
                 image: &self.sky,
@@ -340,6 +354,55 @@ impl Deconvolved {
                 caption: "Thermal noise at each pixel, as the weights of the visibilities state it.",
                 beam: None,
             },
-        ]
+        ];
+        sheets.extend(self.spectrum.iter().flat_map(spectral_sheets));
+        sheets
     }
+}
+
+fn spectral_sheets(spectrum: &Spectrum) -> Vec<Sheet<'_>> {
+    let sheet = |name, image, quantity, what, caption| Sheet {
+        name,
+        image,
+        bunit: "",
+        unit: "",
+        quantity,
+        what,
+        caption,
+        beam: None,
+    };
+    let mut sheets = vec![
+        sheet(
+            "spectral-index",
+            &spectrum.index,
+            "Spectral index",
+            "spectral index of the restored sky, S ~ nu^index, where it is 5 times its noise or more",
+            "Slope of the logarithm of the flux density at the frequency of the image. The beams' own change with frequency \
+             is corrected for. Blank where the sky is fainter than five times its noise.",
+        ),
+        sheet(
+            "spectral-index-error",
+            &spectrum.index_error,
+            "Standard error of the spectral index",
+            "standard error of the spectral index, thermal noise only",
+            "From thermal noise alone; errors of the beams' widths with frequency come on top.",
+        ),
+    ];
+    if let (Some(curvature), Some(error)) = (&spectrum.curvature, &spectrum.curvature_error) {
+        sheets.push(sheet(
+            "spectral-curvature",
+            curvature,
+            "Spectral curvature",
+            "curvature b of the spectrum, S ~ nu^(index + b ln(nu/nu0))",
+            "How the spectral index changes with the logarithm of frequency, halved: S ∝ ν^(α + β ln(ν/ν₀)).",
+        ));
+        sheets.push(sheet(
+            "spectral-curvature-error",
+            error,
+            "Standard error of the spectral curvature",
+            "standard error of the spectral curvature, thermal noise only",
+            "From thermal noise alone.",
+        ));
+    }
+    sheets
 }

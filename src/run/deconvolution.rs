@@ -74,6 +74,8 @@ pub struct Deconvolution {
     pub start_from: Option<At<PathBuf>>,
     /// Spectral index of all components.
     pub spectral_index: f64,
+    /// Terms of the spectra of pixels; 1: all have the common spectrum.
+    pub frequency_terms: usize,
     /// Fit compact sources above this multiple of the noise straight to the visibilities.
     pub fit_points_above_noise: Option<f64>,
     /// Restoring beam, full widths in arcseconds; `None`: the fitted one.
@@ -103,6 +105,7 @@ impl Default for Deconvolution {
             non_negative: false,
             start_from: None,
             spectral_index: 0.0,
+            frequency_terms: 1,
             fit_points_above_noise: None,
             restoring_beam_arcsec: None,
             restoring_angle_deg: 0.0,
@@ -230,7 +233,33 @@ pub(super) fn read_deconvolution(section: &Section) -> Deconvolution {
         "the spectral index of all components, -10 to 10",
         number(|alpha| alpha.abs() <= 10.0),
     );
+    let terms = section.or(
+        "frequency_terms",
+        plain.frequency_terms,
+        "the number of terms in frequency: 1 (one spectrum for all), 2 (spectral index) or 3 (and curvature)",
+        count(1, 3),
+    );
     let fit_points = section.optional("fit_points_above_noise", MULTIPLE, number(|multiple| multiple > 0.0));
+    if terms.value > 1 {
+        let conflict = |found: &str, expected: &str| Problem::Conflict {
+            found: found.to_owned(),
+            expected: expected.to_owned(),
+        };
+        if fit_points.is_some() {
+            let problem = conflict(
+                "frequency terms beside fitted points, which have spectra of their own",
+                "frequency_terms = 1, or no fit_points_above_noise",
+            );
+            section.complain(terms.line, "frequency_terms", problem);
+        }
+        if method.as_ref().is_some_and(|method| method.value == DeconvolutionMethod::MultiScale) {
+            let problem = conflict(
+                "frequency terms for extended components, which have one spectrum",
+                "method = \"clark\" or \"hogbom\", or frequency_terms = 1",
+            );
+            section.complain(terms.line, "frequency_terms", problem);
+        }
+    }
     let beam = section.optional(
         "restoring_beam_arcsec",
         "[major, minor]: full widths at half maximum in arcseconds, greater than 0, the larger first",
@@ -274,6 +303,7 @@ pub(super) fn read_deconvolution(section: &Section) -> Deconvolution {
         non_negative: non_negative.value,
         start_from,
         spectral_index: spectral_index.value,
+        frequency_terms: terms.value,
         fit_points_above_noise: fit_points.map(|at| at.value),
         restoring_beam_arcsec: beam.map(|at| at.value),
         restoring_angle_deg: angle.map_or(0.0, |at| at.value),

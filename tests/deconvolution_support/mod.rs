@@ -2,10 +2,11 @@
 #![allow(dead_code)]
 
 use crate::common::{Scene, Setting, scene};
+use evensky::beam::StationBeams;
 use evensky::imaging::beam_fit::{FittedBeam, fit_beam};
 use evensky::imaging::deconvolve::{Model, Outcome, Part, Settings, Task, deconvolve};
 use evensky::imaging::{Mosaic, Pointing, flat_sky};
-use evensky::observation::MemorySource;
+use evensky::observation::{MemorySource, Observation};
 use evensky::response::gridded::Options;
 use evensky::response::{Exact, Sums};
 use evensky::sky::{Component, ImageGeometry};
@@ -46,6 +47,18 @@ impl Field {
         noise: bool,
         claimed: f32,
     ) -> Field {
+        Field::seen_otherwise(settings, sky, geometry, noise, claimed, |_, beams| beams)
+    }
+
+    /// As [`Field::new`], but imaged with the beams that `taken` makes of the true ones.
+    pub fn seen_otherwise(
+        settings: &[Setting],
+        sky: &[Component],
+        geometry: ImageGeometry,
+        noise: bool,
+        claimed: f32,
+        taken: impl Fn(&Observation, StationBeams) -> StationBeams,
+    ) -> Field {
         let mut mosaic = Mosaic::new(geometry);
         let mut rng = ChaCha8Rng::seed_from_u64(99);
         for setting in settings {
@@ -59,6 +72,7 @@ impl Field {
                 }
                 *weight *= claimed;
             }
+            let beams = taken(&observation, beams);
             let source = Box::new(MemorySource::new(observation, vec![block]));
             mosaic.add(source, beams, TOLERANCE, Options::default(), |_| {}).unwrap();
         }

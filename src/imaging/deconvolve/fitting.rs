@@ -159,7 +159,7 @@ impl Run<'_> {
             &self.task.settings,
             &mut |rows| observer.rows(rows),
         )?;
-        self.residual(model, observer)
+        Ok(self.residual(model, observer)?.0)
     }
 
     /// Whether points stand where their pixels were, and leave no more than `most` there, or a small part of themselves

@@ -107,6 +107,10 @@ pub struct LocalPsfs {
     pub side_lobe: f64,
     /// Largest absolute value known beyond the patches.
     pub beyond: f64,
+    /// By cell: the normaliser at the place that stands for it, Jy⁻²; 0 where nothing is seen.
+    pub peaks: Vec<f64>,
+    /// Normaliser of the visibilities that they were measured with, `[y][x]`, Jy⁻².
+    pub normaliser: Array2<f64>,
 }
 
 impl LocalPsfs {
@@ -119,6 +123,8 @@ impl LocalPsfs {
             patches: vec![Some(patch)],
             side_lobe,
             beyond: 0.0,
+            peaks: vec![1.0],
+            normaliser: Array2::ones((height, width)),
         }
     }
 
@@ -166,8 +172,9 @@ impl LocalPsfs {
             .collect();
         let mut sums: Vec<Option<Vec<f64>>> = places.iter().map(|p| p.map(|_| vec![0.0; pixels])).collect();
         let mut beyond: f64 = 0.0;
+        let mut normaliser = Array2::zeros((height, width));
         for part in parts {
-            let Some(own) = OwnPsf::measure(part, geometry, rows)? else { continue };
+            let Some(own) = OwnPsf::measure(part, geometry, &mut normaliser, rows)? else { continue };
             sums.par_iter_mut().zip(&places).for_each(|(sum, place)| {
                 if let (Some(sum), Some(place)) = (sum, place) {
                     own.add(sum, half, *place, scaling);
@@ -175,13 +182,15 @@ impl LocalPsfs {
             });
             beyond = beyond.max(own.largest_beyond(half));
         }
+        let middle = half.1 * (2 * half.0 + 1) + half.0;
+        let peaks = sums.iter().map(|sum| sum.as_ref().map_or(0.0, |sum| sum[middle])).collect();
         let patches: Vec<Option<Patch>> = sums
             .into_iter()
             .zip(&places)
             .map(|(sum, place)| Some(normalised(sum?, half, (*place)?, scaling)))
             .collect();
         let side_lobe = patches.iter().flatten().map(side_lobe).fold(0.0, f64::max);
-        Ok(LocalPsfs { cells, cell_px, patches, side_lobe, beyond })
+        Ok(LocalPsfs { cells, cell_px, patches, side_lobe, beyond, peaks, normaliser })
     }
 }
 
@@ -212,6 +221,7 @@ impl OwnPsf {
     fn measure(
         part: &mut Part,
         geometry: &ImageGeometry,
+        normaliser: &mut Array2<f64>,
         rows: &mut (dyn FnMut(u64) + Send),
     ) -> Result<Option<OwnPsf>, ResponseError> {
         let (width, height) = (geometry.width, geometry.height);
@@ -234,6 +244,7 @@ impl OwnPsf {
             Ok(())
         });
         response.adjoint(&mut modelled, &mut sums)?;
+        *normaliser += &sums.normaliser;
         let most = sums.normaliser.iter().copied().fold(0.0, f64::max);
         let place = (x as i64, y as i64);
         let at_place = sums.normaliser[[y as usize, x as usize]];

@@ -18,8 +18,8 @@
 //! first component alone, g N(s)/W(s) at the peak, has b/q = 1/g ≥ 1.
 //!
 //! Files, in the order of a run: `local_psf`, `local_noise` (measured noise, masks that grow), `search` (inner loops),
-//! `minor` and `multi_scale` (minor cycles), `residual` (major cycles), `points` and `fitting` (compact sources), `state`
-//! (going on after a stop), `restore`.
+//! `minor` and `multi_scale` (minor cycles), `residual` (major cycles), `points` and `fitting` (compact sources), `spectral` and
+//! `spectrum` (frequency terms), `state` (going on after a stop), `restore`.
 
 mod fitting;
 pub mod local_noise;
@@ -33,14 +33,17 @@ mod residual;
 mod restore;
 pub mod search;
 mod settings;
+pub mod spectral;
+mod spectrum;
 mod state;
 
 pub use mask::{MaskError, circles_mask, read_mask};
 pub use model::{Model, write_components};
 pub use points::MOST_POINTS;
-pub use residual::{Part, ResidualSource, Sky, residual_numerator};
+pub use residual::{Part, ResidualSource, Sky, residual_numerator, residual_terms};
 pub use restore::restored_model;
 pub use settings::{MajorCycle, Minor, NoiseLevel, Settings, Stop};
+pub use spectrum::{LOWEST_SIGNAL, Spectrum, spectrum};
 pub use state::State;
 
 use super::beam_fit::FittedBeam;
@@ -51,6 +54,7 @@ use minor::{Found, Start};
 use ndarray::{Array2, Zip};
 use points::Crowd;
 use search::{Levels, Searched, Whole};
+use spectral::{Basis, Spectral};
 use state::Pace;
 
 /// Half width of the patches of Clark's and the multi-scale minor cycle, pixels.
@@ -88,12 +92,15 @@ pub struct Task<'a> {
 }
 
 /// What came of it.
-#[derive(Debug, Clone)]
 pub struct Outcome {
     /// The model.
     pub model: Model,
     /// Numerator of the residual of the last major cycle.
     pub numerator: Array2<f64>,
+    /// Those of the further frequency terms.
+    pub further: Vec<Array2<f64>>,
+    /// Moments of the weights in frequency, where there are such terms.
+    pub spectral: Option<Spectral>,
     /// Components found in all minor cycles.
     pub components: u64,
     /// Major cycles.
@@ -131,12 +138,17 @@ impl Observer for () {
 /// When visibilities cannot be read or the model cannot be predicted.
 pub fn deconvolve(mut task: Task, observer: &mut dyn Observer) -> Result<Outcome, ResponseError> {
     let scaling = Scaling::new(task.normaliser, task.weight, task.seen);
-    let model = std::mem::replace(&mut task.start, Model::empty(&task.geometry));
+    let mut model = std::mem::replace(&mut task.start, Model::empty(&task.geometry));
     let fresh = model.points.is_empty() && model.pixels.iter().all(|flux| *flux == 0.0);
+    let terms = task.settings.frequency_terms.max(1);
+    model.terms = vec![Array2::zeros(task.numerator.dim()); terms - 1];
+    let basis = (terms > 1).then(|| Basis::new(&task.parts, task.settings.reference_hz, terms));
     let mut run = Run {
         allowed: allowed(&task, &scaling),
         grown: vec![false; task.numerator.len()],
         numerator: task.numerator.clone(),
+        further: model.terms.clone(),
+        basis,
         model,
         scaling,
         components: 0,
@@ -148,8 +160,8 @@ pub fn deconvolve(mut task: Task, observer: &mut dyn Observer) -> Result<Outcome
         task,
     };
     let pace = run.task.state.take().and_then(|state| run.take_up(state));
-    if !fresh && pace.is_none() {
-        run.numerator = run.residual(&run.model.clone(), observer)?;
+    if pace.is_none() && (!fresh || terms > 1) {
+        (run.numerator, run.further) = run.residual(&run.model.clone(), observer)?;
     }
     run.go(pace, observer)
 }
@@ -170,6 +182,10 @@ struct Run<'a> {
     grown: Vec<bool>,
     model: Model,
     numerator: Array2<f64>,
+    /// Numerators of the further frequency terms.
+    further: Vec<Array2<f64>>,
+    /// Their basis, where there are such terms.
+    basis: Option<Basis>,
     components: u64,
     cycles: Vec<MajorCycle>,
     /// The pixels that fitted points replaced.
@@ -190,11 +206,23 @@ impl Run<'_> {
         self.task.beam.major / self.task.geometry.pixel
     }
 
-    fn residual(&mut self, model: &Model, observer: &mut dyn Observer) -> Result<Array2<f64>, ResponseError> {
-        let settings = &self.task.settings;
-        let pixels = model.pixel_components(&self.task.geometry, settings.reference_hz, settings.spectral_index);
-        let sky = Sky { pixels, points: model.points.clone() };
-        residual_numerator(&mut self.task.parts, &self.task.geometry, &sky, &mut |rows| observer.rows(rows))
+    /// Numerators of the residual of a model: N, and those of further frequency terms.
+    fn residual(
+        &mut self,
+        model: &Model,
+        observer: &mut dyn Observer,
+    ) -> Result<(Array2<f64>, Vec<Array2<f64>>), ResponseError> {
+        let Task { geometry, settings, parts, .. } = &mut self.task;
+        let pixels = model.pixel_components(geometry, settings.reference_hz, settings.spectral_index);
+        let terms = model.term_components(geometry, settings.reference_hz, settings.spectral_index);
+        let sky = Sky { pixels, points: model.points.clone(), terms, basis: self.basis };
+        let mut rows = |rows| observer.rows(rows);
+        let Some(basis) = self.basis else {
+            return Ok((residual_numerator(parts, geometry, &sky, &mut rows)?, Vec::new()));
+        };
+        let mut all = residual_terms(parts, geometry, &sky, &basis, &mut rows)?;
+        let further = all.split_off(1);
+        Ok((all.swap_remove(0), further))
     }
 
     fn go(mut self, pace: Option<Pace>, observer: &mut dyn Observer) -> Result<Outcome, ResponseError> {
@@ -203,14 +231,15 @@ impl Run<'_> {
             Minor::Clark => (PATCH_HALF, 1),
             Minor::MultiScale { scales_px, .. } => (PATCH_HALF, 1 + multi_scale::copies(scales_px.len())),
         };
-        let psfs = LocalPsfs::measure(
-            &mut self.task.parts,
-            &self.task.geometry,
-            &self.scaling,
-            most_half,
-            copies,
-            &mut |rows| observer.rows(rows),
-        )?;
+        let Task { parts, geometry, .. } = &mut self.task;
+        let mut rows = |rows| observer.rows(rows);
+        let (psfs, spectral) = match self.basis {
+            None => (LocalPsfs::measure(parts, geometry, &self.scaling, most_half, copies, &mut rows)?, None),
+            Some(basis) => {
+                let spectral = Spectral::measure(parts, geometry, &self.scaling, most_half, basis, &mut rows)?;
+                (spectral.plain().clone(), Some(spectral))
+            }
+        };
         // before anything is measured, what lies beyond the patches is what they are known to miss
         let fresh = Pace { misfit: 0.5 * psfs.beyond, lowest: f64::INFINITY, waited: 0 };
         let Pace { mut misfit, mut lowest, mut waited } = pace.unwrap_or(fresh);
@@ -247,12 +276,13 @@ impl Run<'_> {
             }
             let mut most = self.settings().max_components - self.components;
             let taken = loop {
-                let found = self.minor(&image, levels.clone(), &psfs, peak, misfit, most);
+                let (found, further) =
+                    self.minor(&image, levels.clone(), (&psfs, spectral.as_ref()), peak, misfit, most);
                 let count = found.components;
                 if count == 0 {
                     break Err(Stop::Stalled);
                 }
-                let (lowered, measured) = self.major(found, observer)?;
+                let (lowered, measured) = self.major(found, further, observer)?;
                 misfit = 2.0 * measured;
                 if lowered {
                     break Ok(());
@@ -272,6 +302,8 @@ impl Run<'_> {
         Ok(Outcome {
             model: self.model,
             numerator: self.numerator,
+            further: self.further,
+            spectral,
             components: self.components,
             cycles: self.cycles,
             stop,
@@ -331,7 +363,16 @@ impl Run<'_> {
         if settings.stop_at_jy * per_jy > settings.stop_at_noise { Stop::FluxDensity } else { Stop::Noise }
     }
 
-    fn minor(&self, image: &[f32], levels: Levels, psfs: &LocalPsfs, peak: f64, misfit: f64, most: u64) -> Found {
+    /// A minor cycle: what it found in the search image, and flux densities of the further terms.
+    fn minor(
+        &self,
+        image: &[f32],
+        levels: Levels,
+        (psfs, spectral): (&LocalPsfs, Option<&Spectral>),
+        peak: f64,
+        misfit: f64,
+        most: u64,
+    ) -> (Found, Vec<Array2<f64>>) {
         let settings = &self.task.settings;
         let start = Start {
             width: self.task.geometry.width,
@@ -345,28 +386,52 @@ impl Run<'_> {
             most,
             floor: settings.non_negative.then(|| &self.model.pixels * &self.scaling.per_jy),
         };
-        match &settings.minor {
+        if let Some(spectral) = spectral {
+            let images: Vec<Vec<f32>> = (1..spectral.basis.terms)
+                .map(|term| spectral.search_image(term, &self.further[term - 1], &self.scaling))
+                .collect();
+            let whole = matches!(settings.minor, Minor::Hogbom);
+            let (found, mut further) = spectral::minor_cycle(&start, &images, spectral, whole);
+            for (term, image) in further.iter_mut().enumerate() {
+                spectral.in_jy(term + 1, image, &self.scaling);
+            }
+            return (found, further);
+        }
+        let found = match &settings.minor {
             Minor::Hogbom => minor::hogbom(start),
             Minor::Clark => minor::clark(start),
             Minor::MultiScale { scales_px, bias } => multi_scale::multi_scale(start, scales_px, *bias),
-        }
+        };
+        (found, Vec::new())
     }
 
     /// Takes a minor cycle's components through the visibilities. Returns whether that lowered the misfit (nothing is
     /// changed where not), and how much the point spread functions erred.
-    fn major(&mut self, found: Found, observer: &mut dyn Observer) -> Result<(bool, f64), ResponseError> {
+    fn major(
+        &mut self,
+        found: Found,
+        further: Vec<Array2<f64>>,
+        observer: &mut dyn Observer,
+    ) -> Result<(bool, f64), ResponseError> {
         let mut update = found.amplitudes;
         Zip::from(&mut update).and(&self.scaling.per_jy).for_each(|value, per_jy| {
             *value = if *per_jy > 0.0 { *value / per_jy } else { 0.0 };
         });
         let mut trial = self.model.clone();
         trial.pixels += &update;
-        let after = self.residual(&trial, observer)?;
+        trial.terms.iter_mut().zip(&further).for_each(|(term, update)| *term += update);
+        let (after, further_after) = self.residual(&trial, observer)?;
         let (mut b, mut q) = (0.0, 0.0);
-        Zip::from(&update).and(&self.numerator).and(&after).for_each(|c, before, after| {
-            b += c * before;
-            q += c * (before - after);
-        });
+        let mut add = |update: &Array2<f64>, before: &Array2<f64>, after: &Array2<f64>| {
+            Zip::from(update).and(before).and(after).for_each(|c, before, after| {
+                b += c * before;
+                q += c * (before - after);
+            });
+        };
+        add(&update, &self.numerator, &after);
+        for ((update, before), after) in further.iter().zip(&self.further).zip(&further_after) {
+            add(update, before, after);
+        }
         let truth = self.scaling.search_image(&after);
         let erred = found.expected.iter().map(|&(at, value)| (truth[at] - value).abs()).fold(0.0, f32::max);
         let psf_misfit = if found.moved > 0.0 { f64::from(erred) / found.moved } else { 0.0 };
@@ -375,10 +440,14 @@ impl Run<'_> {
         }
         let step = if b / q < WHOLE_STEP { b / q } else { 1.0 };
         if step == 1.0 {
-            (self.model, self.numerator) = (trial, after);
+            (self.model, self.numerator, self.further) = (trial, after, further_after);
         } else {
             self.model.pixels.scaled_add(step, &update);
+            self.model.terms.iter_mut().zip(&further).for_each(|(term, update)| term.scaled_add(step, update));
             Zip::from(&mut self.numerator).and(&after).for_each(|n, after| *n += step * (after - *n));
+            for (n, after) in self.further.iter_mut().zip(&further_after) {
+                Zip::from(n).and(after).for_each(|n, after| *n += step * (after - *n));
+            }
         }
         self.components += found.components;
         let cycle = self.described(found.components, step, psf_misfit);

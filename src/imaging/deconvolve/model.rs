@@ -15,12 +15,14 @@ pub struct Model {
     pub pixels: Array2<f64>,
     /// Point sources.
     pub points: Vec<Component>,
+    /// Further terms of the pixels' spectra, I₁, I₂ … of [`super::spectral`], Jy/pixel; none where all have one spectrum.
+    pub terms: Vec<Array2<f64>>,
 }
 
 impl Model {
     /// No sources.
     pub fn empty(geometry: &ImageGeometry) -> Model {
-        Model { pixels: Array2::zeros((geometry.height, geometry.width)), points: Vec::new() }
+        Model { pixels: Array2::zeros((geometry.height, geometry.width)), points: Vec::new(), terms: Vec::new() }
     }
 
     /// Components sorted onto pixels: those on the centre of a pixel of the image whose spectrum is the common one.
@@ -57,16 +59,17 @@ impl Model {
         reference_hz: f64,
         spectral_index: f64,
     ) -> Vec<Component> {
-        let filled = self.pixels.indexed_iter().filter(|(_, flux)| **flux != 0.0);
-        filled
-            .map(|((y, x), &flux_jy)| Component {
-                name: String::new(),
-                direction: geometry.direction_of(x as f64, y as f64).unwrap_or(geometry.centre),
-                flux_jy,
-                reference_hz,
-                spectral_index,
-            })
-            .collect()
+        on_pixels(&self.pixels, geometry, reference_hz, spectral_index)
+    }
+
+    /// The further terms as components.
+    pub fn term_components(
+        &self,
+        geometry: &ImageGeometry,
+        reference_hz: f64,
+        spectral_index: f64,
+    ) -> Vec<Vec<Component>> {
+        self.terms.iter().map(|term| on_pixels(term, geometry, reference_hz, spectral_index)).collect()
     }
 
     /// Flux density of everything at a frequency, Jy.
@@ -88,6 +91,24 @@ impl Model {
         }
         image
     }
+}
+
+fn on_pixels(
+    pixels: &Array2<f64>,
+    geometry: &ImageGeometry,
+    reference_hz: f64,
+    spectral_index: f64,
+) -> Vec<Component> {
+    let filled = pixels.indexed_iter().filter(|(_, flux)| **flux != 0.0);
+    filled
+        .map(|((y, x), &flux_jy)| Component {
+            name: String::new(),
+            direction: geometry.direction_of(x as f64, y as f64).unwrap_or(geometry.centre),
+            flux_jy,
+            reference_hz,
+            spectral_index,
+        })
+        .collect()
 }
 
 /// Writes components as CSV with the columns that [`crate::sky::read_components`] reads.

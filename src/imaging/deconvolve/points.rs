@@ -141,7 +141,7 @@ pub struct Field<'a> {
 /// pull the fit. Minor cycles find again what was real.
 pub fn replace_crowds(model: &mut Model, field: &Field) -> Vec<Crowd> {
     absorb(field.geometry, model, field.beam, field.settings);
-    let on_pixels = Model { pixels: model.pixels.clone(), points: Vec::new() };
+    let on_pixels = Model { pixels: model.pixels.clone(), points: Vec::new(), terms: Vec::new() };
     let restored = restored_model(&on_pixels, field.geometry, field.beam, field.settings.reference_hz);
     let candidates = candidates(model, &restored, field);
     let mut crowds = Vec::new();
@@ -158,7 +158,7 @@ pub fn replace_crowds(model: &mut Model, field: &Field) -> Vec<Crowd> {
 /// they are as likely the errors of an earlier fit as anything else.
 fn drop_doubtful(model: &mut Model, field: &Field) {
     let hz = field.settings.reference_hz;
-    let on_pixels = Model { pixels: model.pixels.clone(), points: Vec::new() };
+    let on_pixels = Model { pixels: model.pixels.clone(), points: Vec::new(), terms: Vec::new() };
     let restored = restored_model(&on_pixels, field.geometry, field.beam, hz);
     for ((flux, brightness), per_jy) in model.pixels.iter_mut().zip(&restored).zip(&field.scaling.per_jy) {
         if (brightness * per_jy).abs() < field.doubtful {
@@ -166,7 +166,7 @@ fn drop_doubtful(model: &mut Model, field: &Field) {
         }
     }
     let within = field.beam.major / field.geometry.pixel;
-    let Model { pixels, points } = model;
+    let Model { pixels, points, .. } = model;
     for point in points.iter().filter(|point| made_here(point)) {
         let Some(place) = field.geometry.pixel_of(point.direction) else { continue };
         around(pixels, place, within).iter().for_each(|(pixel, _)| pixels[*pixel] = 0.0);
@@ -181,7 +181,7 @@ pub fn made_here(point: &Component) -> bool {
 /// Components that later minor cycles put within a beam of a fitted point belong to it.
 fn absorb(geometry: &ImageGeometry, model: &mut Model, beam: &FittedBeam, settings: &Settings) {
     let reach = reach(geometry, beam);
-    let Model { pixels, points } = model;
+    let Model { pixels, points, .. } = model;
     for point in points.iter_mut().filter(|point| made_here(point)) {
         let Some((x, y)) = geometry.pixel_of(point.direction) else { continue };
         let crowd = around(pixels, (x, y), reach);
@@ -291,7 +291,11 @@ pub fn refine(
     let mut passes = 0;
     let mut last = DVector::zeros(EACH * points.len());
     while passes < MOST_PASSES {
-        let sky = Sky { pixels: pixels.clone(), points: fixed.iter().chain(&points).cloned().collect() };
+        let sky = Sky {
+            pixels: pixels.clone(),
+            points: fixed.iter().chain(&points).cloned().collect(),
+            ..Sky::default()
+        };
         let normal = Normal::gather(parts, geometry, &sky, &points, beam, settings, rows)?;
         passes += 1;
         match &best {

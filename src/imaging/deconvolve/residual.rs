@@ -3,7 +3,8 @@
 //! Blocks are read in batches of bounded size, since a prediction transforms the model once for each call, whatever the
 //! number of visibilities.
 
-use crate::observation::{Block, BlockSource, Observation, ObservationError};
+use super::spectral::{Basis, tilt};
+use crate::observation::{Block, BlockSource, MemorySource, Observation, ObservationError};
 use crate::response::{Exact, Response, ResponseError, Sums};
 use crate::sky::{Component, Direction, ImageGeometry};
 use ndarray::Array2;
@@ -31,6 +32,10 @@ pub struct Sky {
     pub pixels: Vec<Component>,
     /// Point sources anywhere.
     pub points: Vec<Component>,
+    /// Further terms of the spectra of pixels: what a basis multiplies by ξ, ξ² …
+    pub terms: Vec<Vec<Component>>,
+    /// The basis of the terms.
+    pub basis: Option<Basis>,
 }
 
 /// The source of a pointing, its data less the model.
@@ -68,7 +73,7 @@ impl<'p, 'a> ResidualSource<'p, 'a> {
             bytes += block.data.len() * 12 + block.rows() * 40;
             batch.push(block);
         }
-        if batch.is_empty() || self.all.is_empty() {
+        if batch.is_empty() || (self.all.is_empty() && self.sky.terms.iter().all(Vec::is_empty)) {
             self.ready.extend(batch);
             return Ok(());
         }
@@ -85,6 +90,22 @@ impl<'p, 'a> ResidualSource<'p, 'a> {
     }
 
     fn model_of(&mut self, batch: &[Block]) -> Result<Vec<Block>, ResponseError> {
+        let mut model = self.constant_terms(batch)?;
+        let Some(basis) = self.sky.basis else { return Ok(model) };
+        let xi = xi(self.part.source.observation(), &basis);
+        for (term, sky) in self.sky.terms.iter().enumerate().filter(|(_, sky)| !sky.is_empty()) {
+            let factors: Vec<f32> = xi.iter().map(|xi| xi.powi(term as i32 + 1)).collect();
+            let mut more = batch.to_vec();
+            self.part.response.predict(sky, &mut more)?;
+            for (block, more) in model.iter_mut().zip(&mut more) {
+                tilt(more, &factors);
+                block.data.iter_mut().zip(&more.data).for_each(|(sum, more)| *sum += more);
+            }
+        }
+        Ok(model)
+    }
+
+    fn constant_terms(&mut self, batch: &[Block]) -> Result<Vec<Block>, ResponseError> {
         let mut model = batch.to_vec();
         if !self.points_apart {
             match self.part.response.predict(&self.all, &mut model) {
@@ -100,6 +121,11 @@ impl<'p, 'a> ResidualSource<'p, 'a> {
         }
         Ok(model)
     }
+}
+
+/// ξ of every channel.
+fn xi(observation: &Observation, basis: &Basis) -> Vec<f32> {
+    observation.frequencies_hz.iter().map(|&hz| basis.at(hz) as f32).collect()
 }
 
 impl BlockSource for ResidualSource<'_, '_> {
@@ -143,4 +169,48 @@ pub fn residual_numerator(
         residual.finish()?;
     }
     Ok(sums.numerator)
+}
+
+/// The numerators N_t of the residual for all terms of a basis, N_0 first. Blocks are held in batches, so that a model is
+/// predicted once for all terms.
+///
+/// # Errors
+/// As [`residual_numerator`].
+pub fn residual_terms(
+    parts: &mut [Part],
+    geometry: &ImageGeometry,
+    sky: &Sky,
+    basis: &Basis,
+    rows: &mut (dyn FnMut(u64) + Send),
+) -> Result<Vec<Array2<f64>>, ResponseError> {
+    let mut sums = vec![Sums::zero(geometry); basis.terms];
+    for part in parts {
+        let response = part.response;
+        let observation = part.source.observation().clone();
+        let xi = xi(&observation, basis);
+        let mut residual = ResidualSource::new(part, sky);
+        residual.rewind()?;
+        loop {
+            let mut blocks = Vec::new();
+            let mut bytes = 0;
+            while bytes < BATCH_BYTES {
+                let Some(block) = residual.next_block()? else { break };
+                rows(block.rows() as u64);
+                bytes += block.data.len() * 12 + block.rows() * 40;
+                blocks.push(block);
+            }
+            if blocks.is_empty() {
+                break;
+            }
+            let mut batch = MemorySource::new(observation.clone(), blocks);
+            for (term, sums) in sums.iter_mut().enumerate() {
+                if term > 0 {
+                    batch.blocks_mut().iter_mut().for_each(|block| tilt(block, &xi));
+                }
+                response.adjoint(&mut batch, sums)?;
+            }
+        }
+        residual.finish()?;
+    }
+    Ok(sums.into_iter().map(|sums| sums.numerator).collect())
 }

@@ -55,6 +55,8 @@ pub struct Settings {
     pub fit_points_above_noise: Option<f64>,
     /// Spectral index of the components.
     pub spectral_index: f64,
+    /// Terms of the spectra of pixels: 1 where all have the common one. (Points only; not with fitted points.)
+    pub frequency_terms: usize,
     /// Frequency that flux densities belong to, Hz.
     pub reference_hz: f64,
 }
@@ -75,6 +77,7 @@ impl Settings {
             mask_above_noise: None,
             fit_points_above_noise: None,
             spectral_index: 0.0,
+            frequency_terms: 1,
             reference_hz,
         }
     }

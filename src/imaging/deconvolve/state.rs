@@ -15,6 +15,9 @@ pub struct State {
     pixels: Vec<f64>,
     points: Vec<Component>,
     numerator: Vec<f64>,
+    /// Further terms of pixels, and their numerators.
+    terms: Vec<Vec<f64>>,
+    further: Vec<Vec<f64>>,
     grown: Vec<bool>,
     components: u64,
     cycles: Vec<MajorCycle>,
@@ -49,6 +52,10 @@ impl State {
     }
 }
 
+fn flat(images: &[Array2<f64>]) -> Vec<Vec<f64>> {
+    images.iter().map(|image| image.iter().copied().collect()).collect()
+}
+
 impl Run<'_> {
     /// The state now.
     pub(super) fn state(&self, pace: Pace) -> State {
@@ -57,6 +64,8 @@ impl Run<'_> {
             pixels: self.model.pixels.iter().copied().collect(),
             points: self.model.points.clone(),
             numerator: self.numerator.iter().copied().collect(),
+            terms: flat(&self.model.terms),
+            further: flat(&self.further),
             grown: self.grown.clone(),
             components: self.components,
             cycles: self.cycles.clone(),
@@ -75,8 +84,15 @@ impl Run<'_> {
         }
         let pixels = Array2::from_shape_vec(state.shape, state.pixels).ok()?;
         let numerator = Array2::from_shape_vec(state.shape, state.numerator).ok()?;
-        self.model = Model { pixels, points: state.points };
-        self.numerator = numerator;
+        let images = |all: Vec<Vec<f64>>| -> Option<Vec<Array2<f64>>> {
+            all.into_iter().map(|image| Array2::from_shape_vec(state.shape, image).ok()).collect()
+        };
+        let (terms, further) = (images(state.terms)?, images(state.further)?);
+        if [terms.len(), further.len()] != [self.further.len(); 2] {
+            return None;
+        }
+        self.model = Model { pixels, points: state.points, terms };
+        (self.numerator, self.further) = (numerator, further);
         self.grown = state.grown;
         self.components = state.components;
         self.cycles = state.cycles;
