@@ -266,3 +266,43 @@ fn frequency_terms_make_maps_of_the_spectrum() {
     assert!(index[[3, 3]].is_nan());
     assert!(folder.record()["limits"].to_string().contains("Spectral indices"), "{}", ended.out);
 }
+
+/// A bright source at the corner of four pixels is a little wide in the restored image, whose model has pixels only; the visibilities
+/// say that it is one point. Data without noise: places to 0.01 pixel, flux densities to 1e-3.
+#[test]
+fn a_bright_point_between_pixels_is_one_source() {
+    let invented = Invented { times: 12, ..Invented::default() };
+    let (observation, mut block) = invented.pointing("P", Direction::from_deg(AIM.0, AIM.1));
+    let sources = [(50.5, 45.5, 2.0), (63.3, 30.4, 0.9)];
+    let sky = sources.map(|(x, y, jy)| source(geometry().direction_of(x, y).unwrap(), jy));
+    invented.fill(&sky, &observation, &mut block);
+    let folder = Folder::new();
+    write_pointings(&folder.path("data.idifits"), &[(observation, block)]);
+    folder.run_file(&text(&format!("{TABLE}[measure]\nfind_above_noise = 5\n")));
+    folder.imaged(&[]);
+    let found = read_sources(&folder.out().join("sources.csv"));
+    assert_eq!(found.len(), 2, "{found:?}");
+    for ((x, y, jy), (place, flux)) in sources.iter().zip(&found) {
+        let (px, py) = geometry().pixel_of(*place).unwrap();
+        println!("({px:.4}, {py:.4}) {flux}");
+        assert!((px - x).hypot(py - y) <= 0.01 && (flux - jy).abs() <= 1e-3 * jy, "({px}, {py}) {flux}");
+    }
+}
+
+/// Places and flux densities of `sources.csv`, brightest first.
+fn read_sources(path: &Path) -> Vec<(Direction, f64)> {
+    let mut table = csv::Reader::from_path(path).unwrap();
+    let headers = table.headers().unwrap().clone();
+    let column = |name: &str| headers.iter().position(|h| h == name).unwrap();
+    let columns = ["ra_deg", "dec_deg", "flux_jy"].map(column);
+    let mut rows: Vec<(Direction, f64)> = table
+        .records()
+        .map(|row| {
+            let row = row.unwrap();
+            let [ra, dec, flux] = columns.map(|c| row[c].parse::<f64>().unwrap());
+            (Direction::from_deg(ra, dec), flux)
+        })
+        .collect();
+    rows.sort_by(|a, b| b.1.total_cmp(&a.1));
+    rows
+}

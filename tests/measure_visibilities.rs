@@ -278,6 +278,12 @@ fn a_pair_that_cannot_be_told_apart_is_named() {
         }
         other => panic!("{other}"),
     }
+    // and with slopes and places free, whose numbers come after those of the flux densities
+    let mut free = NormalEquations::new(sources.clone(), vec![9], vec![9, 24]);
+    for (exact, source) in &mut data {
+        free.add(exact, source, |_| {}).unwrap();
+    }
+    assert!(matches!(free.solve().unwrap_err(), MeasureError::Singular { first: 9, second: 24, .. }));
     let said = equations.solve().unwrap_err().to_string();
     assert!(said.contains("sources 9 and 24") && said.contains("0.010 arcsec"), "{said}");
     let fluxes = fitted(&mut data, &sources, options(0.3));

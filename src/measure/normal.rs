@@ -237,7 +237,8 @@ impl NormalEquations {
         self.matrix[(first, second)] / (self.matrix[(first, first)] * self.matrix[(second, second)]).sqrt()
     }
 
-    /// The two sources that carry most of the direction that the equations do not determine, when there is one.
+    /// The two sources that carry most of the direction that the equations do not determine, when there is one; one source
+    /// twice where it is its own unknowns that cannot be told apart.
     fn confused(&self, correlation: &DMatrix<f64>, used: &[usize]) -> Option<(usize, usize)> {
         if used.len() < 2 || correlation.iter().any(|c| !c.is_finite()) {
             return None;
@@ -249,19 +250,22 @@ impl NormalEquations {
         }
         let mut shares = vec![0.0; self.sources.len()];
         for (a, &unknown) in used.iter().enumerate() {
-            let source =
-                if unknown < self.sources.len() { unknown } else { self.slopes[unknown - self.sources.len()] };
-            shares[source] += eigen.eigenvectors[(a, at)].powi(2);
+            shares[self.source_of(unknown)] += eigen.eigenvectors[(a, at)].powi(2);
         }
         let mut order: Vec<usize> = (0..shares.len()).collect();
         order.sort_by(|&a, &b| shares[b].total_cmp(&shares[a]).then(a.cmp(&b)));
-        Some((order[0].min(order[1]), order[0].max(order[1])))
+        let first = order[0];
+        // flux density, slope and place of one source alone
+        let second = *order.get(1).filter(|&&second| shares[second] > ALONE).unwrap_or(&first);
+        Some((first.min(second), first.max(second)))
     }
 }
 
 /// Least eigenvalue of the normalised equations below which they count as singular: the errors of the sources concerned
 /// would be √(1/1e-6) = 1000 times that of either alone, and no flux density is published with those.
 const SINGULAR: f64 = 1e-6;
+/// A second source's share of an undetermined direction below which it has nothing to do with it.
+const ALONE: f64 = 0.01;
 
 /// Unknowns and covariance.
 #[derive(Debug, Clone)]
