@@ -58,6 +58,10 @@ fn record() -> RunRecord {
             bound: 2e-5,
             memory_bytes: 3_200_000,
             build_seconds: 0.84,
+            window: "kaiser-bessel".into(),
+            window_support: 7,
+            padding: 1.75,
+            aliasing: 1.2e-5,
         }),
         beam: Some(BeamFigures {
             major_arcsec: 151.0,

@@ -1,7 +1,7 @@
 //! What the run file refuses and how it says so, through the library; `command_line.rs` does the same through the
 //! program.
 
-use evensky::run::{Method, Problem, RunError, RunFile, Shape, Sources};
+use evensky::run::{GridWindow, Method, Problem, RunError, RunFile, Shape, Sources};
 use std::path::Path;
 
 const GOOD: &str = r#"title = "Two dishes"
@@ -125,6 +125,24 @@ fn a_simulation_can_stand_alone_or_beside_an_image() {
     assert_eq!(both.simulated_response_radius_deg(0), Some(3.0));
     assert_eq!(both.simulated_response_radius_deg(1), Some(1.5));
     assert!(both.image().is_ok());
+}
+
+#[test]
+fn windows_have_names() {
+    let parsed =
+        |name: &str| parse(&GOOD.replace("pixel_arcsec = 25", &format!("pixel_arcsec = 25\nwindow = {name}")));
+    for (name, window) in [
+        ("\"kaiser-bessel\"", GridWindow::KaiserBessel),
+        ("\"spheroidal\"", GridWindow::Spheroidal),
+        ("\"nearest\"", GridWindow::Nearest),
+    ] {
+        assert_eq!(parsed(name).unwrap().image().unwrap().window, window);
+    }
+    assert_eq!(parse(GOOD).unwrap().image().unwrap().window, GridWindow::default());
+    for bad in ["\"boxcar\"", "7"] {
+        let refused = parsed(bad).unwrap_err().to_string();
+        assert!(refused.contains("image.window: found") && refused.contains("\"spheroidal\""), "{refused}");
+    }
 }
 
 #[test]

@@ -18,7 +18,8 @@ use crate::report::{
 };
 use crate::response::Sums;
 use crate::response::gridded::Options;
-use crate::run::{Image, RunFile, Weighting, iso_utc};
+use crate::response::window::Kind;
+use crate::run::{GridWindow, Image, RunFile, Weighting, iso_utc};
 use crate::sky::{Direction, ImageGeometry};
 use clap::Args;
 use ndarray::Array2;
@@ -210,6 +211,12 @@ impl Making<'_> {
     fn images(&mut self, inputs: Vec<PointingInput>) -> Result<Images, CliError> {
         let geometry = self.settings.geometry;
         let tolerance = self.settings.tolerance.value;
+        let window = match self.settings.window {
+            GridWindow::KaiserBessel => Kind::KaiserBessel,
+            GridWindow::Spheroidal => Kind::Spheroidal,
+            GridWindow::Nearest => Kind::Nearest,
+        };
+        let options = Options { window, ..Options::default() };
         let mut mosaic = Mosaic::new(geometry);
         let mut names: Vec<(String, Direction, usize)> = Vec::new();
 
@@ -221,7 +228,7 @@ impl Making<'_> {
             band = band_of(observation, band);
             names.push((observation.name.clone(), beams.aim(), observation.stations.len()));
             self.notice_mounts(observation, &beams);
-            mosaic.add(source, beams, tolerance, Options::default(), |rows| stage.add(rows))?;
+            mosaic.add(source, beams, tolerance, options, |rows| stage.add(rows))?;
         }
         stage.finish();
         self.timed("building kernels", started);
@@ -280,6 +287,11 @@ impl Making<'_> {
         stage.finish();
         self.timed("checking against exact sums", started);
         if let Some(check) = check {
+            // the nearest cell is promised no more than it can keep
+            let tolerance = match &self.record.kernels {
+                Some(kernels) if kernels.window == Kind::Nearest.name() => tolerance + kernels.aliasing,
+                _ => tolerance,
+            };
             let accuracy = Accuracy::new(
                 tolerance,
                 check.numerator_error,
@@ -445,6 +457,21 @@ impl Making<'_> {
             kernels.bound = if kernels.bound == 0.0 { report.bound } else { kernels.bound.min(report.bound) };
             kernels.memory_bytes = kernels.memory_bytes.max(report.memory_bytes as u64);
             kernels.build_seconds += report.build_seconds;
+            if report.padding > 0.0 {
+                kernels.window = report.window.name().to_owned();
+                kernels.window_support = kernels.window_support.max(report.window_support as u64);
+                let padding = if kernels.padding == 0.0 { f64::INFINITY } else { kernels.padding };
+                kernels.padding = padding.min(report.padding);
+                kernels.aliasing = kernels.aliasing.max(report.window_error);
+            }
+        }
+        if kernels.window == Kind::Nearest.name() {
+            self.record.warnings.push(format!(
+                "window \"nearest\" does not keep the tolerance of {:e}: sources outside the image come through with up to {:.2} \
+                 of their strength, and the sums are promised no better than that. It is here for comparison, not for \
+                 measuring",
+                self.settings.tolerance.value, kernels.aliasing
+            ));
         }
         self.record.kernels = Some(kernels);
     }
@@ -482,6 +509,12 @@ impl Making<'_> {
             format!("pixels below {} of the largest response are blank", self.settings.lowest_response.value),
         ];
         lines.extend(record.weighting.iter().flat_map(WeightingFigures::history));
+        if let Some(kernels) = record.kernels.as_ref().filter(|kernels| kernels.padding > 0.0) {
+            lines.push(format!(
+                "gridding window {}, support in cells {}, padding {}, aliasing at most {:.1e}",
+                kernels.window, kernels.window_support, kernels.padding, kernels.aliasing
+            ));
+        }
         if let Some(a) = &record.accuracy {
             lines.push(format!(
                 "relative error of the sums: promised {:e}, measured {:.1e} (N) and {:.1e} (W) on {} pixels",

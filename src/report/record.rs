@@ -231,6 +231,18 @@ pub struct KernelFigures {
     pub memory_bytes: u64,
     /// Time to build them, seconds.
     pub build_seconds: f64,
+    /// Window that spreads visibilities on the grid.
+    #[serde(default)]
+    pub window: String,
+    /// Its support, cells; the widest of all pointings.
+    #[serde(default)]
+    pub window_support: u64,
+    /// Length of the transforms over that of the images, at least.
+    #[serde(default)]
+    pub padding: f64,
+    /// What the window lets through of a source outside the padded field, at most, relative to the source.
+    #[serde(default)]
+    pub aliasing: f64,
 }
 
 /// The fitted beam.

@@ -53,10 +53,25 @@ pub struct Image {
     pub geometry: ImageGeometry,
     /// Promised relative error of the gridded sums (L2 over the field).
     pub tolerance: At<f64>,
+    /// Window that spreads visibilities on the grid.
+    pub window: GridWindow,
     /// Pixels with sqrt(W / max W) below this are blank.
     pub lowest_response: At<f64>,
     /// Angle from each aim, degrees, beyond which every response is 0: part of the beams' definition.
     pub response_radius_deg: Option<At<f64>>,
+}
+
+/// Windows that spread visibilities on the grid.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Default, Serialize)]
+#[serde(rename_all = "kebab-case")]
+pub enum GridWindow {
+    /// Kaiser–Bessel.
+    #[default]
+    KaiserBessel,
+    /// Prolate spheroidal.
+    Spheroidal,
+    /// The nearest cell: a boxcar.
+    Nearest,
 }
 
 impl RunFile {
@@ -143,6 +158,18 @@ pub(super) fn read_image(section: &Section) -> Option<Image> {
         ),
         number(|t| (low..=high).contains(&t)),
     );
+    let window = section.or(
+        "window",
+        GridWindow::default(),
+        "\"kaiser-bessel\", \"spheroidal\" or \"nearest\" (which keeps no small tolerance)",
+        |value| match value {
+            DeValue::String(word) if word == "kaiser-bessel" => Some(GridWindow::KaiserBessel),
+            DeValue::String(word) if word == "spheroidal" => Some(GridWindow::Spheroidal),
+            DeValue::String(word) if word == "nearest" => Some(GridWindow::Nearest),
+            _ => None,
+        },
+    );
+    let window = window.value;
     let lowest_response = section.or(
         "lowest_response",
         DEFAULT_LOWEST_RESPONSE,
@@ -160,7 +187,7 @@ pub(super) fn read_image(section: &Section) -> Option<Image> {
     }
     match ImageGeometry::new(centre.value, width, height, (pixel.value / 3600.0).to_radians()) {
         Ok(geometry) => {
-            Some(Image { line: section.line, geometry, tolerance, lowest_response, response_radius_deg })
+            Some(Image { line: section.line, geometry, tolerance, window, lowest_response, response_radius_deg })
         }
         Err(error) => {
             let (at, key) = match error {

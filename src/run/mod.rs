@@ -47,7 +47,7 @@ pub use calendar::{fits_date, iso_utc, mjd_of_day};
 pub use deconvolution::{Deconvolution, DeconvolutionMethod, NoiseSource};
 pub use document::At;
 pub use error::{Complaint, Problem, RunError};
-pub use image::{Image, MOST_PIXELS, Pointing, Sources, TOLERANCES};
+pub use image::{GridWindow, Image, MOST_PIXELS, Pointing, Sources, TOLERANCES};
 pub use measure::{FitErrors, FluxesFrom, Measure, SourceShape};
 pub use simulate::{Method, Simulate, SimulatedPointing};
 pub use tables::{Circle, LayoutMount, LayoutStation, StationRow, StationTable};

@@ -6,7 +6,7 @@ use super::survey::Survey;
 use super::terms::{MOST_ESTIMATED, Terms};
 use super::transform::GridShape;
 use super::vector::LANES;
-use crate::response::window::{Choice, choose};
+use crate::response::window::{Choice, Kind, choose_kind};
 use std::collections::BTreeMap;
 use std::ops::Range;
 use std::sync::Mutex;
@@ -74,7 +74,8 @@ pub(super) struct Question<'a> {
     pub frequencies_hz: &'a [f64],
     /// Largest difference of kernels allowed.
     pub bound: f64,
-    /// Aliasing allowed on one axis.
+    /// Kind of window, and aliasing allowed on one axis.
+    pub window: Kind,
     pub window_error: f64,
     /// |u|, |v| at the longest baseline times the pixel.
     pub reach: (f64, f64),
@@ -126,7 +127,7 @@ fn range(hz: &[f64]) -> (f64, f64) {
 /// The cheapest way; `None` when no window is good enough. `family` is used as scratch.
 pub(super) fn cheapest(question: &Question, family: &mut Family) -> Option<Candidate> {
     let windows: Vec<(f64, Choice)> =
-        [1.5, 1.75, 2.0].into_iter().filter_map(|s| Some((s, window(question.window_error, s)?))).collect();
+        paddings(question.window).iter().filter_map(|&s| Some((s, window(question, s)?))).collect();
     let mut best: Option<Candidate> = None;
     let (low_hz, high_hz) = range(question.frequencies_hz);
     let width = (high_hz - low_hz) / (0.5 * (high_hz + low_hz));
@@ -233,12 +234,18 @@ fn estimate(question: &Question, family: &mut Family, by_class: bool, groups: us
         .collect()
 }
 
+/// Paddings that are tried. The nearest cell gains by the most.
+fn paddings(kind: Kind) -> &'static [f64] {
+    if kind == Kind::Nearest { &[2.0] } else { &[1.5, 1.75, 2.0] }
+}
+
 /// The window for an error and a padding; pointings ask for the same ones again and again.
-fn window(error: f64, oversampling: f64) -> Option<Choice> {
-    static KNOWN: Mutex<BTreeMap<(u64, u64), Option<Choice>>> = Mutex::new(BTreeMap::new());
-    let key = (error.to_bits(), oversampling.to_bits());
+fn window(question: &Question, oversampling: f64) -> Option<Choice> {
+    static KNOWN: Mutex<BTreeMap<(Kind, u64, u64), Option<Choice>>> = Mutex::new(BTreeMap::new());
+    let (kind, error) = (question.window, question.window_error);
+    let key = (kind, error.to_bits(), oversampling.to_bits());
     let mut known = KNOWN.lock().unwrap_or_else(std::sync::PoisonError::into_inner);
-    *known.entry(key).or_insert_with(|| choose(error, oversampling).ok())
+    *known.entry(key).or_insert_with(|| choose_kind(kind, error, oversampling).ok())
 }
 
 /// Runs of channels, as even as they go.

@@ -42,6 +42,7 @@ pub use transform::GridShape;
 pub use vector::Instructions;
 
 use super::rows::Intensity;
+use super::window::Kind;
 use super::{Response, ResponseError, Sums};
 use crate::beam::StationBeams;
 use crate::observation::{Block, BlockSource, Observation};
@@ -73,11 +74,19 @@ pub struct Options {
     pub grid_memory: usize,
     /// Double-precision grids whatever the tolerance.
     pub force_double: bool,
+    /// Kind of anti-alias window. With [`Kind::Nearest`] the tolerance is kept but for its aliasing, which is what it is:
+    /// [`KernelReport::window_error`].
+    pub window: Kind,
 }
 
 impl Default for Options {
     fn default() -> Self {
-        Options { instructions: Instructions::detect(), grid_memory: 3 << 30, force_double: false }
+        Options {
+            instructions: Instructions::detect(),
+            grid_memory: 3 << 30,
+            force_double: false,
+            window: Kind::default(),
+        }
     }
 }
 
@@ -142,8 +151,15 @@ impl Gridded {
             return Ok(nothing);
         }
         let frequencies_hz = &observation.frequencies_hz;
-        let mut plan =
-            Plan::make(Inputs { beams, intensity: &intensity, frequencies_hz, survey: &survey, patch, tolerance })?;
+        let mut plan = Plan::make(Inputs {
+            beams,
+            intensity: &intensity,
+            frequencies_hz,
+            survey: &survey,
+            patch,
+            tolerance,
+            window: options.window,
+        })?;
         plan.double |= options.force_double;
         let double = plan.double;
         let mut report = plan.report.clone();

@@ -13,7 +13,7 @@ use super::transform::GridShape;
 use crate::beam::StationBeams;
 use crate::response::ResponseError;
 use crate::response::rows::{Intensity, Seen, wavelengths_per_metre};
-use crate::response::window::Choice;
+use crate::response::window::{Choice, Kind};
 use serde::Serialize;
 use std::collections::HashMap;
 use std::f64::consts::TAU;
@@ -150,10 +150,14 @@ pub struct KernelReport {
     pub patch_px: (usize, usize),
     /// Lengths of the transforms.
     pub transform: (usize, usize),
+    /// Kind of window.
+    pub window: Kind,
     /// Support of the window, cells.
     pub window_support: usize,
-    /// Aliasing of the window, largest over the field.
+    /// Aliasing of the window: what gets through of a source outside the padded field, at most, over the field and both axes.
     pub window_error: f64,
+    /// Padding: transform over patch.
+    pub padding: f64,
     /// Whether grids are in double precision.
     pub double_precision: bool,
     /// Memory of screens and grids alive at once, bytes.
@@ -170,6 +174,7 @@ pub(crate) struct Inputs<'a> {
     pub survey: &'a Survey,
     pub patch: Patch,
     pub tolerance: f64,
+    pub window: Kind,
 }
 
 /// The patch level: beam products beyond the edge stay below this.
@@ -180,7 +185,7 @@ pub(crate) fn edge_level(tolerance: f64) -> f64 {
 impl Plan {
     pub(crate) fn make(inputs: Inputs) -> Result<Plan, ResponseError> {
         let started = Instant::now();
-        let Inputs { beams, intensity, frequencies_hz, survey, patch, tolerance } = inputs;
+        let Inputs { beams, intensity, frequencies_hz, survey, patch, tolerance, window: kind } = inputs;
         let angles: Vec<Vec<f64>> = survey.times.iter().map(|&t| beams.angles_at(t)).collect();
         let (middle_bend, half_bend) = bend_range(&patch);
         let (lowest, highest) =
@@ -213,6 +218,7 @@ impl Plan {
             classes: &classes,
             frequencies_hz,
             bound,
+            window: kind,
             window_error: 0.5 * share::WINDOW * tolerance,
             reach,
             patch_size: patch.size,
@@ -225,7 +231,10 @@ impl Plan {
         let refuse =
             |reason: String, reachable: f64| ResponseError::Tolerance { asked: tolerance, reachable, reason };
         let chosen = chosen.ok_or_else(|| {
-            refuse("no anti-alias window of 16 cells or fewer is good enough".to_owned(), SMALLEST_TOLERANCE)
+            refuse(
+                format!("no {} window of 16 cells or fewer aliases little enough", kind.name()),
+                SMALLEST_TOLERANCE,
+            )
         })?;
         let window = chosen.window;
         let shape = GridShape::new(patch.size, chosen.oversampling, reach, window.support);
@@ -293,6 +302,8 @@ impl Plan {
         report.distinct_kernels = report.terms.iter().sum::<usize>() * layers.count;
         report.patch_px = patch.size;
         report.transform = shape.fft;
+        report.window = window.kind;
+        report.padding = chosen.oversampling;
         report.window_support = window.support;
         report.window_error = window.aliasing.both_axes();
         report.double_precision = double;

@@ -1,8 +1,9 @@
-//! How much a window aliases, and which Kaiser–Bessel window aliases little enough.
+//! How much a window aliases, and which window of a kind aliases little enough.
 
 use super::kaiser_bessel::check_oversampling;
-use super::{KaiserBessel, MAX_TAPS, Window, WindowError};
+use super::{KaiserBessel, MAX_TAPS, Nearest, Spheroidal, Window, WindowError};
 use num_complex::Complex64;
+use serde::Serialize;
 use std::f64::consts::{PI, TAU};
 
 /// Aliasing of a window on one axis over the field used, |x| ≤ 1/(2σ), relative to the response at the same place.
@@ -58,13 +59,39 @@ pub fn aliasing(window: &dyn Window, oversampling: f64) -> Result<Aliasing, Wind
     Ok(Aliasing { worst, rms })
 }
 
-/// A Kaiser–Bessel window and what it reaches.
+/// Kinds of windows.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, PartialOrd, Ord, Hash, Default, Serialize)]
+#[serde(rename_all = "kebab-case")]
+pub enum Kind {
+    /// Kaiser–Bessel: as narrow as any for a given aliasing on a padded field.
+    #[default]
+    KaiserBessel,
+    /// Prolate spheroidal functions.
+    Spheroidal,
+    /// The nearest cell only.
+    Nearest,
+}
+
+impl Kind {
+    /// The name in run files and records.
+    pub fn name(self) -> &'static str {
+        match self {
+            Kind::KaiserBessel => "kaiser-bessel",
+            Kind::Spheroidal => "spheroidal",
+            Kind::Nearest => "nearest",
+        }
+    }
+}
+
+/// A window and what it reaches.
 #[derive(Debug, Clone, Copy, PartialEq)]
 pub struct Choice {
+    /// Its kind.
+    pub kind: Kind,
     /// Support W in cells.
     pub support: usize,
-    /// Shape parameter of the Kaiser–Bessel window.
-    pub beta: f64,
+    /// Shape: β of a Kaiser–Bessel window, the weighting exponent of a spheroidal one, 0 for the nearest cell.
+    pub shape: f64,
     /// Aliasing on one axis.
     pub aliasing: Aliasing,
 }
@@ -74,8 +101,12 @@ impl Choice {
     ///
     /// # Errors
     /// Never for a choice made here; for one made by hand as [`KaiserBessel::new`].
-    pub fn window(&self) -> Result<KaiserBessel, WindowError> {
-        KaiserBessel::new(self.support, self.beta)
+    pub fn window(&self) -> Result<Box<dyn Window>, WindowError> {
+        Ok(match self.kind {
+            Kind::KaiserBessel => Box::new(KaiserBessel::new(self.support, self.shape)?),
+            Kind::Spheroidal => Box::new(Spheroidal::new(self.support, self.shape as u32)?),
+            Kind::Nearest => Box::new(Nearest),
+        })
     }
 }
 
@@ -111,7 +142,8 @@ pub fn best_kaiser_bessel(support: usize, oversampling: f64) -> Result<Choice, W
             }
         }
     }
-    Ok(Choice { support, beta, aliasing: aliasing(&KaiserBessel::new(support, beta)?, oversampling)? })
+    let aliasing = aliasing(&KaiserBessel::new(support, beta)?, oversampling)?;
+    Ok(Choice { kind: Kind::KaiserBessel, support, shape: beta, aliasing })
 }
 
 /// The narrowest Kaiser–Bessel window whose worst-case aliasing on one axis is at most `tolerance`, with padding
@@ -139,6 +171,32 @@ pub fn choose(tolerance: f64, oversampling: f64) -> Result<Choice, WindowError> 
         reachable = reachable.min(choice.aliasing.worst);
     }
     Err(WindowError::Unreachable { asked: tolerance, oversampling, reachable })
+}
+
+/// As [`choose`], among the windows of a kind. The nearest cell has nothing to choose: it is given with what it reaches, whatever
+/// was asked for.
+///
+/// # Errors
+/// As [`choose`].
+pub fn choose_kind(kind: Kind, tolerance: f64, oversampling: f64) -> Result<Choice, WindowError> {
+    match kind {
+        Kind::KaiserBessel => choose(tolerance, oversampling),
+        Kind::Nearest => Ok(Choice { kind, support: 1, shape: 0.0, aliasing: aliasing(&Nearest, oversampling)? }),
+        Kind::Spheroidal => {
+            WindowError::unless(tolerance > 0.0, "tolerance", tolerance, "a positive relative error")?;
+            let mut reachable = f64::INFINITY;
+            for support in 2..=MAX_TAPS {
+                for alpha in 0..=1 {
+                    let aliasing = aliasing(&Spheroidal::new(support, alpha)?, oversampling)?;
+                    if aliasing.worst <= tolerance {
+                        return Ok(Choice { kind, support, shape: f64::from(alpha), aliasing });
+                    }
+                    reachable = reachable.min(aliasing.worst);
+                }
+            }
+            Err(WindowError::Unreachable { asked: tolerance, oversampling, reachable })
+        }
+    }
 }
 
 #[cfg(test)]
@@ -211,6 +269,22 @@ mod tests {
                 assert!(choice.support == 1 || narrower.aliasing.worst > tolerance);
             }
         }
+    }
+
+    #[test]
+    fn windows_of_every_kind_keep_the_tolerance_or_say_so() {
+        for oversampling in [1.5, 2.0] {
+            for tolerance in [1e-2, 1e-4, 1e-6] {
+                let choice = choose_kind(Kind::Spheroidal, tolerance, oversampling).unwrap();
+                let window = choice.window().unwrap();
+                assert!(aliasing(window.as_ref(), oversampling).unwrap().worst <= tolerance);
+                assert_eq!((window.support(), choice.kind), (choice.support, Kind::Spheroidal));
+            }
+        }
+        assert!(matches!(choose_kind(Kind::Spheroidal, 1e-14, 1.5), Err(WindowError::Unreachable { .. })));
+        let nearest = choose_kind(Kind::Nearest, 1e-4, 2.0).unwrap();
+        assert_eq!((nearest.support, nearest.window().unwrap().support()), (1, 1));
+        assert!(nearest.aliasing.worst > 0.1, "the nearest cell does not keep 1e-4, and does not claim to");
     }
 
     #[test]

@@ -17,7 +17,7 @@ mod polynomial;
 mod spheroidal;
 
 pub use bessel::i0_scaled;
-pub use choose::{Aliasing, Choice, aliasing, best_kaiser_bessel, choose};
+pub use choose::{Aliasing, Choice, Kind, aliasing, best_kaiser_bessel, choose, choose_kind};
 pub use kaiser_bessel::KaiserBessel;
 pub use nearest::Nearest;
 pub use polynomial::{MAX_TAPS, PolynomialWindow, Real, locate};

@@ -25,7 +25,7 @@ use crate::beam::StationBeams;
 use crate::observation::{BlockSource, Observation};
 use crate::response::ResponseError;
 use crate::response::rows::{Intensity, Recentre, wavelengths_per_metre};
-use crate::response::window::{PolynomialWindow, Window};
+use crate::response::window::PolynomialWindow;
 use ndarray::LinalgScalar;
 use rayon::prelude::*;
 
@@ -123,7 +123,8 @@ impl<T: GridReal + LinalgScalar> Engine<T> {
         let centre_declination = plan.patch.centre_declination();
         let window = plan.window.window().map_err(refuse)?;
         let rounding = if plan.double { 1e-13 } else { 3e-7 };
-        let polynomial = PolynomialWindow::new(&window, (0.02 * tolerance).max(rounding)).map_err(refuse)?;
+        let polynomial =
+            PolynomialWindow::new(window.as_ref(), (0.02 * tolerance).max(rounding)).map_err(refuse)?;
         let taper = |size: usize, n: usize| -> Vec<f64> {
             let first = Patch::span(size).0;
             (0..size).map(|i| 1.0 / window.transform((i as f64 + first) / n as f64)).collect()
