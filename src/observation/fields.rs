@@ -57,6 +57,23 @@ impl Quantity {
         self
     }
 
+    /// Its values in rows of equal length, all at once; false, and `out` is to be thrown away, where it is not of single-precision
+    /// numbers in every row.
+    pub fn column(&self, rows: &[u8], row_bytes: usize, out: &mut Vec<f64>) -> bool {
+        out.clear();
+        out.resize(rows.len() / row_bytes.max(1), self.constant);
+        for &(offset, kind, scale) in &self.fields {
+            if kind != NumberKind::F32 || offset + 4 > row_bytes {
+                return false;
+            }
+            for (sum, row) in out.iter_mut().zip(rows.chunks_exact(row_bytes)) {
+                let bytes = [row[offset], row[offset + 1], row[offset + 2], row[offset + 3]];
+                *sum += scale * f64::from(f32::from_be_bytes(bytes));
+            }
+        }
+        true
+    }
+
     /// Its value in a row.
     #[inline]
     pub fn value(&self, row: &[u8]) -> f64 {

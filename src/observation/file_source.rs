@@ -105,8 +105,17 @@ struct Decoder {
     raw: Vec<u8>,
     scratch: Box<Scratch>,
     part: Block,
+    columns: Columns,
     skipped: Skipped,
     failed: Option<ObservationError>,
+}
+
+/// Quantities of many rows.
+#[derive(Debug, Default)]
+struct Columns {
+    uvw: [Vec<f64>; 3],
+    mjd: Vec<f64>,
+    baseline: Vec<f64>,
 }
 
 /// What decoding looks up and does not change.
@@ -195,10 +204,15 @@ impl FileSource {
             let lookup = Lookup { shared: &shared, segment, key: self.key, uvw_scale: self.uvw_scale, lone_source };
             self.decoders.resize_with(self.decoders.len().max(chunks as usize), Decoder::default);
             let decoders = &mut self.decoders[..chunks as usize];
+            // the first goes on with the block itself: its rows are not copied again
+            let (channels, hands) = (block.channels, block.hands);
+            decoders.iter_mut().for_each(|decoder| decoder.part.clear(channels, hands));
+            std::mem::swap(&mut decoders[0].part, block);
             decoders.par_iter_mut().enumerate().for_each(|(chunk, decoder)| {
                 let from = first + chunk as u64 * per_chunk;
-                decoder.decode(lookup, (from, (from + per_chunk).min(first + rows)), block.channels, block.hands);
+                decoder.decode(lookup, (from, (from + per_chunk).min(first + rows)));
             });
+            std::mem::swap(&mut decoders[0].part, block);
             for decoder in decoders {
                 if let Some(error) = decoder.failed.take() {
                     return Err(error);
@@ -249,22 +263,80 @@ impl FileSource {
 }
 
 impl Decoder {
-    /// Decodes rows `first..end` into `part`, up to the first that is wrong.
-    fn decode(&mut self, lookup: Lookup, (first, end): (u64, u64), channels: usize, hands: usize) {
+    /// Adds rows `first..end` to `part`, up to the first that is wrong.
+    fn decode(&mut self, lookup: Lookup, (first, end): (u64, u64)) {
         let row_bytes = lookup.segment.row_bytes;
         let rows = (end - first) as usize;
         let mut part = std::mem::take(&mut self.part);
-        part.clear(channels, hands);
         let mut raw = std::mem::take(&mut self.raw);
         raw.resize(rows * row_bytes, 0);
         let start = lookup.segment.start + first * row_bytes as u64;
         let decoded = lookup.shared.file.read_at(start, &mut raw).map_err(Into::into).and_then(|()| {
+            if self.take_plain(lookup, &raw, &mut part) {
+                return Ok(());
+            }
             let mut numbered = raw.chunks_exact(row_bytes).zip(first..);
             numbered.try_for_each(|(bytes, row)| self.take_row(lookup, row, bytes, &mut part))
         });
         self.failed = decoded.err();
         self.raw = raw;
         self.part = part;
+    }
+
+    /// Decodes all rows together where nothing is the matter with any: one pointing and set-up, single precision, short rows, known
+    /// stations in their order, dates and coordinates as they should be. False, and nothing is done, where something is.
+    fn take_plain(&mut self, lookup: Lookup, rows: &[u8], block: &mut Block) -> bool {
+        let Lookup { shared, segment, key, uvw_scale, lone_source } = lookup;
+        let Segment { row_bytes, uvw, pair: Pair::Baseline(baseline), subarray: None, mjd, matrix, .. } = segment
+        else {
+            return false;
+        };
+        if key.source.is_some()
+            || key.set_up.is_some()
+            || lone_source.is_some()
+            || shared.stations.array_count() > 1
+            || rows.len() < *row_bytes
+        {
+            return false;
+        }
+        let columns = &mut self.columns;
+        // stored for first minus second station, in light travel time: ours is r_second − r_first, in metres
+        let to_metres = -SPEED_OF_LIGHT * uvw_scale;
+        let mut known = mjd.column(rows, *row_bytes, &mut columns.mjd)
+            && baseline.column(rows, *row_bytes, &mut columns.baseline);
+        for (quantity, column) in uvw.iter().zip(&mut columns.uvw) {
+            known = known && quantity.column(rows, *row_bytes, column);
+            column.iter_mut().for_each(|value| *value *= to_metres);
+        }
+        if !known {
+            return false;
+        }
+        let finite = |column: &Vec<f64>| column.iter().fold(0.0, |sum, v| sum + 0.0 * v) == 0.0;
+        let plausible = columns.mjd.iter().fold(true, |all, mjd| all & PLAUSIBLE_MJD.contains(mjd));
+        if !plausible || !columns.uvw.iter().all(finite) {
+            return false;
+        }
+        let before = block.first.len();
+        for &baseline in &columns.baseline {
+            let pair = pair_of(baseline).map(|pair| pair.map(|number| shared.stations.index(1, number)));
+            match pair {
+                Some([Some(first), Some(second)]) if first < second => {
+                    block.first.push(first);
+                    block.second.push(second);
+                }
+                _ => break,
+            }
+        }
+        let sound = block.first.len() - before == columns.baseline.len();
+        if !sound || !matrix.append_rows(rows, *row_bytes, &mut block.data, &mut block.weight) {
+            block.first.truncate(before);
+            block.second.truncate(before);
+            return false;
+        }
+        block.mjd_utc.extend_from_slice(&columns.mjd);
+        let [u, v, w] = &columns.uvw;
+        block.uvw_m.extend(u.iter().zip(v).zip(w).map(|((u, v), w)| [*u, *v, *w]));
+        true
     }
 
     fn take_row(
@@ -343,6 +415,18 @@ impl Skipped {
     }
 }
 
+/// The two station numbers in a baseline number without its fraction; `None` where it is none.
+#[inline]
+fn pair_of(baseline: f64) -> Option<[f64; 2]> {
+    if !(0.0..9e15).contains(&baseline) {
+        return None;
+    }
+    // Whole numbers from here on: a call of floor() for each was the slowest part of a short row.
+    let whole = (baseline + 1e-4) as u64;
+    let (base, step) = if whole >= 65_536 { (65_536, 2048) } else { (0, 256) };
+    Some([((whole - base) / step) as f64, ((whole - base) % step) as f64])
+}
+
 /// Array number and the two station numbers of a row.
 fn station_numbers(segment: &Segment, row: &[u8], several_arrays: bool) -> (i64, [f64; 2]) {
     let stated = segment.subarray.as_ref().map(|q| q.value(row).round() as i64);
@@ -350,16 +434,11 @@ fn station_numbers(segment: &Segment, row: &[u8], several_arrays: bool) -> (i64,
         Pair::Two(first, second) => (stated.unwrap_or(1), [first.value(row), second.value(row)]),
         Pair::Baseline(baseline) => {
             let baseline = baseline.value(row);
-            if !(0.0..9e15).contains(&baseline) {
-                return (1, [baseline, f64::NAN]);
-            }
-            // Whole numbers from here on: a call of floor() for each was the slowest part of a short row.
-            let whole = (baseline + 1e-4) as u64;
+            let Some(numbers) = pair_of(baseline) else { return (1, [baseline, f64::NAN]) };
             // The fraction is (array − 1)/100; a large f32 has no room for it, so it is looked at only when needed.
-            let array = if several_arrays { 1 + ((baseline - whole as f64) * 100.0).round() as i64 } else { 1 };
-            let (base, step) = if whole >= 65_536 { (65_536, 2048) } else { (0, 256) };
-            let (first, second) = ((whole - base) / step, (whole - base) % step);
-            (stated.unwrap_or(array), [first as f64, second as f64])
+            let whole = ((baseline + 1e-4) as u64) as f64;
+            let array = if several_arrays { 1 + ((baseline - whole) * 100.0).round() as i64 } else { 1 };
+            (stated.unwrap_or(array), numbers)
         }
     }
 }

@@ -237,6 +237,49 @@ impl Matrix {
         self.swapped.is_some()
     }
 
+    /// Appends the visibilities and weights of many short rows, as [`append`](Self::append) does of one; false, and nothing is
+    /// done, where rows are long or numbers are not plain single-precision ones in our order.
+    pub fn append_rows(
+        &self,
+        rows: &[u8],
+        row_bytes: usize,
+        data: &mut Vec<Complex32>,
+        weight: &mut Vec<f32>,
+    ) -> bool {
+        let plain = self.kind == NumberKind::F32 && self.scale == 1.0 && self.zero == 0.0;
+        let short = self.cells() <= BATCH && self.end() <= row_bytes;
+        if !plain || !short || self.order.is_some() || self.weights.is_some() {
+            return false;
+        }
+        match self.planes {
+            2 => self.append_short::<8>(rows, row_bytes, data, weight),
+            _ => self.append_short::<12>(rows, row_bytes, data, weight),
+        }
+        true
+    }
+
+    fn append_short<const N: usize>(
+        &self,
+        rows: &[u8],
+        row_bytes: usize,
+        data: &mut Vec<Complex32>,
+        weight: &mut Vec<f32>,
+    ) {
+        let cells = self.cells();
+        let (start, count) = (weight.len(), rows.len() / row_bytes * cells);
+        data.resize(start + count, Complex32::ZERO);
+        weight.resize(start + count, 0.0);
+        let out = data[start..].chunks_exact_mut(cells).zip(weight[start..].chunks_exact_mut(cells));
+        for (row, (values, weights)) in rows.chunks_exact(row_bytes).zip(out) {
+            let row = row[self.offset..self.offset + cells * N].as_chunks::<N>().0;
+            for (cell, (value, weight)) in row.iter().zip(values.iter_mut().zip(weights)) {
+                let word = |at: usize| u32::from_be_bytes([cell[at], cell[at + 1], cell[at + 2], cell[at + 3]]);
+                let stated = if N == 12 { word(8) } else { 1.0f32.to_bits() };
+                (*value, *weight) = checked(word(0), word(4), stated);
+            }
+        }
+    }
+
     /// Appends the visibilities and weights of a row of the file. Weights that are not positive and finite, and those
     /// of data that are not finite, become 0; data that are not finite become 0 too, so that no sum meets a NaN.
     pub fn append(&self, row: &[u8], scratch: &mut Scratch, data: &mut Vec<Complex32>, weight: &mut Vec<f32>) {
