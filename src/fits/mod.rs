@@ -21,6 +21,7 @@
 
 mod big_endian;
 mod card;
+mod celestial;
 mod error;
 mod file;
 mod groups;
@@ -32,6 +33,7 @@ mod write;
 
 pub use big_endian::{Element, NumberKind};
 pub use card::Value;
+pub use celestial::{CelestialAxes, celestial_axes};
 pub use error::{FitsError, FitsProblem};
 pub use file::{FitsFile, Hdu, HduKind};
 pub use groups::{GroupParameter, Groups};

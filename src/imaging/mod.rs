@@ -1,6 +1,7 @@
 //! From the sums of all pointings to images: flat sky, weight map, point spread function, and the check of their sums.
 
 pub mod beam_fit;
+pub mod combine;
 pub mod deconvolve;
 mod flat;
 mod mosaic;

@@ -137,17 +137,7 @@ fn sources(value: &DeValue) -> Option<Sources> {
 }
 
 pub(super) fn read_image(section: &Section) -> Option<Image> {
-    let centre = section.required("centre_deg", DIRECTION, direction);
-    let size = section.required(
-        "size_px",
-        "[width, height]: two whole numbers of pixels, each at least 1",
-        pair(count(1, u32::MAX as usize)),
-    );
-    let pixel = section.required(
-        "pixel_arcsec",
-        "the side of a pixel in arcseconds, greater than 0",
-        number(|arcsec| arcsec > 0.0),
-    );
+    let grid = read_grid(section);
     let (low, high) = TOLERANCES;
     let tolerance = section.or(
         "tolerance",
@@ -178,6 +168,23 @@ pub(super) fn read_image(section: &Section) -> Option<Image> {
     );
     let response_radius_deg = response_radius(section);
     section.finish();
+    let geometry = grid?;
+    Some(Image { line: section.line, geometry, tolerance, window, lowest_response, response_radius_deg })
+}
+
+/// The pixel grid that `centre_deg`, `size_px` and `pixel_arcsec` describe.
+pub(super) fn read_grid(section: &Section) -> Option<ImageGeometry> {
+    let centre = section.required("centre_deg", DIRECTION, direction);
+    let size = section.required(
+        "size_px",
+        "[width, height]: two whole numbers of pixels, each at least 1",
+        pair(count(1, u32::MAX as usize)),
+    );
+    let pixel = section.required(
+        "pixel_arcsec",
+        "the side of a pixel in arcseconds, greater than 0",
+        number(|arcsec| arcsec > 0.0),
+    );
     let (centre, size, pixel) = (centre?, size?, pixel?);
     let [width, height] = size.value;
     if width.checked_mul(height).is_none_or(|pixels| pixels > MOST_PIXELS) {
@@ -186,9 +193,7 @@ pub(super) fn read_image(section: &Section) -> Option<Image> {
         return None;
     }
     match ImageGeometry::new(centre.value, width, height, (pixel.value / 3600.0).to_radians()) {
-        Ok(geometry) => {
-            Some(Image { line: section.line, geometry, tolerance, window, lowest_response, response_radius_deg })
-        }
+        Ok(geometry) => Some(geometry),
         Err(error) => {
             let (at, key) = match error {
                 GeometryError::BadPixel { .. } => (pixel.line, "pixel_arcsec"),

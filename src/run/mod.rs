@@ -33,6 +33,7 @@
 
 mod beams;
 mod calendar;
+mod combine;
 mod deconvolution;
 mod document;
 mod error;
@@ -44,6 +45,7 @@ mod weighting;
 
 pub use beams::{Beam, SHAPES, Shape, StationRule, StationSettings};
 pub use calendar::{fits_date, iso_utc, mjd_of_day};
+pub use combine::{Depth, FieldEntry, FieldsFile};
 pub use deconvolution::{Deconvolution, DeconvolutionMethod, NoiseSource};
 pub use document::At;
 pub use error::{Complaint, Problem, RunError};
@@ -91,12 +93,7 @@ impl RunFile {
     /// # Errors
     /// [`RunError`] with everything that is wrong.
     pub fn read(path: &Path) -> Result<RunFile, RunError> {
-        let bytes = std::fs::read(path).map_err(|source| RunError::Read { path: path.to_owned(), source })?;
-        let text = std::str::from_utf8(&bytes).map_err(|error| RunError::NotText {
-            path: path.to_owned(),
-            line: 1 + bytes[..error.valid_up_to()].iter().filter(|&&b| b == b'\n').count(),
-        })?;
-        RunFile::parse(path, text)
+        RunFile::parse(path, &read_text(path)?)
     }
 
     /// Checks the text of a run file that is, or could be, at `path`.
@@ -176,6 +173,16 @@ impl RunFile {
             .collect();
         if complaints.is_empty() { Ok(()) } else { Err(RunError::Complaints(complaints)) }
     }
+}
+
+/// The text of a run file.
+fn read_text(path: &Path) -> Result<String, RunError> {
+    let bytes = std::fs::read(path).map_err(|source| RunError::Read { path: path.to_owned(), source })?;
+    String::from_utf8(bytes).map_err(|error| {
+        let valid = error.utf8_error().valid_up_to();
+        let line = 1 + error.as_bytes()[..valid].iter().filter(|&&b| b == b'\n').count();
+        RunError::NotText { path: path.to_owned(), line }
+    })
 }
 
 /// Why a file cannot be read, as far as that shows without opening it.
