@@ -104,20 +104,20 @@ pub fn run(arguments: &Arguments, common: &Common) -> Result<String, CliError> {
 }
 
 /// The run file's name, where it has no title.
-fn stem(path: &Path) -> String {
+pub(super) fn stem(path: &Path) -> String {
     path.file_stem().unwrap_or(path.as_os_str()).to_string_lossy().into_owned()
 }
 
-fn told(error: impl std::error::Error + Send + Sync + 'static) -> CliError {
+pub(super) fn told(error: impl std::error::Error + Send + Sync + 'static) -> CliError {
     CliError::Command(Box::new(error))
 }
 
-fn product(path: &str, what: &str) -> Product {
+pub(super) fn product(path: &str, what: &str) -> Product {
     Product { path: path.to_owned(), what: what.to_owned() }
 }
 
 /// Moves the finished products to their places.
-fn hand_over(from: &Path, to: &Path, products: &[Product]) -> Result<(), CliError> {
+pub(super) fn hand_over(from: &Path, to: &Path, products: &[Product]) -> Result<(), CliError> {
     for Product { path, .. } in products {
         let place = to.join(path);
         std::fs::rename(from.join(path), &place)
@@ -127,7 +127,7 @@ fn hand_over(from: &Path, to: &Path, products: &[Product]) -> Result<(), CliErro
 }
 
 /// Finds out before the long work that the folder takes files.
-fn check_writable(folder: &Path) -> Result<(), CliError> {
+pub(super) fn check_writable(folder: &Path) -> Result<(), CliError> {
     tempfile::Builder::new()
         .prefix(".evensky-")
         .tempfile_in(folder)
@@ -135,7 +135,7 @@ fn check_writable(folder: &Path) -> Result<(), CliError> {
         .map_err(|source| CliError::Folder { path: folder.to_owned(), source })
 }
 
-fn now_utc() -> String {
+pub(super) fn now_utc() -> String {
     let seconds = SystemTime::now().duration_since(UNIX_EPOCH).map_or(0.0, |d| d.as_secs_f64());
     iso_utc(40_587.0 + seconds / 86_400.0).unwrap_or_default()
 }
@@ -158,9 +158,9 @@ fn checksums(run: &RunFile) -> Result<Vec<InputFile>, CliError> {
 /// An input that could not be read to the end.
 #[derive(Debug, thiserror::Error)]
 #[error("{}: cannot be read ({source}); expected a readable file", path.display())]
-struct Unreadable {
-    path: PathBuf,
-    source: std::io::Error,
+pub(super) struct Unreadable {
+    pub(super) path: PathBuf,
+    pub(super) source: std::io::Error,
 }
 
 fn station_groups(inputs: &[PointingInput]) -> Vec<StationGroup> {

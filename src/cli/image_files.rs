@@ -25,6 +25,7 @@ pub(super) struct Images {
 }
 
 /// What was written.
+#[derive(Default)]
 pub(super) struct Written {
     pub products: Vec<Product>,
     pub pictures: Vec<PagePicture>,
@@ -95,35 +96,10 @@ impl Images {
                 beam: self.header.beam,
             },
         ];
-        let mut written = Written { products: Vec::new(), pictures: Vec::new() };
+        let mut written = Written::default();
         let deconvolved = self.deconvolved.iter().flat_map(Deconvolved::sheets);
         for sheet in deconvolved.chain(dirty) {
-            let about = ProductHeader {
-                bunit: sheet.bunit.to_owned(),
-                description: sheet.what.to_owned(),
-                beam: sheet.beam,
-                ..self.header.clone()
-            };
-            let file = format!("{}.fits", sheet.name);
-            write_image_product(&folder.join(&file), sheet.image.view(), &self.geometry, &about)?;
-            written.products.push(Product { path: file, what: sheet.what.to_owned() });
-            let spec = PictureSpec {
-                title: &self.header.object,
-                quantity: sheet.quantity,
-                unit: sheet.unit,
-                geometry: self.geometry,
-                beam: sheet.beam,
-                scale: None,
-            };
-            let canvas = paint(sheet.image.view(), &spec)?;
-            let file = format!("{}.png", sheet.name);
-            write_picture(&folder.join(&file), &canvas)?;
-            written.products.push(Product { path: file, what: format!("picture of {}.fits", sheet.name) });
-            written.pictures.push(PagePicture {
-                title: sheet.quantity.to_owned(),
-                caption: sheet.caption.to_owned(),
-                png: canvas.png()?,
-            });
+            write_sheet(&sheet, &self.geometry, &self.header, folder, &mut written)?;
         }
         if let Some(deconvolved) = &self.deconvolved {
             let file = "components.csv";
@@ -133,4 +109,41 @@ impl Images {
         }
         Ok(written)
     }
+}
+
+/// Writes one image as FITS and as a picture, and notes both.
+pub(super) fn write_sheet(
+    sheet: &Sheet,
+    geometry: &ImageGeometry,
+    header: &ProductHeader,
+    folder: &Path,
+    written: &mut Written,
+) -> Result<(), FilesError> {
+    let about = ProductHeader {
+        bunit: sheet.bunit.to_owned(),
+        description: sheet.what.to_owned(),
+        beam: sheet.beam,
+        ..header.clone()
+    };
+    let file = format!("{}.fits", sheet.name);
+    write_image_product(&folder.join(&file), sheet.image.view(), geometry, &about)?;
+    written.products.push(Product { path: file, what: sheet.what.to_owned() });
+    let spec = PictureSpec {
+        title: &header.object,
+        quantity: sheet.quantity,
+        unit: sheet.unit,
+        geometry: *geometry,
+        beam: sheet.beam,
+        scale: None,
+    };
+    let canvas = paint(sheet.image.view(), &spec)?;
+    let file = format!("{}.png", sheet.name);
+    write_picture(&folder.join(&file), &canvas)?;
+    written.products.push(Product { path: file, what: format!("picture of {}.fits", sheet.name) });
+    written.pictures.push(PagePicture {
+        title: sheet.quantity.to_owned(),
+        caption: sheet.caption.to_owned(),
+        png: canvas.png()?,
+    });
+    Ok(())
 }

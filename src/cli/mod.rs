@@ -9,6 +9,7 @@
 //!
 //! Products and conclusions go to files and standard output; progress, warnings and reasons to standard error.
 
+pub mod combine;
 pub mod describe;
 pub mod image;
 mod image_deconvolve;
@@ -47,6 +48,8 @@ pub struct Cli {
 enum Command {
     /// Make the mosaic a run file describes: image, weight map, point spread function, report of accuracy
     Image(image::Arguments),
+    /// Combine already-made images of single fields into one mosaic, with its weight map
+    Combine(combine::Arguments),
     /// Make the invented observation a run file describes, and write it as a visibility file
     Simulate(simulate::Arguments),
     /// Say what visibility files hold: pointings, stations, channels, baselines, a fitting pixel and image size
@@ -189,6 +192,7 @@ impl Cli {
         }
         match &self.command {
             Command::Image(arguments) => image::run(arguments, &self.common),
+            Command::Combine(arguments) => combine::run(arguments, &self.common),
             Command::Simulate(arguments) => simulate::run(arguments, &self.common),
             Command::Describe(arguments) => describe::run(arguments, &self.common),
         }
@@ -238,7 +242,7 @@ mod tests {
             }
         }
         let names: Vec<&str> = root.get_subcommands().map(clap::Command::get_name).collect();
-        assert_eq!(names, ["image", "simulate", "describe", "help"]);
+        assert_eq!(names, ["image", "combine", "simulate", "describe", "help"]);
         assert!(seen >= 4 * 5, "only {seen} arguments seen: common flags are missing somewhere");
     }
 

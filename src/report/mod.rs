@@ -4,6 +4,7 @@
 //! Nothing here computes a result; it shows what [`RunRecord`] and the images hold. Every file appears whole or not
 //! at all ([`write_whole`]).
 
+mod combined;
 mod deconvolution;
 mod measured;
 mod page;
@@ -15,6 +16,7 @@ mod summary;
 mod votable;
 mod whole_file;
 
+pub use combined::{CombinedField, CombinedFigures};
 pub use deconvolution::DeconvolutionFigures;
 pub use measured::{Measured, SourceRow};
 pub use page::{PageError, PagePicture, render_page, write_page};

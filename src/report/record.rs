@@ -47,6 +47,9 @@ pub struct RunRecord {
     /// What deconvolution did; `None` when there was none.
     #[serde(default)]
     pub deconvolution: Option<super::DeconvolutionFigures>,
+    /// What combining fields amounted to; `None` when none were combined.
+    #[serde(default)]
+    pub combined: Option<super::CombinedFigures>,
     /// What measuring amounted to; `None` when no sources were measured.
     #[serde(default)]
     pub measured: Option<Measured>,

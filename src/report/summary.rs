@@ -1,5 +1,6 @@
 //! The closing summary: what a person reads in ten seconds, and the same as one JSON object.
 
+use super::combined::fields_line;
 use super::deconvolution::deconvolution_line;
 use super::measured::measured_line;
 use super::record::{Accuracy, BeamFigures, RunRecord, WeightingFigures};
@@ -16,6 +17,10 @@ pub fn summary_text(record: &RunRecord, folder: &str) -> String {
     push(&mut text, &made(record));
     if let Some(accuracy) = &record.accuracy {
         push(&mut text, &format!("accuracy   {}", accuracy_line(accuracy)));
+    }
+    if let Some(combined) = &record.combined {
+        push(&mut text, &format!("fields     {}", fields_line(combined)));
+        push(&mut text, &format!("error      {}", combined.kept()));
     }
     if let Some(noise) = &record.noise {
         push(&mut text, &format!("noise      {} at its lowest, thermal only", flux(noise.lowest_jy_per_beam)));
@@ -143,7 +148,7 @@ fn what(record: &RunRecord) -> String {
 
 fn look_first(record: &RunRecord) -> Option<&str> {
     let named = |name: &str| record.products.iter().map(|p| p.path.as_str()).find(|p| *p == name);
-    ["report.html", "dirty.png", "dirty.fits"]
+    ["report.html", "dirty.png", "dirty.fits", "sky.png"]
         .into_iter()
         .find_map(named)
         .or(record.products.first().map(|p| p.path.as_str()))

@@ -211,7 +211,8 @@ fn mosaic_beam(common: &CommonBeam, geometry: &ImageGeometry) -> FittedBeam {
     // x runs West
     let axes = Matrix2::new(-geometry.pixel, 0.0, 0.0, geometry.pixel);
     let [major, minor, position_angle] = widths(&(axes * common.covariance * axes.transpose()));
-    FittedBeam { major, minor, position_angle, largest_misfit: 0.0, pixels: 0 }
+    // nothing was fitted
+    FittedBeam { major, minor, position_angle, largest_misfit: f64::NAN, pixels: 0 }
 }
 
 fn frequencies(fields: &[FieldOutcome]) -> (f64, [f64; 2]) {
