@@ -126,7 +126,7 @@ fn noise(combined: &Combined) -> Option<Noise> {
 /// What the figures cannot tell.
 fn limits(combined: &Combined) -> Vec<String> {
     let mut limits = vec![
-        "the errors of peak and flux density are those of a source of the beam's shape at nine places of each field, \
+        "the errors of peak and flux density are those of a source of the beam's shape at 25 places of each field, \
          without noise; what is wrong in a field (beam, side lobes, calibration) stays wrong"
             .to_owned(),
         "weights are the stated ones: fields are taken to be independent of each other, and noise that interpolation \

@@ -6,6 +6,9 @@
 //!
 //! `cargo test --test python_references -- --nocapture` shows the figures.
 
+#[path = "../combine_support/mod.rs"]
+mod combine_support;
+mod combined;
 mod environment;
 #[path = "../image_support/mod.rs"]
 mod image_support;

@@ -14,7 +14,8 @@
 
 use nalgebra::{Matrix2, SymmetricEigen, Vector2};
 
-/// Beams whose widths differ by less than this, relative, are taken for one (common practice, no source).
+/// Beams whose squared widths differ by less than this, relative, are taken for one (common practice, no source). What that
+/// costs is in the measured errors.
 pub const ALIKE: f64 = 1e-3;
 /// Rounding allowed where one ellipse holds another.
 const ROUNDING: f64 = 1e-9;
@@ -36,7 +37,6 @@ pub struct CommonBeam {
 pub fn common_beam(beams: &[Matrix2<f64>]) -> Option<CommonBeam> {
     let mean = beams.iter().sum::<Matrix2<f64>>() / beams.len() as f64;
     let first = beams.first()?;
-    // squared widths differ by twice as much as widths
     let same = |beam: &&Matrix2<f64>| {
         let [low, high] = ratios(&mean, beam);
         low >= 1.0 - ALIKE && high <= 1.0 + ALIKE

@@ -7,7 +7,7 @@
 //!
 //! A beam is a Gaussian, constant on the pixels of its field; its position angle belongs to the reference point of the
 //! header. The beam of the mosaic is constant on its pixels. Where projections stretch the sky differently across a field the
-//! two cannot agree everywhere; the measured errors include that, at nine places of each field.
+//! two cannot agree everywhere; the measured errors include that, at 25 places of each field.
 
 mod common_beam;
 mod convolve;
@@ -24,7 +24,7 @@ pub use error::CombineError;
 pub use field::{Field, FieldFacts, MOST_FIELD_PIXELS, read_field};
 pub use grid::{MOST_MOSAIC_PIXELS, default_grid};
 pub use interpolate::{Interpolation, TAPS, linear};
-pub use transfer::Transfer;
+pub use transfer::{PLACES, Transfer};
 
 use crate::imaging::beam_fit::FittedBeam;
 use crate::response::window::WindowError;
@@ -39,8 +39,6 @@ use reproject::Reprojection;
 const SAME_FREQUENCY: f64 = 1e-6;
 /// Pixels across a beam below which interpolation loses more than a thousandth of a peak.
 const FEWEST_ACROSS: f64 = 3.0;
-/// A squared width of a kernel below this fraction of the beam's is rounding.
-const NO_KERNEL: f64 = 1e-9;
 
 /// What became of a field.
 #[derive(Debug, Clone)]
@@ -193,12 +191,12 @@ fn kernel_of(facts: &FieldFacts, common: &CommonBeam, geometry: &ImageGeometry) 
         return None;
     }
     let back = grid::steps(&facts.wcs, geometry, grid::middle(facts))?.try_inverse()?;
-    let lacking = back * common.covariance * back.transpose() - facts.beam_px;
-    let eigen = nalgebra::SymmetricEigen::new((lacking + lacking.transpose()) / 2.0);
-    let least = NO_KERNEL * facts.beam_px.trace();
-    if eigen.eigenvalues.max() <= least {
+    let wanted = back * common.covariance * back.transpose();
+    if common_beam::ratios(&facts.beam_px, &wanted)[1] <= 1.0 + ALIKE {
         return None;
     }
+    let lacking = wanted - facts.beam_px;
+    let eigen = nalgebra::SymmetricEigen::new((lacking + lacking.transpose()) / 2.0);
     let positive = Matrix2::from_diagonal(&eigen.eigenvalues.map(|v| v.max(0.0)));
     Some(eigen.eigenvectors * positive * eigen.eigenvectors.transpose())
 }

@@ -12,8 +12,10 @@ use nalgebra::{Matrix2, SymmetricEigen, Vector2};
 use ndarray::Array2;
 use std::f64::consts::PI;
 
-/// Places in a field: the middle, and eight towards its sides and corners, each at another place within its pixel.
-const PLACES: usize = 9;
+/// Rows and columns of places in a field, from side to side, each at another place within its pixel.
+const ACROSS: usize = 5;
+/// Places in a field.
+pub const PLACES: usize = ACROSS * ACROSS;
 /// Reach of a drawn Gaussian, in full widths at half maximum of the wider beam: exp(−4 ln2 · 2.6²) = 7e-9 is left.
 const REACH: f64 = 2.6;
 /// How far towards the sides, as a fraction of half the field.
@@ -22,7 +24,7 @@ const OUTWARDS: f64 = 0.8;
 /// The largest errors found; NaN when nothing could be measured.
 #[derive(Debug, Clone, Copy, PartialEq)]
 pub struct Transfer {
-    /// Relative error of the height at the pixel nearest to the source.
+    /// Difference at any pixel above half the peak, as a fraction of the peak.
     pub peak: f64,
     /// Relative error of the integrated flux density, with the beam of the mosaic.
     pub flux: f64,
@@ -45,7 +47,8 @@ pub(super) fn measure(
     let [x, y] = middle(facts);
     let [x0, x1, y0, y1] = facts.extent.map(|v| v as f64);
     for place in 0..PLACES {
-        let (across, up) = (place as f64 % 3.0 - 1.0, (place / 3) as f64 - 1.0);
+        let outwards = |step: usize| 2.0 * step as f64 / (ACROSS - 1) as f64 - 1.0;
+        let (across, up) = (outwards(place % ACROSS), outwards(place / ACROSS));
         // golden-ratio steps: no two places have one phase on the pixels
         let phase = |step: f64| (place as f64 * step).fract();
         let at = [
@@ -96,20 +99,19 @@ fn one(
 
     let reach = (REACH * largest_width(target)).ceil();
     let inverse = target.try_inverse()?;
-    let (mut sum, mut anywhere, mut peak, mut nearest) = (0.0f64, 0.0f64, f64::NAN, f64::INFINITY);
+    let (mut sum, mut anywhere, mut peak) = (0.0f64, 0.0f64, 0.0f64);
     let steps = 2 * reach as usize + 1;
     for j in 0..steps {
         for i in 0..steps {
             let (x, y) = (cx.round() - reach + i as f64, cy.round() - reach + j as f64);
             let (l, m) = geometry.lm(x, y);
-            let offset = Vector2::new(x - cx, y - cy);
-            let want = gaussian(&inverse, offset);
+            let want = gaussian(&inverse, Vector2::new(x - cx, y - cy));
             // beyond the stamp the Gaussian is nothing
             let got = seen.at(l, m).map_or(0.0, |(value, _)| value);
             sum += got;
             anywhere = anywhere.max((got - want).abs());
-            if offset.norm() < nearest {
-                (nearest, peak) = (offset.norm(), (got / want - 1.0).abs());
+            if want >= 0.5 {
+                peak = peak.max((got - want).abs());
             }
         }
     }
