@@ -3,7 +3,7 @@
 use super::image::{Unreadable, check_writable, hand_over, now_utc, product, stem, told};
 use super::image_files::{FilesError, Sheet, Written, write_sheet};
 use super::{CliError, Common};
-use crate::imaging::combine::{COVERED, Combined, combine};
+use crate::imaging::combine::{Combined, UNCOVERED, combine};
 use crate::report::{
     BeamFigures, CombinedFigures, ImageFigures, InputFile, Noise, ProductHeader, RunRecord, StageTime,
     summary_json, summary_text, write_json,
@@ -137,8 +137,8 @@ fn limits(combined: &Combined) -> Vec<String> {
     if combined.fields.iter().any(|field| field.kernel.is_some()) {
         limits.push(format!(
             "the noise of convolved fields is propagated as if it were correlated like their beam and even across the \
-             kernel; blank pixels count as empty sky where they hold less than {:.1} % of the kernel",
-            100.0 * (1.0 - COVERED)
+             kernel; blank pixels count as empty sky where they hold less than {:.1} % of the kernel, and spread as far as the kernel reaches elsewhere",
+            100.0 * UNCOVERED
         ));
     }
     if combined.fields.iter().any(|field| field.facts.fk5) {

@@ -19,7 +19,7 @@ mod reproject;
 mod transfer;
 
 pub use common_beam::{ALIKE, CommonBeam, common_beam};
-pub use convolve::{COVERED, convolve, variance_factor};
+pub use convolve::{FLAT, TAPER, UNCOVERED, convolve, variance_factor};
 pub use error::CombineError;
 pub use field::{Field, FieldFacts, MOST_FIELD_PIXELS, read_field};
 pub use grid::{MOST_MOSAIC_PIXELS, default_grid};

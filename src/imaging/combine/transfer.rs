@@ -2,7 +2,7 @@
 //! pixels, taken through the same convolution, world coordinates and interpolation, and compared with the Gaussian of the
 //! mosaic's beam at the same place on the sky.
 
-use super::convolve::convolve;
+use super::convolve::{convolve, reach};
 use super::field::{FWHM2, FieldFacts};
 use super::grid::{middle, steps};
 use super::interpolate::Interpolation;
@@ -122,7 +122,7 @@ fn one(
 /// As [`convolve`], on a stamp with room around it, so that its edge is not taken for blank pixels.
 fn widened(stamp: &Array2<f64>, beam: &Matrix2<f64>, kernel: &Matrix2<f64>) -> Array2<f64> {
     let side = stamp.nrows();
-    let room = (1.5 * largest_width(kernel)).ceil() as usize + 2;
+    let room = reach(kernel[(0, 0)].max(kernel[(1, 1)])).ceil() as usize + 2;
     let mut wide = Array2::zeros((side + 2 * room, side + 2 * room));
     wide.slice_mut(ndarray::s![room..room + side, room..room + side]).assign(stamp);
     convolve(&wide, beam, kernel).slice(ndarray::s![room..room + side, room..room + side]).to_owned()
