@@ -243,6 +243,25 @@ fn no_beam_no_frequency() {
 }
 
 #[test]
+fn a_beam_that_cannot_be() {
+    let case = Case::sound();
+    for beam in [[48.0 * 3600.0, 36.0 * 3600.0, 25.0], [0.013, 0.01, 0.0]] {
+        let sheet = Sheet { beam, ..second() };
+        sheet.write(&case.path("b.fits"), &sheet.empty());
+        case.refused(1, &["b.fits: BMAJ and BMIN make a beam of", "(both are in degrees)"]);
+    }
+}
+
+#[test]
+fn fields_of_which_nothing_is_left() {
+    let case = Case::sound();
+    let small = Sheet { size: [11, 30], reference: [5.3, 9.7], rotation_deg: 12.0, ..first() };
+    small.write(&case.path("a.fits"), &small.empty());
+    case.fields("[[field]]\nimage = 'a.fits'\nnoise_jy = 1\n");
+    case.refused(1, &["nothing is left of the fields", "6 pixels along every edge"]);
+}
+
+#[test]
 fn no_overlap_with_the_pixels_wanted() {
     let case = Case::sound();
     let image = "[image]\ncentre_deg = [10.0, 41.8]\nsize_px = [50, 60]\npixel_arcsec = 10.0\n";

@@ -68,7 +68,7 @@ impl Zenithal {
                 let (first, half) = (1.0 + xi * xi + eta * eta, 1.0 + xi * x + eta * y);
                 let root = half * half - first * square;
                 let u = square / (half + root.max(0.0).sqrt());
-                (root >= 0.0 && half > 0.0 && u <= 1.0).then(|| [x - xi * u, y - eta * u, 1.0 - u])
+                (root >= 0.0 && half > 0.0 && u <= 1.0).then_some([x - xi * u, y - eta * u, 1.0 - u])
             }
             Zenithal::Tan => {
                 let n = 1.0 / (1.0 + square).sqrt();

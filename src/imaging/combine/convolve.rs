@@ -205,7 +205,8 @@ mod tests {
     fn blanks_grow_as_stated() {
         let beam = Matrix2::identity() * 4.0;
         for (kernel, grown) in [
-            (Matrix2::identity() * 6.0, 1.3 * (6.0 * 8.0 * 2f64.ln()).sqrt()),
+            // a corner has two edges
+            (Matrix2::identity() * 6.0, 1.4 * (6.0 * 8.0 * 2f64.ln()).sqrt()),
             (Matrix2::new(2.0, 1.0, 1.0, 0.5), reach(2.0)), // a line, aslant
             (Matrix2::identity() * 0.05, reach(0.05)),
         ] {

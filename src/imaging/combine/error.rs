@@ -79,6 +79,33 @@ pub enum CombineError {
         /// Places of the fields in words.
         fields: String,
     },
+    /// All that reaches the grid is lost at edges and around blanks.
+    #[error(
+        "nothing is left of the fields on the pixels of the mosaic: interpolation takes 6 pixels along every edge and around \
+         every blank pixel, a convolution what its kernel reaches; give larger images, without holes{}",
+        if *.convolved { ", or of more similar beams" } else { "" }
+    )]
+    NothingLeft {
+        /// Whether any field was convolved.
+        convolved: bool,
+    },
+    /// A beam that the pixels of its image cannot hold.
+    #[error(
+        "{}: BMAJ and BMIN make a beam of {major_px:.4} × {minor_px:.4} pixels, the image has {width} × {height}; expected at \
+         least one pixel and less than the image (both are in degrees)", path.display()
+    )]
+    Beam {
+        /// The image.
+        path: PathBuf,
+        /// Longest full width at half maximum, pixels.
+        major_px: f64,
+        /// Shortest, pixels.
+        minor_px: f64,
+        /// Columns.
+        width: usize,
+        /// Rows.
+        height: usize,
+    },
     /// The mosaic would be too large.
     #[error(
         "the mosaic would have {width} × {height} pixels of {pixel_arcsec:.4} arcsec; at most {most} in all are made (its \

@@ -2,6 +2,7 @@
 
 use super::CombineError;
 use super::error::at;
+use super::transfer::{largest_width, smallest_width};
 use crate::fits::{CelestialAxes, FitsFile, Hdu, HduKind, Header, celestial_axes};
 use crate::run::{Depth, FieldEntry};
 use crate::sky::CelestialWcs;
@@ -78,6 +79,12 @@ pub fn read_field(entry: &FieldEntry) -> Result<Field, CombineError> {
         return Err(CombineError::Unit { path: path.clone(), found: unit, expected });
     }
     let beam = beam_of(header).map_err(at(path))?;
+    let beam_px = in_pixels(beam, &axes.wcs);
+    let (major_px, minor_px) = (largest_width(&beam_px), smallest_width(&beam_px));
+    // degrees and arcseconds are easily mistaken
+    if !(minor_px >= 1.0 && major_px < width.max(height) as f64) {
+        return Err(CombineError::Beam { path: path.clone(), major_px, minor_px, width, height });
+    }
     let frequency_hz = axes.frequency_hz.ok_or_else(|| {
         at(path)(
             header.complain("RESTFRQ", "the frequency in Hz, here or as an axis FREQ; write it into the header"),
@@ -103,7 +110,7 @@ pub fn read_field(entry: &FieldEntry) -> Result<Field, CombineError> {
         size: [width, height],
         extent: usable.extent,
         beam,
-        beam_px: in_pixels(beam, &axes.wcs),
+        beam_px,
         frequency_hz,
         start_mjd_utc,
         usable: usable.count,
@@ -216,7 +223,8 @@ fn read_map(
             if let Some(there) = axes.wcs.direction_of(x, y) {
                 let [gx, gy] = own.wcs.pixel_of(there).unwrap_or([f64::NAN; 2]);
                 let off = (gx - x).hypot(gy - y);
-                if !(off <= OFF) {
+                let near = off <= OFF; // a NaN is not
+                if !near {
                     let found = format!("its pixel ({x}, {y}), counted from 0, lies {off:.2} pixels off");
                     return Err(other(found, "on the sky".to_owned()));
                 }

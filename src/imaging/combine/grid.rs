@@ -52,7 +52,7 @@ pub fn default_grid(fields: &[FieldFacts]) -> Result<ImageGeometry, CombineError
     let pixel = fields.iter().map(side).fold(f64::INFINITY, f64::min);
     let points: Vec<Direction> = fields.iter().flat_map(edge).flatten().collect();
     if points.is_empty() {
-        return Err(CombineError::NoField);
+        return Err(GeometryError::BeyondHemisphere { corner: 1.0 }.into());
     }
     let sum: Vector3<f64> = points.iter().map(|p| p.unit_vector()).sum();
     let mut centre = Direction::from_vector(&sum);
@@ -108,7 +108,7 @@ fn spans(centre: Direction, points: &[Direction]) -> Option<[[f64; 2]; 2]> {
     let mut spans = [[f64::INFINITY, f64::NEG_INFINITY]; 2];
     for &point in points {
         let [l, m, n] = frame.lmn(point);
-        if !(n > 0.0) {
+        if n.is_nan() || n <= 0.0 {
             return None;
         }
         for (span, value) in spans.iter_mut().zip([l, m]) {

@@ -91,6 +91,9 @@ pub fn combine(
     wanted: Option<ImageGeometry>,
     watch: Watch,
 ) -> Result<Combined, CombineError> {
+    if entries.is_empty() {
+        return Err(CombineError::NoField);
+    }
     let mut facts = Vec::new();
     for (number, entry) in entries.iter().enumerate() {
         watch(number, "looked at");
@@ -100,8 +103,11 @@ pub fn combine(
         Some(geometry) => grid::sized(geometry)?,
         None => default_grid(&facts)?,
     };
-    let windows: Vec<Option<[usize; 4]>> = facts.iter().map(|facts| grid::window(facts, &geometry)).collect();
     let beams: Vec<Option<Matrix2<f64>>> = facts.iter().map(|f| beam_on(f, &geometry)).collect();
+    // without a beam there, on the mosaic's hemisphere, a field cannot be taken in
+    let window =
+        |(facts, beam): (&FieldFacts, &Option<Matrix2<f64>>)| beam.and_then(|_| grid::window(facts, &geometry));
+    let windows: Vec<Option<[usize; 4]>> = facts.iter().zip(&beams).map(window).collect();
     // a field off the mosaic has no say in its beam
     let taking_part: Vec<Matrix2<f64>> =
         windows.iter().zip(&beams).filter(|(window, _)| window.is_some()).filter_map(|(_, beam)| *beam).collect();
@@ -147,8 +153,7 @@ pub fn combine(
         fields.push(outcome);
     }
     if fields.iter().all(|field| field.pixels == 0) {
-        let facts: Vec<FieldFacts> = fields.into_iter().map(|field| field.facts).collect();
-        return Err(no_overlap(&geometry, &facts));
+        return Err(CombineError::NothingLeft { convolved: fields.iter().any(|field| field.kernel.is_some()) });
     }
     sky.zip_mut_with(&weight, |sum, &weight| *sum = if weight > 0.0 { *sum / weight } else { f64::NAN });
     let (frequency_hz, frequencies_hz) = frequencies(&fields);
@@ -248,7 +253,10 @@ fn warnings(combined: &Combined, common: &CommonBeam) -> Vec<String> {
     for field in &combined.fields {
         warnings.extend(field.facts.notes.iter().cloned());
         if field.pixels == 0 {
-            warnings.push(format!("{}: adds nothing, no pixel of the mosaic lies within it", name(field)));
+            warnings.push(format!(
+                "{}: adds nothing, no pixel of the mosaic lies within it (or farther than its edges take from it)",
+                name(field)
+            ));
         } else if field.pixels_across < FEWEST_ACROSS {
             warnings.push(format!(
                 "{}: the beam is sampled by {:.2} pixels across its narrower axis, fewer than 3; peaks between pixels are \
@@ -260,7 +268,8 @@ fn warnings(combined: &Combined, common: &CommonBeam) -> Vec<String> {
         }
         if field.pixels > 0 && field.transfer.places == 0 {
             warnings.push(format!(
-                "{}: none of the places at which the error is measured lies on the mosaic; its error is not known",
+                "{}: the error of peaks and flux densities was not measured: no place for it lies on the mosaic, or the beam is \
+                 wider than 780 pixels",
                 name(field)
             ));
         }

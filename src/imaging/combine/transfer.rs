@@ -18,6 +18,8 @@ const ACROSS: usize = 5;
 pub const PLACES: usize = ACROSS * ACROSS;
 /// Reach of a drawn Gaussian, in full widths at half maximum of the wider beam: exp(−4 ln2 · 2.6²) = 7e-9 is left.
 const REACH: f64 = 2.6;
+/// Largest reach of a drawn Gaussian, pixels: beams of more than some 780 pixels are not measured.
+const FARTHEST: f64 = 2048.0;
 /// How far towards the sides, as a fraction of half the field.
 const OUTWARDS: f64 = 0.8;
 
@@ -88,6 +90,10 @@ fn one(
     // the mosaic's beam on the pixels of the field: what the image must hold
     let widest = back * target * back.transpose();
     let half = (REACH * largest_width(&widest)).ceil() + 8.0;
+    let reach = (REACH * largest_width(target)).ceil();
+    if !(half <= FARTHEST && reach <= FARTHEST) {
+        return None;
+    }
     let corner = [at[0].floor() - half, at[1].floor() - half];
     let side = 2 * half as usize + 2;
     let inverse = facts.beam_px.try_inverse()?;
@@ -97,7 +103,6 @@ fn one(
     let stamp = kernel.map_or_else(|| stamp.clone(), |kernel| widened(&stamp, &facts.beam_px, kernel));
     let seen = Reprojection::new(&stamp, None, facts.wcs.moved(corner[0], corner[1]), geometry, interpolation);
 
-    let reach = (REACH * largest_width(target)).ceil();
     let inverse = target.try_inverse()?;
     let (mut sum, mut anywhere, mut peak) = (0.0f64, 0.0f64, 0.0f64);
     let steps = 2 * reach as usize + 1;
