@@ -17,7 +17,7 @@ use std::time::Instant;
 /// Arguments of `combine`.
 #[derive(Debug, Args)]
 pub struct Arguments {
-    /// The fields file (TOML): entries [[field]] with image and weight, noise or noise_jy
+    /// The fields file (TOML): images and their weights or noise
     #[arg(value_name = "FIELDS.toml")]
     pub fields: PathBuf,
 }

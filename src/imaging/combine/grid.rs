@@ -171,6 +171,16 @@ pub(super) fn window(facts: &FieldFacts, geometry: &ImageGeometry) -> Option<[us
     (found[0] < found[2] && found[1] < found[3]).then_some(found)
 }
 
+/// Whether any pixel of `geometry` lies within the extent of a field.
+pub(super) fn touches(facts: &FieldFacts, geometry: &ImageGeometry) -> bool {
+    let [x0, x1, y0, y1] = facts.extent.map(|v| v as f64);
+    let within = |x: usize, y: usize| {
+        let place = geometry.direction_of(x as f64, y as f64).and_then(|direction| facts.wcs.pixel_of(direction));
+        place.is_some_and(|[x, y]| x > x0 - 0.5 && x < x1 + 0.5 && y > y0 - 0.5 && y < y1 + 0.5)
+    };
+    window(facts, geometry).is_some_and(|[x0, y0, x1, y1]| (y0..y1).any(|y| (x0..x1).any(|x| within(x, y))))
+}
+
 /// Steps in pixels of `geometry` (columns: for a step along either axis of the field) at a pixel of the field.
 pub(super) fn steps(wcs: &CelestialWcs, geometry: &ImageGeometry, at: [f64; 2]) -> Option<Matrix2<f64>> {
     let place = |x: f64, y: f64| wcs.direction_of(x, y).and_then(|direction| geometry.pixel_of(direction));

@@ -153,6 +153,10 @@ pub fn combine(
         fields.push(outcome);
     }
     if fields.iter().all(|field| field.pixels == 0) {
+        let facts: Vec<FieldFacts> = fields.iter().map(|field| field.facts.clone()).collect();
+        if !facts.iter().any(|facts| grid::touches(facts, &geometry)) {
+            return Err(no_overlap(&geometry, &facts));
+        }
         return Err(CombineError::NothingLeft { convolved: fields.iter().any(|field| field.kernel.is_some()) });
     }
     sky.zip_mut_with(&weight, |sum, &weight| *sum = if weight > 0.0 { *sum / weight } else { f64::NAN });
