@@ -120,3 +120,50 @@ fn combined_products_open_in_astropy_without_a_warning() {
     });
     compare("products.py", &json!({ "cases": [case] }));
 }
+
+/// Three fields of different beams and pixels, from their files to the mosaic, with nothing of this program in between.
+#[test]
+fn sources_of_combined_fields_are_where_astropy_puts_them() {
+    let folder = Folder::new();
+    let plain = Sheet { size: [180, 170], reference: [90.0, 86.0], centre_deg: [0.05, 62.0], ..Sheet::default() };
+    let sheets = [
+        Sheet { beam: [50.0, 36.0, 10.0], ..plain.clone() },
+        Sheet { beam: [46.0, 40.0, -60.0], projection: "TAN", rotation_deg: 30.0, ..plain.clone() },
+        Sheet {
+            beam: [42.0, 42.0, 0.0],
+            projection: "ZEA",
+            centre_deg: [359.95, 62.02],
+            step_arcsec: [-9.0, 9.5],
+            ..plain
+        },
+    ];
+    let wcs = sheets[0].wcs();
+    let sources: Vec<_> = [[60.3, 64.8, 0.4], [118.7, 60.1, 1.3], [92.2, 117.9, 0.02]]
+        .map(|[x, y, jy]| (wcs.direction_of(x, y).unwrap(), jy))
+        .into();
+    let mut text = "title = \"Invented\"\n".to_owned();
+    for (number, sheet) in sheets.iter().enumerate() {
+        sheet.write(&folder.path(&format!("{number}.fits")), &sheet.sources(&sources));
+        text += &format!("[[field]]\nimage = '{number}.fits'\nnoise_jy = 0.00{}\n", number + 1);
+    }
+    folder.run_file(&text);
+    let run =
+        evensky().arg("combine").arg(folder.path("run.toml")).arg("--out").arg(folder.out()).output().unwrap();
+    assert!(run.status.success(), "{}", String::from_utf8_lossy(&run.stderr));
+    let record: Json = serde_json::from_slice(&std::fs::read(folder.out().join("run.json")).unwrap()).unwrap();
+    let weight: f64 = (0..3)
+        .map(|i| {
+            let factor = record["combined"]["fields"][i]["noise_factor"].as_f64().unwrap();
+            assert!(factor >= 1.0 && factor < 1.2, "{factor}");
+            (1e-3 * (i + 1) as f64 * factor).powi(-2)
+        })
+        .sum();
+    let degrees: Vec<[f64; 3]> = sources.iter().map(|(d, jy)| [d.to_deg().0, d.to_deg().1, *jy]).collect();
+    compare(
+        "combined.py",
+        &json!({
+            "file": folder.out().join("sky.fits"), "weight_file": folder.out().join("weight.fits"), "sources": degrees,
+            "weights": degrees.iter().map(|[ra, dec, _]| [*ra, *dec, weight]).collect::<Vec<_>>(),
+        }),
+    );
+}
