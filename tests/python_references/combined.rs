@@ -154,7 +154,7 @@ fn sources_of_combined_fields_are_where_astropy_puts_them() {
     let weight: f64 = (0..3)
         .map(|i| {
             let factor = record["combined"]["fields"][i]["noise_factor"].as_f64().unwrap();
-            assert!(factor >= 1.0 && factor < 1.2, "{factor}");
+            assert!((1.0..1.2).contains(&factor), "{factor}");
             (1e-3 * (i + 1) as f64 * factor).powi(-2)
         })
         .sum();

@@ -263,8 +263,8 @@ fn warnings(combined: &Combined, common: &CommonBeam) -> Vec<String> {
             ));
         } else if field.pixels_across < FEWEST_ACROSS {
             warnings.push(format!(
-                "{}: the beam is sampled by {:.2} pixels across its narrower axis, fewer than 3; peaks between pixels are \
-                 lost to {:.1e} of themselves",
+                "{}: the beam is sampled by {:.2} pixels across its narrower axis, fewer than 3; a peak is kept to {:.1e} on the \
+                 pixels of this mosaic",
                 name(field),
                 field.pixels_across,
                 field.transfer.peak
