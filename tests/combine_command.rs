@@ -307,3 +307,23 @@ fn output_that_cannot_be_made() {
     let (_, err) = case.run(&["--quiet"], 1);
     assert!(err.contains("the output folder cannot be made"), "{err}");
 }
+
+/// The folder of a field's own sky.fits and weight.fits, as `evensky image` makes it: nothing there is replaced.
+#[test]
+fn products_never_replace_inputs() {
+    let case = Case::sound();
+    std::fs::create_dir(case.out()).unwrap();
+    for (from, to) in [("a.fits", "sky.fits"), ("aw.fits", "weight.fits")] {
+        std::fs::copy(case.path(from), case.out().join(to)).unwrap();
+    }
+    let before = std::fs::read(case.out().join("weight.fits")).unwrap();
+    for named in
+        ["image = \"out/sky.fits\"\nweight = \"aw.fits\"", "image = \"a.fits\"\nweight = \"out/weight.fits\""]
+    {
+        case.fields(&FIELDS.replace("image = \"a.fits\"\nweight = \"aw.fits\"", named));
+        let (_, err) = case.run(&["--quiet"], 1);
+        assert!(err.contains("is an input") && err.contains("--out"), "{err}");
+    }
+    assert_eq!(std::fs::read(case.out().join("weight.fits")).unwrap(), before);
+    assert!(!case.out().join("run.json").exists());
+}

@@ -32,6 +32,7 @@ pub fn run(arguments: &Arguments, common: &Common) -> Result<String, CliError> {
     let file = FieldsFile::read(&arguments.fields)?;
     let folder = common.out_folder(&arguments.fields)?;
     check_writable(&folder)?;
+    spare_inputs(&file, &folder)?;
     let mut record = RunRecord {
         title: file.title.clone().unwrap_or_else(|| stem(&arguments.fields)),
         command: "combine".to_owned(),
@@ -68,6 +69,32 @@ pub fn run(arguments: &Arguments, common: &Common) -> Result<String, CliError> {
     let place = folder.display().to_string();
     let said = summary_json(&record, &place);
     common.conclusion(&said, || summary_text(&record, &place) + "\n")
+}
+
+/// What is written.
+const PRODUCTS: [&str; 5] = ["sky.fits", "sky.png", "weight.fits", "weight.png", "run.json"];
+
+/// A product that would take the place of an input.
+#[derive(Debug, thiserror::Error)]
+#[error(
+    "{} is an input, and a product of that name would take its place; choose another folder with --out",
+    path.display()
+)]
+struct OverInput {
+    path: PathBuf,
+}
+
+/// Refuses a folder where products would be written over the fields file or what it names.
+fn spare_inputs(file: &FieldsFile, folder: &Path) -> Result<(), CliError> {
+    let inputs = file.fields.iter().flat_map(|field| field.files()).map(|(_, at)| at.value.clone());
+    for path in std::iter::once(file.path.clone()).chain(inputs) {
+        let Ok(input) = path.canonicalize() else { continue };
+        let taken = |name: &&str| folder.join(name).canonicalize().is_ok_and(|there| there == input);
+        if PRODUCTS.iter().any(|name| taken(&name)) {
+            return Err(told(OverInput { path }));
+        }
+    }
+    Ok(())
 }
 
 fn timed(record: &mut RunRecord, stage: &str, started: Instant) {
