@@ -89,8 +89,8 @@ fn spare_inputs(file: &FieldsFile, folder: &Path) -> Result<(), CliError> {
     let inputs = file.fields.iter().flat_map(|field| field.files()).map(|(_, at)| at.value.clone());
     for path in std::iter::once(file.path.clone()).chain(inputs) {
         let Ok(input) = path.canonicalize() else { continue };
-        let taken = |name: &&str| folder.join(name).canonicalize().is_ok_and(|there| there == input);
-        if PRODUCTS.iter().any(|name| taken(&name)) {
+        let taken = |name: &str| folder.join(name).canonicalize().is_ok_and(|there| there == input);
+        if PRODUCTS.iter().any(|name| taken(name)) {
             return Err(told(OverInput { path }));
         }
     }
