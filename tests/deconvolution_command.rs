@@ -2,9 +2,10 @@
 
 mod image_support;
 
-use evensky::sky::{Direction, ImageGeometry, read_components};
+use evensky::sky::{Component, Direction, ImageGeometry, read_components};
 use image_support::{Folder, Invented, PRODUCTS, names_in, read_image, run_text, source, write_pointings};
 use ndarray::Array2;
+use std::f64::consts::{LN_2, PI};
 use std::path::Path;
 use std::sync::OnceLock;
 
@@ -179,10 +180,11 @@ const FELL: &str = concat!(env!("CARGO_MANIFEST_DIR"), "/tests/data/hollin-fell"
 
 /// The clean files of Hollin Fell: two dish classes, pointing offsets of two per cent of the width, three pointings, 24
 /// sources between pixels with spectra of their own. Outside source: tests/data/hollin-fell/README.md. With compact
-/// sources fitted, the residual stays below 1e-4 of the brightest source on every pixel that is not blank, and every
-/// source's flux density at the frequency of the image is its true one to 1 % and 1e-4 of the brightest. (Measured: those
-/// above 0.1 Jy within 5e-4, the worst is S21, 0.9 % low, a third of the noise there; which part of that is its spectrum, on
-/// pixels that have none, was not taken apart.)
+/// sources fitted, the residual stays below 1e-4 of the brightest source on every pixel that is not blank, and the model seen
+/// with the restoring beam is the true sky so seen at each of the 24 places, three within one beam among them, to four times
+/// as much and 1e-3 of itself: what little is left in the residual may be more of the sky, where beams are weak or sources
+/// blend. (Measured: 2.2e-4 of the brightest at most.) The plain sum of the components about a source is another matter: it
+/// hangs on spacings shorter than any baseline, and came out up to 1.4 % low for a source of pixels alone.
 #[test]
 fn hollin_fell_without_noise_leaves_less_than_a_ten_thousandth() {
     let folder = Folder::new();
@@ -207,36 +209,26 @@ fn hollin_fell_without_noise_leaves_less_than_a_ten_thousandth() {
     assert!(most < 1e-4 * brightest, "{most:e} Jy left of {brightest}");
     let components = read_components(&folder.out().join("components.csv")).unwrap();
     assert_eq!(truth.len(), 24);
-    // sources nearer than a beam to each other are one (S01, S04 and S15); a source's flux is that of the components
-    // nearest to it, within a beam and a half
-    let beam = (250.0 / 3600f64).to_radians();
-    let mut group: Vec<usize> = (0..truth.len()).collect();
-    for n in 0..truth.len() {
-        for m in 0..n {
-            if truth[n].direction.separation(truth[m].direction) < beam {
-                let (from, to) = (group[n], group[m]);
-                group.iter_mut().filter(|g| **g == from).for_each(|g| *g = to);
-            }
-        }
+    // both skies seen with the restoring beam, at the place of every source
+    let width = |key: &str| header.float(key).unwrap().unwrap().to_radians();
+    let (major, minor, (sin, cos)) = (width("BMAJ"), width("BMIN"), width("BPA").sin_cos());
+    let seen = |sky: &[Component], at: Direction| -> f64 {
+        let one = |c: &Component| {
+            let turn = (c.direction.ra - at.ra + 3.0 * PI).rem_euclid(2.0 * PI) - PI;
+            let (east, north) = (turn * at.dec.cos(), c.direction.dec - at.dec);
+            let (along, across) = (east * sin + north * cos, east * cos - north * sin);
+            c.flux_at(hz) * (-4.0 * LN_2 * ((along / major).powi(2) + (across / minor).powi(2))).exp()
+        };
+        sky.iter().map(one).sum()
+    };
+    let mut worst = 0.0f64;
+    for source in &truth {
+        let (want, got) = (seen(&truth, source.direction), seen(&components, source.direction));
+        println!("{} {want:.6} {got:.6}, {:.1e} of the brightest", source.name, (got - want) / brightest);
+        let off = (got - want).abs() / (1e-3 * want + 4e-4 * brightest);
+        worst = if off <= worst { worst } else { off };
     }
-    let mut found = vec![0.0; truth.len()];
-    for component in &components {
-        let away = |n: usize| component.direction.separation(truth[n].direction);
-        let nearest = (0..truth.len()).min_by(|a, b| away(*a).total_cmp(&away(*b))).unwrap();
-        if away(nearest) < 1.5 * beam {
-            found[group[nearest]] += component.flux_at(hz);
-        }
-    }
-    let (mut groups, mut worst) = (0, 0.0f64);
-    for n in (0..truth.len()).filter(|n| group[*n] == *n) {
-        let members = (0..truth.len()).filter(|m| group[*m] == n);
-        let want: f64 = members.map(|m| truth[m].flux_at(hz)).sum();
-        println!("{} {want:.6} {:.6}", truth[n].name, found[n]);
-        worst = worst.max((found[n] - want).abs() / (1e-2 * want + 1e-4 * brightest));
-        groups += 1;
-    }
-    assert!(groups >= 20 && found.iter().all(|flux| flux.is_finite()), "{groups}");
-    assert!(worst <= 1.0, "a flux density is off by {worst:.2} of its bound");
+    assert!(worst <= 1.0, "a source is off by {worst:.2} of its bound");
 }
 
 fn largest(image: &Array2<f64>) -> f64 {
